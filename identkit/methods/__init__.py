@@ -1,0 +1,1 @@
+"""Published algorithms on plain arrays; one file per method, no labels, no files."""

@@ -1,0 +1,1 @@
+"""One file per kind of source; all return the same responses dataset."""

@@ -1,0 +1,1 @@
+"""The stages of a study: labelled data in, labelled data out, no mathematics."""
