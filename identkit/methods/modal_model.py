@@ -1,8 +1,8 @@
-"""The modal model of a positioning actuator: sum of second-order terms behind a delay.
+r"""The modal model of a positioning actuator: sum of second-order terms behind a delay.
 
-.. math:: P(j\\omega) = e^{-j\\omega\\tau} \\Big[ b(\\omega)
-   + \\sum_k \\frac{r_k + j\\omega q_k}{\\omega_k^2 - \\omega^2 + 2 j \\zeta_k \\omega_k \\omega}
-   + d \\Big]
+.. math:: P(j\omega) = e^{-j\omega\tau} \Big[ b(\omega)
+   + \sum_k \frac{r_k + j\omega q_k}{\omega_k^2 - \omega^2 + 2 j \zeta_k \omega_k \omega}
+   + d \Big]
 
 Source: D. J. Ewins, *Modal Testing: Theory, Practice and Application*, 2nd ed., 2000 (receptance
 form); residue rates stand for generally damped modes.
