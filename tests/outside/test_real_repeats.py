@@ -1,0 +1,40 @@
+"""One reflection swept three times: what repeats alone scatter, and a set that holds them.
+
+Data: datasets/reflection_repeats (shipped in scikit-rf, BSD). The non-parametric spread
+|S_i - mean| / |mean| is a fact of the data and needs no model.
+"""
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+FOLDER = Path(__file__).parents[2] / "datasets" / "reflection_repeats"
+
+pytestmark = pytest.mark.outside
+
+
+def sweeps():
+    tables = [np.loadtxt(FOLDER / f"sweep_{n}.csv", delimiter=",", skiprows=1) for n in (1, 2, 3)]
+    return tables[0][:, 0] * 1e9, np.array([t[:, 1] + 1j * t[:, 2] for t in tables])
+
+
+def spread(responses):
+    mean = responses.mean(axis=0)
+    return np.abs(responses - mean) / np.abs(mean)
+
+
+def test_spread_is_what_the_page_states():
+    found = spread(sweeps()[1])
+    assert np.median(found) == pytest.approx(0.00250, abs=5e-6)
+    assert found.max() == pytest.approx(0.0438, abs=5e-5)
+
+
+def test_extract_is_the_file_that_scikit_rf_ships():
+    """Compare with the copy inside the installed library, line by line."""
+    skrf = pytest.importorskip("skrf")
+    frequency, responses = sweeps()
+    for number, response in enumerate(responses, start=1):
+        network = skrf.Network(str(Path(skrf.__file__).parent / "data" / f"ro,{number}.s1p"))
+        np.testing.assert_allclose(frequency, network.f, rtol=1e-12)
+        np.testing.assert_allclose(response, network.s[:, 0, 0], atol=1e-11)
