@@ -27,6 +27,12 @@ LEVELS = {
     "report": 6,
     "pipeline": 7,
     "cli": 8,
+    "atomic": 0,
+    "settings_messages": 1,
+    "progress": 1,
+    "demo": 3,
+    "show": 7,
+    "set_audit": 7,
     "__init__": 9,
 }
 HEAVY = {"cvxpy", "matplotlib", "numba", "statsmodels", "sippy_unipi", "control", "slycot"}
