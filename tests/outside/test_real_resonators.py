@@ -1,9 +1,9 @@
 """Measured stripline resonators: resonance and loaded Q against two independent methods.
 
-Data: datasets/stripline_resonators (scikit-rf 1.5.0 source distribution, BSD). The reference values are
-computed here, by scikit-rf's fit after A. P. Gregory, *Q-factor Measurement by using a Vector Network
-Analyser*, NPL report MAT 58 (2021), and by scipy's AAA (Nakatsukasa, Sete and Trefethen 2018). A
-loaded Q is 1 / (2 zeta).
+Data: datasets/stripline_resonators (scikit-rf 1.5.0 source distribution, BSD). The reference values
+are computed here, by scikit-rf's fit after A. P. Gregory, *Q-factor Measurement by using a Vector
+Network Analyser*, NPL report MAT 58 (2021), and by scipy's AAA (Nakatsukasa, Sete and Trefethen
+2018). A loaded Q is 1 / (2 zeta).
 """
 
 from pathlib import Path
