@@ -31,7 +31,7 @@ def scatter_over_variance(responses, variance):
 
 
 def stated_variance(responses, coherence):
-    """Bendat and Piersol, Random Data, ch. 9, with averages - 1 (the mean's own degree taken off)."""
+    """Bendat and Piersol, Random Data, ch. 9, with averages - 1."""
     return np.abs(responses) ** 2 * (1.0 - coherence) / (coherence * (AVERAGES - 1))
 
 
