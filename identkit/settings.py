@@ -110,7 +110,10 @@ class ResponseSettings(Table):
         description='a path pattern such as "bench/{unit}/H{head}_{temperature:g}C.csv"',
     )
     averages: float | None = Field(
-        default=None, ge=1, allow_inf_nan=False, description="the number of averages, 1 or more"
+        default=None,
+        gt=1,
+        allow_inf_nan=False,
+        description="the number of averages, above 1 (the coherence of one average says nothing)",
     )
     band: Band | None = Field(
         default=None, description="two increasing frequencies in Hz, [low, high]"

@@ -1,0 +1,323 @@
+"""Files found by a path pattern whose fields are labels: ``bench/{unit}/H{head}.csv``.
+
+A field never spans a ``/``; ``{temperature:g}`` asks for a number; ``{}`` stands for text that is
+no label. Fields are matched by the `parse` library, one folder of the path at a time.
+"""
+
+import fnmatch
+import math
+import re
+import string
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from datetime import datetime
+from functools import cached_property
+from pathlib import Path
+from typing import Any, TypeAlias
+
+import parse
+
+from identkit.errors import InputError, Problem
+
+Label: TypeAlias = str | float
+
+NUMBER_LABELS = ("temperature", "position")
+TEXT_LABELS = ("unit", "head", "lot", "measured_at", "repeat", "fixture", "output", "input")
+_TAKEN = ("response", "frequency", "source", "mode", "parameter", "frequency_response", "coherence")
+_SUFFIXES = (".csv", ".txt", ".tsv", ".dat", ".nc", ".h5", ".hdf5")
+
+
+@dataclass(frozen=True)
+class LabelledFile:
+    """A file and what its path says of it.
+
+    Attributes
+    ----------
+    path
+        Where it stands.
+    identity
+        The path below the pattern's fixed part, without suffix; unique within a campaign.
+    labels
+        Text or numbers by name.
+    """
+
+    path: Path
+    identity: str
+    labels: dict[str, Label] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class FoundFiles:
+    """What a pattern finds: the files, and those that nearly match but carry a wrong label."""
+
+    files: tuple[LabelledFile, ...]
+    strays: tuple[Problem, ...]
+
+
+@dataclass(frozen=True)
+class _Component:
+    """One folder or file name of a pattern."""
+
+    text: str
+
+    @cached_property
+    def pieces(self) -> list[tuple[str, str | None, str | None, str | None]]:
+        return list(string.Formatter().parse(self.text))
+
+    @cached_property
+    def is_fixed(self) -> bool:
+        return all(name is None for _, name, _, _ in self.pieces)
+
+    @cached_property
+    def fixed_name(self) -> str:
+        return "".join(literal for literal, _, _, _ in self.pieces)
+
+    @cached_property
+    def parser(self) -> Any:
+        return parse.compile(self.text, case_sensitive=True)
+
+    @cached_property
+    def outline(self) -> re.Pattern[str]:
+        """The component with every field standing for any text."""
+        parts = [
+            re.escape(literal) + ("" if name is None else ".+")
+            for literal, name, _, _ in self.pieces
+        ]
+        return re.compile("".join(parts))
+
+    def match(self, name: str) -> dict[str, Any] | None:
+        if self.is_fixed:
+            return {} if name == self.fixed_name else None
+        found = self.parser.parse(name)
+        return None if found is None else dict(found.named)
+
+
+class PathPattern:
+    """A path pattern, checked.
+
+    Parameters
+    ----------
+    text
+        The pattern, with ``/`` between folders on every system.
+    place
+        What to call it in messages.
+
+    Raises
+    ------
+    InputError
+        If a field is malformed or its name is taken.
+    """
+
+    def __init__(self, text: str, place: str = "[responses] files") -> None:
+        self.text = text
+        self.place = place
+        names = [part for part in text.replace("\\", "/").split("/") if part not in ("", ".")]
+        self._absolute = text.startswith("/")
+        self._components = [_Component(name) for name in names]
+        self._check()
+
+    @property
+    def fields(self) -> tuple[str, ...]:
+        """Names of the labels the pattern carries."""
+        names = [name for part in self._components for _, name, _, _ in part.pieces if name]
+        return tuple(dict.fromkeys(names))
+
+    def find(self, folder: Path) -> FoundFiles:
+        """Return every file under `folder` that matches, in natural order.
+
+        Raises
+        ------
+        InputError
+            If nothing matches (with the nearest folder and a file in it), or if two files carry
+            the same labels.
+        """
+        start = Path("/") if self._absolute else folder
+        found: list[tuple[Path, list[str], dict[str, Any]]] = []
+        strays: list[Problem] = []
+        for path, names in self._candidates(start):
+            labels = self._match(names)
+            if labels is None:
+                strays.append(self._stray(path))
+            else:
+                found.append((path, names, labels))
+        files = self._labelled(found, strays)
+        if not files and not strays:
+            raise InputError(self._nothing_found(start))
+        _refuse_repeats(files)
+        return FoundFiles(tuple(files), tuple(strays))
+
+    def label(self, path: Path) -> dict[str, Label]:
+        """Return the labels of a file given by hand; none if its path does not fit the pattern."""
+        names = list(path.resolve().parts[-len(self._components) :])
+        labels = self._match(names) if len(names) == len(self._components) else None
+        return {} if labels is None else _checked_labels(labels, path)
+
+    def _check(self) -> None:
+        expected = 'fields such as {unit} or {temperature:g} in a path such as "bench/{unit}.csv"'
+        if not self._components:
+            raise InputError(Problem(self.place, f'"{self.text}"', expected))
+        try:
+            for component in self._components:
+                _ = component.pieces, component.parser
+        except (ValueError, NotImplementedError, parse.RepeatedNameError, re.error) as error:
+            raise InputError(Problem(self.place, f'"{self.text}" ({error})', expected)) from None
+        for name in self.fields:
+            if not name.isidentifier():
+                raise InputError(Problem(self.place, f"the field {{{name}}}", expected))
+            if name in _TAKEN:
+                found = f"the field {{{name}}}, a name the data itself uses"
+                raise InputError(Problem(self.place, found, "a label of another name"))
+        if "*" in self.text:
+            raise InputError(Problem(self.place, f'"{self.text}"', "{} in place of *"))
+
+    def _candidates(self, start: Path) -> Iterator[tuple[Path, list[str]]]:
+        """Walk the folders that fit; give every file whose name has the pattern's outline."""
+        level: list[tuple[Path, list[str]]] = [(start, [])]
+        for component in self._components[:-1]:
+            level = [step for folder, names in level for step in _folders(folder, names, component)]
+        for folder, names in level:
+            for entry in _entries(folder, self._components[-1]):
+                if not entry.is_dir():
+                    yield entry, [*names, entry.name]
+
+    def _match(self, names: list[str]) -> dict[str, Any] | None:
+        labels: dict[str, Any] = {}
+        for component, name in zip(self._components, names, strict=True):
+            found = component.match(name)
+            if found is None or any(labels.get(k, v) != v for k, v in found.items()):
+                return None
+            labels |= found
+        return labels
+
+    def _labelled(
+        self, found: list[tuple[Path, list[str], dict[str, Any]]], strays: list[Problem]
+    ) -> list[LabelledFile]:
+        fixed = next(
+            (k for k, part in enumerate(self._components) if not part.is_fixed),
+            len(self._components) - 1,
+        )
+        identities = _identities(["/".join(names[fixed:]) for _, names, _ in found], self.text)
+        files = []
+        for (path, _, labels), identity in zip(found, identities, strict=True):
+            try:
+                files.append(LabelledFile(path, identity, _checked_labels(labels, path)))
+            except InputError as error:
+                strays.extend(error.problems)
+        return sorted(files, key=lambda file: natural_key(file.identity))
+
+    def _stray(self, path: Path) -> Problem:
+        expected = f'a name that fits the pattern "{self.text}"'
+        return Problem(str(path), "a name with a label of the wrong kind", expected)
+
+    def _nothing_found(self, start: Path) -> Problem:
+        folder = start
+        for component in self._components[:-1]:
+            if not component.is_fixed or not (folder / component.fixed_name).is_dir():
+                break
+            folder = folder / component.fixed_name
+        example = next(_some_files(folder), None)
+        what = "an empty folder" if example is None else f"for example {example}"
+        if not folder.is_dir():
+            what = "no such folder"
+        found = f'no file that matches "{self.text}"; nearest existing folder {folder}: {what}'
+        return Problem(self.place, found, "a pattern that matches at least one file")
+
+
+def natural_key(text: str) -> list[tuple[int, int, str]]:
+    """Return a key that sorts U2 before U10."""
+    pieces = re.findall(r"\d+|\D+", text)
+    return [(0, int(p), p) if p.isdigit() else (1, 0, p) for p in pieces]
+
+
+def _folders(
+    folder: Path, names: list[str], component: _Component
+) -> Iterator[tuple[Path, list[str]]]:
+    if component.is_fixed:
+        inner = folder / component.fixed_name
+        if inner.is_dir():
+            yield inner, [*names, component.text]
+        return
+    for entry in _entries(folder, component):
+        if entry.is_dir() and component.match(entry.name) is not None:
+            yield entry, [*names, entry.name]
+
+
+def _entries(folder: Path, component: _Component) -> list[Path]:
+    """List what in a folder has the outline of a component; hidden files only when asked for."""
+    if not folder.is_dir():
+        return []
+    hidden = component.text.startswith(".")
+    return sorted(
+        entry
+        for entry in folder.iterdir()
+        if component.outline.fullmatch(entry.name) and (hidden or not entry.name.startswith("."))
+    )
+
+
+def _some_files(folder: Path) -> Iterator[Path]:
+    """Give files below a folder, the likely ones only."""
+    for path in folder.rglob("*") if folder.is_dir() else ():
+        if any(fnmatch.fnmatch(path.name, f"*{suffix}") for suffix in _SUFFIXES):
+            yield path
+
+
+def _identities(paths: list[str], pattern: str) -> list[str]:
+    """Drop the suffix of every path, unless that makes two of them the same."""
+    short = [_without_suffix(path, pattern) for path in paths]
+    return short if len(set(short)) == len(short) else paths
+
+
+def _without_suffix(path: str, pattern: str) -> str:
+    suffix = Path(path).suffix
+    known = suffix.lower() in _SUFFIXES or (suffix and pattern.endswith(suffix))
+    return path.removesuffix(suffix) if known else path
+
+
+def _checked_labels(found: dict[str, Any], path: Path) -> dict[str, Label]:
+    return {name: _checked_label(name, value, path) for name, value in found.items()}
+
+
+def _checked_label(name: str, value: Any, path: Path) -> Label:
+    if name in NUMBER_LABELS:
+        return _number(name, value, path)
+    if name == "measured_at":
+        return _date(value, path)
+    if name not in TEXT_LABELS and isinstance(value, int | float):
+        return _number(name, value, path)
+    return str(value)
+
+
+def _number(name: str, value: Any, path: Path) -> float:
+    try:
+        number = float(value)
+    except (TypeError, ValueError):
+        number = math.nan
+    if not math.isfinite(number):
+        raise InputError(Problem(str(path), f"{name} {value!r} in the path", "a number"))
+    return number
+
+
+def _date(value: Any, path: Path) -> str:
+    try:
+        date = value if isinstance(value, datetime) else datetime.fromisoformat(str(value))
+    except ValueError:
+        expected = "an ISO date such as 2026-01-31"
+        problem = Problem(str(path), f"measured_at {value!r} in the path", expected)
+        raise InputError(problem) from None
+    text = date.isoformat()
+    return text.removesuffix("T00:00:00")
+
+
+def _refuse_repeats(files: list[LabelledFile]) -> None:
+    seen: dict[tuple[tuple[str, Label], ...], LabelledFile] = {}
+    problems = []
+    for file in files:
+        labels = tuple(file.labels.items())
+        first = seen.setdefault(labels, file)
+        if first is not file:
+            shown = ", ".join(f"{name} {value}" for name, value in labels) or "none"
+            found = f"the same labels ({shown}) as {first.path}"
+            expected = "one file for each set of labels; mark re-measurements by {repeat}"
+            problems.append(Problem(str(file.path), found, expected))
+    if problems:
+        raise InputError(problems)
