@@ -1,0 +1,254 @@
+"""Required radius, the weight over it, the floor under it, and who sets it where."""
+
+from collections import Counter
+from dataclasses import dataclass
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.figure import Figure
+from matplotlib.ticker import MaxNLocator
+
+from identkit.figures.labels import short_names
+from identkit.figures.set_plants import labelled
+from identkit.figures.style import (
+    BANDS,
+    FLOOR,
+    INK,
+    NOMINAL,
+    RULE,
+    SOFT_INK,
+    WEIGHT,
+    WIDE,
+    Layout,
+    group_style,
+    in_house_style,
+    log_frequency_axis,
+    new_figure,
+    ratio_axis,
+)
+from identkit.methods.arrays import BoolArray, FloatArray, IntArray
+from identkit.plant_set.fields import PlantSetFields
+from identkit.plant_set.response import nominal_response
+
+ROWS = 6
+"""How many responses that set the radius get a row of their own."""
+
+
+@dataclass(frozen=True)
+class RadiusWeight:
+    """Curves of the bound along frequency.
+
+    Attributes
+    ----------
+    frequency
+        (points,) Hz.
+    radius
+        (points,) smallest radius that holds every plant used.
+    weight
+        (points,) magnitude of the weight.
+    floor
+        (points,) no nominal needs less at this frequency; NaN where not computed.
+    allowed
+        (points,) weight the profile allows at the excess reached; NaN where there is none.
+    nominal
+        (points,) nominal magnitude, dB; NaN where not known.
+    setter
+        (points,) index into `setters` of who sets the radius; -1 where the radius floor does.
+    setters
+        Readable names, by share of the band they set, largest first.
+    band
+        Hz, in which everything is claimed.
+    mode_names, mode_frequency
+        Population modes, to read frequencies by.
+    """
+
+    frequency: FloatArray
+    radius: FloatArray
+    weight: FloatArray
+    floor: FloatArray
+    allowed: FloatArray
+    nominal: FloatArray
+    setter: IntArray
+    setters: tuple[str, ...]
+    band: tuple[float, float]
+    mode_names: tuple[str, ...]
+    mode_frequency: FloatArray
+
+
+def pick_radius(
+    contents: PlantSetFields,
+    *,
+    mode_names: tuple[str, ...] = (),
+    mode_frequency: FloatArray | None = None,
+    floor_frequency: FloatArray | None = None,
+    floor: FloatArray | None = None,
+) -> RadiusWeight:
+    """Pick the radii of a set, and who sets them, largest share of the band first.
+
+    Parameters
+    ----------
+    contents
+        The set file's contents.
+    mode_names, mode_frequency
+        Population modes and their frequencies in Hz.
+    floor_frequency, floor
+        (points,) Hz and the radius that no nominal can beat there, where it was computed.
+    """
+    radii = contents.radii
+    frequency = radii.frequency
+    names = readable_names(contents)
+    setters = _by_share(radii.set_by)
+    place = {name: at for at, name in enumerate(setters)}
+    nominal = nominal_response(contents, frequency)[0, 0]
+    blank = np.full(frequency.shape, np.nan)
+    known = floor is not None and floor_frequency is not None and np.isfinite(floor).any()
+    excess = 10.0 ** (contents.certificate.optimality.excess_db / 20.0)
+    return RadiusWeight(
+        frequency=frequency,
+        radius=radii.required_radius,
+        weight=radii.weight_magnitude,
+        floor=_interpolated(frequency, floor_frequency, floor) if known else blank,
+        allowed=excess * radii.allowed_excess * radii.required_radius,
+        nominal=20.0 * np.log10(np.abs(nominal)),
+        setter=np.array([place.get(name, -1) for name in radii.set_by], dtype=int),
+        setters=tuple(names.get(name, name) for name in setters),
+        band=contents.band,
+        mode_names=mode_names,
+        mode_frequency=np.zeros(0) if mode_frequency is None else mode_frequency,
+    )
+
+
+def readable_names(contents: PlantSetFields) -> dict[str, str]:
+    """Return the readable name of every plant of a set by its response id."""
+    if not contents.plants:
+        return {}
+    data = labelled(contents.plants)
+    return dict(zip(data["response"].values.tolist(), short_names(data).tolist(), strict=True))
+
+
+def _by_share(set_by: tuple[str, ...]) -> list[str]:
+    counts = Counter(name for name in set_by if name)
+    return [name for name, _ in sorted(counts.items(), key=lambda item: (-item[1], item[0]))]
+
+
+def _interpolated(
+    frequency: FloatArray, known: FloatArray | None, values: FloatArray | None
+) -> FloatArray:
+    if known is None or values is None:
+        return np.full(frequency.shape, np.nan)
+    positive = values > 0.0
+    if positive.sum() < 2:
+        return np.full(frequency.shape, np.nan)
+    logs = np.interp(np.log(frequency), np.log(known[positive]), np.log(values[positive]))
+    return np.asarray(np.exp(logs), dtype=float)
+
+
+@in_house_style
+def draw_radius(picked: RadiusWeight, layout: Layout = WIDE) -> Figure:
+    """Draw the nominal, the radius filled under the weight, and rows of who sets the radius."""
+    rows = min(len(picked.setters), ROWS) + (len(picked.setters) > ROWS)
+    height = (5.6 if layout.is_narrow else 5.2) + 0.19 * rows
+    figure = new_figure(layout, height)
+    nominal, radius, who = figure.subplots(
+        3, 1, height_ratios=(1.5, 4.0, 0.35 + 0.25 * max(rows, 1)), sharex=True
+    )
+    _nominal(nominal, picked)
+    _radius(radius, picked, layout)
+    _who(who, picked, layout)
+    low, high = picked.band
+    for axes in (nominal, radius):
+        log_frequency_axis(axes, low, high, layout, label=False)
+    log_frequency_axis(who, low, high, layout)
+    return figure
+
+
+def _nominal(axes: Axes, picked: RadiusWeight) -> None:
+    axes.plot(picked.frequency, picked.nominal, color=NOMINAL, lw=1.2)
+    axes.set_ylabel("nominal, dB")
+    axes.yaxis.set_major_locator(MaxNLocator(4))
+    mark_modes(axes, picked.mode_names, picked.mode_frequency)
+
+
+def mark_modes(axes: Axes, names: tuple[str, ...], frequency: FloatArray) -> None:
+    """Write the names of the modes along the upper edge, thin rules below them."""
+    for name, at in zip(names, frequency, strict=True):
+        axes.axvline(at, color=RULE, lw=0.8, zorder=0)
+        axes.annotate(
+            name,
+            (at, 1.0),
+            xycoords=("data", "axes fraction"),
+            xytext=(0, 2),
+            textcoords="offset points",
+            ha="center",
+            va="bottom",
+            color=SOFT_INK,
+            size="x-small",
+        )
+
+
+def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
+    f = picked.frequency
+    bottom = _bottom(picked)
+    axes.fill_between(f, bottom, picked.radius, color=BANDS[1], lw=0, label="required radius")
+    axes.fill_between(
+        f,
+        picked.radius,
+        picked.weight,
+        where=(picked.weight >= picked.radius).tolist(),
+        color=WEIGHT,
+        alpha=0.10,
+        lw=0,
+    )
+    if np.isfinite(picked.floor).any():
+        axes.plot(f, picked.floor, color=FLOOR, lw=1.0, label="floor for any nominal")
+    axes.plot(f, picked.weight, color=WEIGHT, lw=1.6, label="weight")
+    over = picked.radius > picked.weight * (1.0 + 1e-6)
+    if over.any():
+        axes.plot(f[over], picked.radius[over], ".", color=INK, ms=3, label="not held")
+    axes.axhline(1.0, color=SOFT_INK, lw=0.7)
+    axes.set_ylabel("relative error, 1 = 100 %")
+    curves = np.concatenate([picked.radius, picked.weight])
+    ratio_axis(axes, bottom, 1.6 * float(np.nanmax(curves)))
+    axes.legend(loc="upper left", ncols=1)
+
+
+def _bottom(picked: RadiusWeight) -> float:
+    curves = np.concatenate([picked.radius, picked.weight])
+    known = curves[np.isfinite(curves) & (curves > 0.0)]
+    return 0.6 * float(known.min()) if known.size else 0.01
+
+
+def _who(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
+    shown = picked.setters[:ROWS]
+    names = list(shown)
+    for row in range(len(shown)):
+        _segments(axes, picked, picked.setter == row, row, group_style(row)[0])
+    if len(picked.setters) > ROWS:
+        _segments(axes, picked, picked.setter >= ROWS, ROWS, SOFT_INK)
+        names.append(f"{len(picked.setters) - ROWS} others")
+    axes.set_yticks(range(len(names)), names)
+    axes.tick_params(axis="y", labelsize="small", length=0)
+    axes.set_ylim(max(len(names), 1) - 0.4, -0.6)
+    axes.grid(axis="y", visible=False)
+    axes.spines["left"].set_visible(False)
+    axes.set_title("who sets the radius")
+
+
+def _segments(axes: Axes, picked: RadiusWeight, chosen: BoolArray, row: int, colour: str) -> None:
+    """Draw one bar per run of neighbouring frequencies that the row's response sets."""
+    edges = log_edges(picked.frequency)
+    padded = np.concatenate([[False], np.asarray(chosen, dtype=bool), [False]])
+    starts = np.flatnonzero(padded[1:] & ~padded[:-1])
+    ends = np.flatnonzero(~padded[1:] & padded[:-1])
+    spans = [(edges[a], edges[b] - edges[a]) for a, b in zip(starts, ends, strict=True)]
+    axes.broken_barh(spans, (row - 0.32, 0.64), color=colour, lw=0)
+
+
+def log_edges(frequency: FloatArray) -> FloatArray:
+    """Return the (points + 1) edges half-way, in log frequency, between neighbouring points."""
+    logs = np.log(frequency)
+    if logs.size == 1:
+        return np.asarray(np.exp([logs[0] - 0.01, logs[0] + 0.01]), dtype=float)
+    middle = 0.5 * (logs[1:] + logs[:-1])
+    first, last = 2 * logs[0] - middle[0], 2 * logs[-1] - middle[-1]
+    return np.asarray(np.exp(np.concatenate([[first], middle, [last]])), dtype=float)
