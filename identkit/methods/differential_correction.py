@@ -1,0 +1,398 @@
+"""Best ratio of two polynomials between a lower and an upper bound, with a proof of optimality.
+
+Minimise t such that lower <= N/D <= min(t upper, ceiling) at every point. For fixed t that is
+linear in the coefficients, and the largest margin z of its rows, scaled by the previous N and D,
+gives the next pair: the differential correction method. Points enter the linear programs only
+where they are violated.
+
+Sources: I. Barrodale, M. J. D. Powell, F. D. K. Roberts, "The differential correction algorithm
+for rational l-infinity approximation", SIAM J. Numer. Anal. 9(3), 493-504, 1972; J.-P. Crouzeix,
+J. A. Ferland, S. Schaible, "An algorithm for generalized fractional programs", J. Optim. Theory
+Appl. 47(1), 35-49, 1985 (the same with one-sided rows).
+"""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from identkit.methods.arnoldi_basis import ArnoldiBasis, arnoldi_basis
+from identkit.methods.arrays import BoolArray, FloatArray, IntArray
+from identkit.methods.infeasibility_certificate import proves_infeasible
+
+MAX_PROGRAMS = 150
+CEILING_SLACK = 1e-9
+
+
+@dataclass(frozen=True)
+class RatioBounds:
+    """What the ratio N/D has to keep, point by point.
+
+    Attributes
+    ----------
+    x
+        (points,) abscissae in [-1, 1].
+    lower
+        (points,) N/D is at least this; 0 asks for nothing.
+    upper
+        (points,) N/D is at most t times this; inf asks for nothing.
+    ceiling
+        (points,) N/D is at most this, whatever t; inf asks for nothing.
+    measure
+        (points,) weights of the inner product; 0 at points that only constrain.
+    """
+
+    x: FloatArray
+    lower: FloatArray
+    upper: FloatArray
+    ceiling: FloatArray
+    measure: FloatArray
+
+    def limit(self, level: float) -> FloatArray:
+        """Return the upper bound at this level t."""
+        return np.minimum(level * self.upper, self.ceiling)
+
+    @property
+    def least_level(self) -> float:
+        """Level below which the bounds cross at some point."""
+        return float((self.lower / self.upper).max())
+
+    def normalised(self, ratio: FloatArray) -> tuple[float, float]:
+        """Return the factor that makes `ratio` touch the lower bound, and the level it reaches.
+
+        The level is inf where the ceiling is broken.
+        """
+        factor = float((self.lower / ratio).max())
+        if np.any(factor * ratio > self.ceiling * (1.0 + CEILING_SLACK)):
+            return factor, np.inf
+        return factor, factor * float((ratio / self.upper).max())
+
+
+@dataclass(frozen=True)
+class HardRows:
+    """Linear conditions P(at) >= share * P(beside) on numerator and denominator alike or apart.
+
+    Attributes
+    ----------
+    at, beside
+        (rows,) abscissae.
+    share
+        (rows,) share of the neighbour's value that is asked for; 0 is plain positivity.
+    on_numerator
+        (rows,) true where P is the numerator, false where it is the denominator.
+    """
+
+    at: FloatArray = field(default_factory=lambda: np.zeros(0))
+    beside: FloatArray = field(default_factory=lambda: np.zeros(0))
+    share: FloatArray = field(default_factory=lambda: np.zeros(0))
+    on_numerator: BoolArray = field(default_factory=lambda: np.zeros(0, dtype=bool))
+
+    def joined(self, other: "HardRows") -> "HardRows":
+        """Return these rows followed by the other ones."""
+        return HardRows(
+            np.concatenate([self.at, other.at]),
+            np.concatenate([self.beside, other.beside]),
+            np.concatenate([self.share, other.share]),
+            np.concatenate([self.on_numerator, other.on_numerator]),
+        )
+
+
+@dataclass(frozen=True)
+class Ratio:
+    """A pair N, D: values at the points, and coefficients in the bases they were found in.
+
+    Attributes
+    ----------
+    numerator, denominator
+        (points,) positive values; together scaled so that N/D touches the lower bound.
+    level
+        max of N / (D upper) over the points.
+    bases, coefficients
+        Of N and of D.
+    """
+
+    numerator: FloatArray
+    denominator: FloatArray
+    level: float
+    bases: tuple[ArnoldiBasis, ArnoldiBasis]
+    coefficients: tuple[FloatArray, FloatArray]
+
+
+@dataclass(frozen=True)
+class Search:
+    """Outcome of a search.
+
+    Attributes
+    ----------
+    best
+        The pair of lowest level found; None if none was found that keeps bounds and hard rows.
+    floor
+        Proven lower bound on the level of any pair without hard rows (0 where nothing is proven).
+    settled
+        False if the search stopped without reaching its tolerance.
+    deciding
+        Index of the point with the largest multiplier among the upper rows of the proof, or -1.
+    programs
+        Number of linear programs solved.
+    """
+
+    best: Ratio | None
+    floor: float
+    settled: bool
+    deciding: int
+    programs: int
+
+
+@dataclass(frozen=True)
+class _Scaled:
+    """Bases made with the previous pair as weights."""
+
+    bases: tuple[ArnoldiBasis, ArnoldiBasis]
+    values: tuple[FloatArray, FloatArray]
+    numerator: FloatArray
+    denominator: FloatArray
+
+
+@dataclass(frozen=True)
+class _Solution:
+    coefficients: tuple[FloatArray, FloatArray]
+    margin: float
+    proven: bool
+    deciding: int
+
+
+def constant_ratio(bounds: RatioBounds) -> Ratio:
+    """Return the best constant ratio: the largest lower bound."""
+    ones = np.ones(bounds.x.size)
+    factor, level = bounds.normalised(ones)
+    basis = ArnoldiBasis(np.zeros((1, 0)), 1.0)
+    return Ratio(factor * ones, ones, level, (basis, basis), (factor * np.ones(1), np.ones(1)))
+
+
+def lower_ratio(
+    bounds: RatioBounds,
+    order: int,
+    start: tuple[FloatArray, FloatArray],
+    *,
+    tolerance: float,
+    initial: Ratio | None = None,
+    stop_level: float = 0.0,
+    hard: HardRows | None = None,
+) -> Search:
+    """Lower the level of a ratio of polynomials by differential correction until it is proven best.
+
+    Parameters
+    ----------
+    bounds
+        What the ratio keeps.
+    order
+        Degree of numerator and denominator, at least 1.
+    start
+        Positive values at the points of the N and D that weight the first step; they need not
+        keep the bounds.
+    tolerance
+        Relative gap between level and proven floor at which the search ends.
+    initial
+        A pair known to keep bounds and hard rows, to be improved on.
+    stop_level
+        End as soon as a pair at or below this level is found.
+    hard
+        Further conditions; the floor then refers to the problem with them.
+
+    Returns
+    -------
+    Search
+        Best pair, floor and how it ended.
+
+    """
+    descent = _Descent(bounds, order, start, initial, hard or HardRows())
+    return descent.run(tolerance, stop_level)
+
+
+class _Descent:
+    """The loop of `lower_ratio`: working set, weights, best pair."""
+
+    def __init__(
+        self,
+        bounds: RatioBounds,
+        order: int,
+        start: tuple[FloatArray, FloatArray],
+        initial: Ratio | None,
+        hard: HardRows,
+    ) -> None:
+        self.bounds, self.order, self.hard, self.best = bounds, order, hard, initial
+        self.lower_rows = self.upper_rows = _first_rows(bounds, order)
+        self.target = _level_without_ceiling(bounds, start[0] / start[1])
+        self.scaled = _scale(bounds, order, *start)
+        self.floor, self.deciding = bounds.least_level, -1
+
+    def run(self, tolerance: float, stop_level: float) -> Search:
+        stalled = 0
+        for count in range(MAX_PROGRAMS):
+            if self.best and self.best.level <= max(stop_level, self.floor * (1.0 + tolerance)):
+                return Search(self.best, self.floor, True, self.deciding, count)
+            if self.floor > stop_level > 0.0 or stalled > 3:
+                break
+            stalled = 0 if self._step(tolerance) else stalled + 1
+        return Search(self.best, self.floor, False, self.deciding, count)
+
+    def _step(self, tolerance: float) -> bool:
+        """Solve one program and take what it brings; false if it brought nothing."""
+        level = self.best.level if self.best else self.target
+        probe = max(level / (1.0 + 0.8 * tolerance), self.bounds.least_level)
+        solution = self._solve(probe)
+        if solution is None:
+            return False
+        raised = solution.proven and probe > self.floor
+        if raised:
+            self.floor, self.deciding = probe, solution.deciding
+        accepted = self._accept(solution)
+        if solution.proven and self.best is None:
+            self.target *= 1.0 + 10.0 * tolerance
+        return self._add_violated(solution, probe) or accepted or raised
+
+    def _solve(self, level: float) -> _Solution | None:
+        numerator, denominator = self.scaled.values
+        ratio = self.scaled.numerator / self.scaled.denominator
+        i, j = self.lower_rows, self.upper_rows
+        low, high = _row_factors(ratio, self.bounds.lower, self.bounds.limit(level))
+        soft = np.vstack(
+            [
+                np.hstack([-numerator[i] * low[1][i, None], denominator[i] * low[0][i, None]]),
+                np.hstack([numerator[j] * high[1][j, None], -denominator[j] * high[0][j, None]]),
+            ]
+        )
+        hard = _hard_rows(self.hard, self.scaled.bases)
+        normal = np.concatenate([np.zeros(self.order + 1), self.bounds.measure @ denominator])
+        found = _largest_margin(soft, hard, normal)
+        if found is None:
+            return None
+        unknowns, margin, multipliers = found
+        largest = _largest_coefficients(self.bounds, ratio, level, self.order)
+        proven = margin > 0.0 and proves_infeasible(
+            np.vstack([soft, hard]), normal, multipliers, largest
+        )
+        deciding = int(j[np.argmax(multipliers[i.size : i.size + j.size])])
+        parts = (unknowns[: self.order + 1], unknowns[self.order + 1 :])
+        return _Solution(parts, margin, proven, deciding)
+
+    def _relative_values(self, solution: _Solution) -> tuple[FloatArray, FloatArray]:
+        numerator, denominator = self.scaled.values
+        return numerator @ solution.coefficients[0], denominator @ solution.coefficients[1]
+
+    def _accept(self, solution: _Solution) -> bool:
+        """Keep the pair if it is positive and better; it then weights the next program."""
+        n, d = self._relative_values(solution)
+        if n.min() <= 0.0 or d.min() <= 0.0:
+            return False
+        numerator, denominator = self.scaled.numerator * n, self.scaled.denominator * d
+        factor, level = self.bounds.normalised(numerator / denominator)
+        if not level < (self.best.level if self.best else np.inf):
+            return False
+        coefficients = (factor * solution.coefficients[0], solution.coefficients[1])
+        self.best = Ratio(factor * numerator, denominator, level, self.scaled.bases, coefficients)
+        self.scaled = _scale(self.bounds, self.order, factor * numerator, denominator)
+        return True
+
+    def _add_violated(self, solution: _Solution, level: float) -> bool:
+        n, d = self._relative_values(solution)
+        ratio = self.scaled.numerator / self.scaled.denominator
+        low, high = _row_factors(ratio, self.bounds.lower, self.bounds.limit(level))
+        before = self.lower_rows.size + self.upper_rows.size
+        limit = min(0.5 * solution.margin, 0.0) if solution.margin < 0.0 else solution.margin
+        self.lower_rows = np.union1d(self.lower_rows, _peaks(d * low[0] - n * low[1], limit))
+        self.upper_rows = np.union1d(self.upper_rows, _peaks(n * high[1] - d * high[0], limit))
+        return self.lower_rows.size + self.upper_rows.size > before
+
+
+def _level_without_ceiling(bounds: RatioBounds, ratio: FloatArray) -> float:
+    return float((bounds.lower / ratio).max() * (ratio / bounds.upper).max())
+
+
+def _first_rows(bounds: RatioBounds, order: int) -> IntArray:
+    """Points spread evenly under the measure, and all points that only constrain."""
+    share = np.cumsum(bounds.measure)
+    spread = np.searchsorted(share, np.linspace(0.0, share[-1], 6 * order + 8))
+    constraining = np.flatnonzero(bounds.measure == 0.0)
+    return np.union1d(np.minimum(spread, share.size - 1), constraining)
+
+
+def _scale(
+    bounds: RatioBounds, order: int, numerator: FloatArray, denominator: FloatArray
+) -> _Scaled:
+    bases, values = zip(
+        *(
+            arnoldi_basis(bounds.x, 1.0 / p, bounds.measure, order)
+            for p in (numerator, denominator)
+        ),
+        strict=True,
+    )
+    return _Scaled((bases[0], bases[1]), (values[0], values[1]), numerator, denominator)
+
+
+def _row_factors(
+    ratio: FloatArray, lower: FloatArray, limit: FloatArray
+) -> tuple[tuple[FloatArray, FloatArray], tuple[FloatArray, FloatArray]]:
+    """Factors of d and n in the rows lower d - ratio n and ratio n - limit d, scaled to order 1."""
+    low = (lower / (lower + ratio), ratio / (lower + ratio))
+    share = ratio / limit
+    high = (1.0 / (1.0 + share), share / (1.0 + share))
+    return low, high
+
+
+def _hard_rows(hard: HardRows, bases: tuple[ArnoldiBasis, ArnoldiBasis]) -> FloatArray:
+    blocks = []
+    for k, basis in enumerate(bases):
+        mine = hard.on_numerator == (k == 0)
+        at, beside = basis.evaluate(hard.at[mine]), basis.evaluate(hard.beside[mine])
+        block = hard.share[mine, None] * beside - at
+        block = block / np.linalg.norm(at, axis=1)[:, None]
+        other = np.zeros((block.shape[0], bases[1 - k].degree + 1))
+        blocks.append(np.hstack([block, other] if k == 0 else [other, block]))
+    return np.vstack(blocks)
+
+
+def _largest_margin(
+    soft: FloatArray, hard: FloatArray, normal: FloatArray
+) -> tuple[FloatArray, float, FloatArray] | None:
+    """Minimise z with soft @ c <= z, hard @ c <= 0, normal @ c = 1: unknowns, z, multipliers."""
+    from scipy.optimize import linprog
+
+    count = normal.size
+    column = np.concatenate([-np.ones(soft.shape[0]), np.zeros(hard.shape[0])])
+    matrix = np.hstack([np.vstack([soft, hard]), column[:, None]])
+    solved = linprog(
+        np.append(np.zeros(count), 1.0),
+        A_ub=matrix,
+        b_ub=np.zeros(matrix.shape[0]),
+        A_eq=np.append(normal, 0.0)[None],
+        b_eq=np.ones(1),
+        bounds=[(None, None)] * count + [(-1.0, None)],
+        method="highs-ds",
+        options={"primal_feasibility_tolerance": 1e-10, "dual_feasibility_tolerance": 1e-10},
+    )
+    if solved.status != 0:
+        return None
+    return solved.x[:count], float(solved.x[count]), -np.asarray(solved.ineqlin.marginals)
+
+
+def _largest_coefficients(
+    bounds: RatioBounds, ratio: FloatArray, level: float, order: int
+) -> FloatArray:
+    """Bound the coefficients of any pair that keeps the bounds and has mean denominator 1.
+
+    The values d >= 0 have mean 1 under the measure, so none exceeds 1 / min(measure) and the
+    coefficients in the orthonormal basis have a 2-norm of at most that to the power 1/2;
+    n <= limit / ratio * d bounds the numerator likewise where limits are finite.
+    """
+    data = bounds.measure > 0.0
+    denominator = float(bounds.measure[data].min()) ** -0.5
+    relative = (bounds.limit(level) / ratio)[data]
+    numerator = denominator * float(relative.max()) if np.isfinite(relative).all() else np.inf
+    return np.repeat([numerator, denominator], order + 1)
+
+
+def _peaks(values: FloatArray, limit: float) -> IntArray:
+    """Return the indices of local maxima above the limit."""
+    padded = np.concatenate([[-np.inf], values, [-np.inf]])
+    high = (values > limit) & (values >= padded[:-2]) & (values >= padded[2:])
+    return np.flatnonzero(high)
