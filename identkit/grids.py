@@ -5,13 +5,14 @@ child per grid, ``grid_1``, ``grid_2`` ...; no grid is ever padded with the poin
 """
 
 import warnings
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, TypeAlias
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from identkit.atomic import replacing
 from identkit.errors import InputError, Problem
@@ -48,6 +49,35 @@ def gather(parts: Sequence[xr.Dataset]) -> Gridded:
     tree = xr.DataTree.from_dict({f"{_PREFIX}{k}": part for k, part in enumerate(parts, start=1)})
     tree.attrs.update(parts[0].attrs)
     return tree
+
+
+def label_mask(part: xr.Dataset, labels: Mapping[str, str | float]) -> NDArray[np.bool_]:
+    """Return which responses of a dataset carry all the given labels.
+
+    Parameters
+    ----------
+    part
+        Any dataset with labels along `response`.
+    labels
+        Values by label; ``response`` is the name itself. Text is compared as text, numbers as
+        numbers.
+
+    Raises
+    ------
+    InputError
+        If the dataset has no such label.
+    """
+    mask = np.ones(part.sizes["response"], dtype=bool)
+    for name, value in labels.items():
+        if name not in part.coords or part[name].dims != ("response",):
+            known = [str(k) for k, v in part.coords.items() if v.dims == ("response",)]
+            expected = "one of " + ", ".join(sorted(known))
+            raise InputError(Problem("a label of responses", f'"{name}"', expected))
+        there = part[name].values
+        if there.dtype.kind == "f" and isinstance(value, str):
+            raise InputError(Problem(f"the label {name}", f'"{value}"', "a number"))
+        mask &= there == (value if there.dtype.kind == "f" else str(value))
+    return mask
 
 
 def save(data: Gridded, path: Path | str) -> None:

@@ -16,6 +16,7 @@ from pydantic import (
     Field,
     PrivateAttr,
     ValidationError,
+    model_validator,
 )
 
 from identkit.errors import InputError, Problem
@@ -192,6 +193,26 @@ class NominalSettings(Table):
     reference_temperature: Finite = Field(default=25.0, description="a temperature in degC")
 
 
+class Exclusion(Table):
+    """Responses left out of the bound: those that carry all of these labels, and why.
+
+    A name alone stands for the one response of that name.
+    """
+
+    labels: dict[str, str | float] = Field(min_length=1)
+    reason: str = ""
+
+    @model_validator(mode="before")
+    @classmethod
+    def _from_labels(cls, value: Any) -> Any:
+        if isinstance(value, str):
+            return {"labels": {"response": value}}
+        if isinstance(value, dict):
+            labels = {name: label for name, label in value.items() if name != "reason"}
+            return {"labels": labels, "reason": value.get("reason", "")}
+        return value
+
+
 class BoundSettings(Table):
     """[bound]: the form of the set, its weight, and what it is to hold."""
 
@@ -235,8 +256,10 @@ class BoundSettings(Table):
         default="auto", description='"auto" or a whole number, 1 or more'
     )
     split: str = Field(default="", description='a label such as "head", or "" for one set')
-    exclude: Texts = Field(
-        default=(), description="a list of labels to leave out of the bound, as text"
+    exclude: Annotated[tuple[Exclusion, ...], BeforeValidator(_as_tuple)] = Field(
+        default=(),
+        description='a list of response names or of labels with a reason, such as [{unit = "U13", '
+        'reason = "cracked arm"}]',
     )
 
 

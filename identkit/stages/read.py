@@ -1,9 +1,15 @@
 """Read the measured responses a study names."""
 
 from identkit.errors import InputError, Problem
-from identkit.grids import Gridded, datasets, gather
+from identkit.grids import Gridded
 from identkit.readers.campaign import CampaignFiles, Progress, find_files, read_campaign
 from identkit.settings import Settings
+
+READ_SETTINGS = tuple(
+    f"responses.{name}"
+    for name in ("files", "averages", "sample_period", "bad_files", "columns", "units")
+)
+"""What the stage depends on; the band is not among them, it only marks."""
 
 
 def find_measurements(settings: Settings) -> CampaignFiles:
@@ -39,17 +45,17 @@ def read(
     Returns
     -------
     Dataset or DataTree
-        As `identkit.readers.campaign.read_responses`. The band stands in the attribute ``band``
-        and cuts nothing: points outside it are marked by the screen stage.
+        As `identkit.readers.campaign.read_responses`. The band cuts nothing here: points outside
+        it are marked by the screen stage.
 
     Raises
     ------
     InputError
         With one problem per bad file.
     """
-    found = found or find_measurements(settings)
-    responses = read_campaign(found, settings.responses, folder=settings.folder, progress=progress)
-    if settings.responses.band is None:
-        return responses
-    band = list(settings.responses.band)
-    return gather([part.assign_attrs(band=band) for part in datasets(responses)])
+    return read_campaign(
+        found or find_measurements(settings),
+        settings.responses,
+        folder=settings.folder,
+        progress=progress,
+    )
