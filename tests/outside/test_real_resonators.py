@@ -12,6 +12,10 @@ import numpy as np
 import pytest
 from scipy.interpolate import AAA
 
+from identkit.methods.modal_fit import fit_modal_model
+from identkit.methods.modal_model import modal_response
+from identkit.outcomes import Outcome
+
 FOLDER = Path(__file__).parents[2] / "datasets" / "stripline_resonators"
 # scikit-rf 2.2.0 on these files: resonance in GHz, loaded Q
 PUBLISHED = {
@@ -68,3 +72,49 @@ def test_two_outside_methods_agree(name):
     pole = poles[np.argmin(np.abs(poles - 1j * resonance))]
     assert abs(pole) == pytest.approx(resonance, rel=5e-4)
     assert -abs(pole) / (2.0 * pole.real) == pytest.approx(loaded_q, rel=0.04)
+
+
+def fitted_resonance(frequency, response, near):
+    """Return resonance (Hz), loaded Q and the whole fit of the mode closest to `near`."""
+    fit = fit_modal_model(frequency, response, None, base="none", modes=1, residues="general")
+    found = fit.parameters
+    mode = np.argmin(np.abs(found.modal_frequency - near))
+    return found.modal_frequency[mode], 0.5 / found.damping_ratio[mode], fit
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_modal_fit_gives_resonance_and_loaded_q(name):
+    frequency, response = measured(name)
+    resonance, loaded_q = q_circle_fit(frequency, response)
+    ours, our_q, fit = fitted_resonance(frequency, response, resonance)
+    assert fit.outcome == Outcome.DONE
+    assert ours == pytest.approx(resonance, rel=1e-4)
+    assert our_q == pytest.approx(loaded_q, rel=0.04)
+    assert fit.variance_estimated
+    assert np.isnan(fit.noise_ratio)
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_closer_window_brings_the_methods_closer(name):
+    """MAT 58, page 21: repeat the fit over a span of twice resonance over loaded Q."""
+    frequency, response = measured(name)
+    resonance, loaded_q = q_circle_fit(frequency, response)
+    close = np.abs(frequency - resonance) <= resonance / loaded_q
+    frequency, response = frequency[close], response[close]
+    resonance, loaded_q = q_circle_fit(frequency, response)
+    ours, our_q, _ = fitted_resonance(frequency, response, resonance)
+    assert ours == pytest.approx(resonance, rel=3e-5)
+    assert our_q == pytest.approx(loaded_q, rel=0.02)
+
+
+@pytest.mark.parametrize("name", NAMES)
+def test_one_mode_leaves_less_than_a_rational_function_of_one_complex_pole(name):
+    """Six real parameters each: delay, constant, resonance, damping, residue and its rate."""
+    frequency, response = measured(name)
+    _, _, fit = fitted_resonance(frequency, response, frequency.mean())
+    ours = modal_response(frequency, fit.parameters) - response
+    scale = frequency.mean()
+    with pytest.warns(RuntimeWarning, match="failed to converge"):
+        theirs = AAA(1j * frequency / scale, response, max_terms=2, clean_up=False)
+    left = theirs(1j * frequency / scale) - response
+    assert np.linalg.norm(ours) < np.linalg.norm(left)
