@@ -15,10 +15,12 @@ class Outcome(IntEnum):
     NO_MODES = 5
     NOT_FINITE = 6
     NOT_FITTED = 7
+    MODE_LIMIT = 8
     MODE_MISSING = 10
     MODE_EXTRA = 11
     MODE_BELOW_SIGNIFICANCE = 12
     MODE_CROSSING = 13
+    MODE_SHIFTED = 14
 
 
 @dataclass(frozen=True)
@@ -67,6 +69,11 @@ ADVICE: dict[Outcome, Advice] = {
         "screening marked it and the settings leave such responses out",
         "see the reason in the screening table",
     ),
+    Outcome.MODE_LIMIT: Advice(
+        "the automatic number of modes reached its cap",
+        "the response does not follow the modal model, or its variance is stated far too small",
+        "compare the noise ratio with 1; set [model] modes to a number, or try general residues",
+    ),
     Outcome.MODE_MISSING: Advice(
         "a mode of the population was not found in this response",
         "its residue is lost in the noise, or the mode is really absent",
@@ -86,6 +93,11 @@ ADVICE: dict[Outcome, Advice] = {
         "two modes of this response stand in another order than in the population",
         "their frequencies move differently with temperature or between units",
         "none needed; check the pairing figure if the two look alike",
+    ),
+    Outcome.MODE_SHIFTED: Advice(
+        "the mode stands far from where the population has it",
+        "damage or another build of this unit; it is the only candidate left for the name",
+        "inspect the unit; the mode is kept out of the population's spread",
     ),
 }
 
