@@ -84,6 +84,76 @@ def modal_response(frequency: FloatArray, parameters: ModalParameters) -> Comple
     return np.asarray(total * np.exp(-1j * omega * parameters.delay), dtype=complex)
 
 
+def parameter_names(base: str, modes: int, *, general: bool) -> tuple[str, ...]:
+    """Return the names of the parameters of one plant in the order covariances use.
+
+    Delay and feedthrough come first whether they were fitted or held (then their covariance is
+    zero), then the base, then frequency, damping ratio, residue (and residue rate, where
+    `general`) of mode 1, 2, ...
+    """
+    names = ["delay", "feedthrough"]
+    if base == "free":
+        names += ["base_gain"]
+    if base == "pivot":
+        names += ["base_frequency", "base_damping_ratio", "base_residue"]
+    kinds = ["modal_frequency", "damping_ratio", "residue"] + ["residue_rate"] * general
+    return (*names, *(f"{kind}_{k + 1}" for k in range(modes) for kind in kinds))
+
+
+def modal_derivatives(
+    frequency: FloatArray, parameters: ModalParameters, *, general: bool
+) -> ComplexArray:
+    """Return the derivatives of the frequency response by every parameter.
+
+    Parameters
+    ----------
+    frequency
+        (points,) Hz.
+    parameters
+        The plant.
+    general
+        Whether residue rates count as parameters.
+
+    Returns
+    -------
+    ComplexArray
+        (points, parameters) in natural units, in the order of `parameter_names`.
+    """
+    omega = TWO_PI * np.asarray(frequency, dtype=float)
+    turn = np.exp(-1j * omega * parameters.delay)
+    columns = [-1j * omega * modal_response(frequency, parameters) / turn, np.ones_like(turn)]
+    if parameters.base == "free":
+        columns.append(-1.0 / omega**2 + 0j)
+    if parameters.base == "pivot":
+        columns += _section_derivatives(
+            omega,
+            parameters.base_frequency,
+            parameters.base_damping_ratio,
+            parameters.base_residue,
+            0.0,
+        )[:3]
+    for k in range(parameters.modal_frequency.size):
+        columns += _section_derivatives(
+            omega,
+            parameters.modal_frequency[k],
+            parameters.damping_ratio[k],
+            parameters.residue[k],
+            parameters.residue_rate[k],
+        )[: 4 if general else 3]
+    return np.asarray(np.column_stack(columns) * turn[:, None], dtype=complex)
+
+
+def _section_derivatives(
+    omega: FloatArray, hertz: float, damping: float, residue: float, rate: float
+) -> list[ComplexArray]:
+    """By frequency (Hz), damping ratio, residue, residue rate."""
+    natural, s = TWO_PI * hertz, 1j * omega
+    inverse = 1.0 / (natural**2 + 2.0 * damping * natural * s + s**2)
+    common = -(residue + s * rate) * inverse**2
+    by_frequency = common * (2.0 * natural + 2.0 * damping * s) * TWO_PI
+    return [by_frequency, common * 2.0 * natural * s, inverse, s * inverse]
+
+
 def second_order_sum(
     omega: FloatArray,
     natural: FloatArray,

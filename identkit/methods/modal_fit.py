@@ -1,0 +1,174 @@
+"""Automatic modal fit of one scalar response: starting poles, delay, order, refinement.
+
+1. Over-ordered relaxed pole relocation (`pole_relocation`), delay scan (`delay_scan`), relocation
+   again on the turned data, delay scan again.
+2. Forward selection of poles (`order_selection`), maximum-likelihood refinement
+   (`modal_least_squares`).
+3. Add by score test, drop by Wald test, each refitted and settled by the information criterion;
+   the variance is updated from the model once (`residual_variance`) and the order settled again.
+
+Where residuals stay above the stated variance (the data do not follow the model), every gain is
+measured in units of the residual variance of the over-ordered fit, and the number of modes is
+capped; reaching the cap is an outcome of its own.
+"""
+
+from dataclasses import replace
+
+import numpy as np
+from scipy.stats import chi2
+
+from identkit.errors import InputError, Problem
+from identkit.methods.arrays import ComplexArray, FloatArray
+from identkit.methods.modal_least_squares import (
+    ModalFit,
+    as_fit,
+    empty_fit,
+    refusal,
+    usable_points,
+)
+from identkit.methods.modal_model import BASES
+from identkit.methods.modal_problem import ModalProblem, Poles
+from identkit.methods.modal_solution import Solution, scale_data, solve
+from identkit.methods.order_settling import Request, mode_cap, settle
+from identkit.methods.residual_variance import start_variance, updated_variance
+from identkit.methods.starting_poles import leading_first, starting_point
+from identkit.outcomes import Outcome
+
+LIKELIHOOD_RATIO_LEVEL = 1e-3
+RESIDUES = ("real", "general", "auto")
+
+
+def fit_modal_model(
+    frequency: FloatArray,
+    response: ComplexArray,
+    variance: FloatArray | None = None,
+    *,
+    base: str = "pivot",
+    modes: str | int = "auto",
+    delay: bool = True,
+    residues: str = "real",
+    feedthrough: bool = True,
+) -> ModalFit:
+    """Fit a modal model to one response, number of modes included, by maximum likelihood.
+
+    Parameters
+    ----------
+    frequency
+        (points,) Hz, increasing.
+    response
+        (points,) output/input; points that are not finite are left out.
+    variance
+        (points,) E|error|^2 of both parts together, or None to estimate it from the residuals.
+    base
+        "free", "pivot" or "none".
+    modes
+        "auto" or the number of modes.
+    delay, feedthrough
+        Whether they are fitted; if not they are zero.
+    residues
+        "real", "general" (with residue rates) or "auto": general where a likelihood-ratio test at
+        the 0.1 % level asks for it.
+
+    Returns
+    -------
+    ModalFit
+        Outcomes: DONE, NO_MODES, MODE_LIMIT, NOT_CONVERGED, SINGULAR_COVARIANCE, TOO_FEW_POINTS,
+        NOT_FINITE.
+
+    Raises
+    ------
+    InputError
+        If an option is not one of those above or the arrays do not match.
+
+    Notes
+    -----
+    Continuous-time data only. Does not apply to time-varying or clearly nonlinear responses: the
+    noise ratio then stands far above 1.
+    """
+    _check(frequency, response, variance, base, modes, residues)
+    number = None if modes == "auto" else int(modes)
+    request = Request(base, number, delay, residues == "general", feedthrough)
+    frequency, response = np.asarray(frequency, float), np.asarray(response, complex)
+    use = usable_points(frequency, response, variance, base)
+    refused = refusal(use, response, request.shape(number or 0))
+    if refused is not None:
+        return empty_fit(request.shape(0), refused, int(use.sum()), variance is None)
+    frequency, response = frequency[use], response[use]
+    spread = start_variance(frequency, response) if variance is None else variance[use]
+    solution, spread = _fit(frequency, response, spread, request, variance is None)
+    if residues == "auto":
+        solution = _general_if_needed(solution, request)
+    capped = number is None and solution.shape.modes >= mode_cap(frequency.size)
+    return as_fit(solution, variance is None, Outcome.MODE_LIMIT if capped else Outcome.DONE)
+
+
+def _check(
+    frequency: FloatArray,
+    response: ComplexArray,
+    variance: FloatArray | None,
+    base: str,
+    modes: str | int,
+    residues: str,
+) -> None:
+    problems = []
+    if base not in BASES:
+        problems.append(Problem("base", repr(base), f"one of {', '.join(BASES)}"))
+    if residues not in RESIDUES:
+        problems.append(Problem("residues", repr(residues), f"one of {', '.join(RESIDUES)}"))
+    if modes != "auto" and (isinstance(modes, str) or modes < 0):
+        problems.append(Problem("modes", repr(modes), '"auto" or a number from 0 up'))
+    for name, values in (("response", response), ("variance", variance)):
+        if values is not None and np.shape(values) != np.shape(frequency):
+            found, expected = np.shape(values), np.shape(frequency)
+            problems.append(Problem(name, f"shape {found}", f"shape {expected} like frequency"))
+    if np.any(np.diff(frequency) <= 0.0):
+        problems.append(Problem("frequency", "values that do not increase", "increasing Hz"))
+    if problems:
+        raise InputError(problems)
+
+
+def _fit(
+    frequency: FloatArray,
+    response: ComplexArray,
+    variance: FloatArray,
+    request: Request,
+    estimated: bool,
+) -> tuple[Solution, FloatArray]:
+    """Start, refine and settle; update the variance; settle again."""
+    data = scale_data(frequency, response, variance)
+    start, modes, scale = starting_point(data, request)
+    problem = ModalProblem(data, request.shape(modes))
+    solution = settle(solve(problem, start), request, scale)
+    for _ in range(2 if estimated else 1):
+        variance = updated_variance(solution, response, variance, estimated)
+        data = scale_data(frequency, response, variance)
+        problem = ModalProblem(data, solution.shape)
+        solution = settle(solve(problem, solution.poles), request, 1.0 if estimated else scale)
+    return with_leading_pivot(solution), variance
+
+
+def with_leading_pivot(solution: Solution) -> Solution:
+    """Name pivot the section of largest static deflection, if the search ended otherwise."""
+    shape = solution.shape
+    if shape.base != "pivot" or shape.modes == 0 or shape.general:
+        return solution
+    order = leading_first(solution.problem.data, solution.poles)
+    if order[0] == 0:
+        return solution
+    poles = solution.poles
+    poles = Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
+    return solve(solution.problem, poles)
+
+
+def _general_if_needed(solution: Solution, request: Request) -> Solution:
+    """Likelihood-ratio test of real against general residues at the same modes."""
+    modes = solution.shape.modes
+    if modes == 0:
+        return solution
+    problem = ModalProblem(solution.problem.data, replace(solution.shape, general=True))
+    general = solve(problem, solution.poles)
+    freedom = 2 * problem.data.x.size - problem.shape.parameters
+    noise = max(1.0, general.cost / max(freedom, 1))
+    if solution.cost - general.cost < chi2.isf(LIKELIHOOD_RATIO_LEVEL, modes) * noise:
+        return solution
+    return settle(general, replace(request, general=True), noise)

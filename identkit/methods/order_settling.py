@@ -1,0 +1,146 @@
+"""Settle the number of modes of a fit: drop, add, refit, compare, until nothing improves.
+
+Score and Wald tests propose (see `order_selection`), a refit and the information criterion decide.
+The unit of chi^2 is the noise scale: 1 where residuals agree with the stated variance, else the
+residual variance of an over-ordered fit, so that data which do not follow the model do not collect
+modes without end.
+
+Source: as `order_selection`.
+"""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from identkit.methods.arrays import BoolArray
+from identkit.methods.modal_problem import ModalProblem, ModelShape, Poles
+from identkit.methods.modal_solution import Solution, solve
+from identkit.methods.order_selection import (
+    Candidate,
+    information_criterion,
+    score_test,
+    wald_statistics,
+)
+
+MODE_CAP = 24
+WIDEST = 1.5
+
+
+@dataclass(frozen=True)
+class Request:
+    """What the caller asked for."""
+
+    base: str
+    modes: int | None
+    delay: bool
+    general: bool
+    feedthrough: bool
+
+    def shape(self, modes: int) -> ModelShape:
+        """Return the model with that many modes."""
+        return ModelShape(self.base, modes, self.general, self.feedthrough, self.delay)
+
+
+def mode_cap(points: int) -> int:
+    """Return the largest automatic number of modes."""
+    return max(1, min(MODE_CAP, points // 10))
+
+
+def mode_price(request: Request, points: int) -> float:
+    """Return the decrease of chi^2 that one more mode must bring."""
+    return (4 if request.general else 3) * float(np.log(2.0 * points))
+
+
+def settle(solution: Solution, request: Request, scale: float) -> Solution:
+    """Drop and add modes until the information criterion rests (or the number asked for)."""
+    solution = _without_stray(solution)
+    for _ in range(2 * MODE_CAP):
+        changed = _dropped(solution, request, scale) or _added(solution, request, scale)
+        if changed is None:
+            return solution
+        solution = changed
+    return solution
+
+
+def _criterion(solution: Solution, scale: float) -> float:
+    points = solution.problem.data.x.size
+    freedom = max(2 * points - solution.shape.parameters, 1)
+    noise = max(1.0, min(scale, solution.cost / freedom))
+    return information_criterion(solution.cost, noise, solution.shape.parameters, points)
+
+
+def _dropped(solution: Solution, request: Request, scale: float) -> Solution | None:
+    modes = solution.shape.modes
+    if modes <= (request.modes or 0):
+        return None
+    wald = wald_statistics(solution)
+    weakest = int(np.argmin(wald))
+    trial = resized(solution, drop=weakest)
+    if request.modes is not None:
+        return trial
+    price = mode_price(request, solution.problem.data.x.size)
+    if wald[weakest] > price * scale:
+        return None
+    better = _criterion(trial, scale) <= _criterion(solution, scale)
+    return trial if better else None
+
+
+def _added(solution: Solution, request: Request, scale: float) -> Solution | None:
+    points, modes = solution.problem.data.x.size, solution.shape.modes
+    most = mode_cap(points) if request.modes is None else request.modes
+    if modes >= most or 2 * points <= request.shape(modes + 1).parameters + 4:
+        return None
+    for candidate in score_test(solution)[:2]:
+        if request.modes is None and candidate.gain < _entry(solution, request):
+            return None
+        trial = _without_stray(resized(solution, add=candidate))
+        if trial.shape.modes > modes and (
+            request.modes is not None or _criterion(trial, scale) < _criterion(solution, scale)
+        ):
+            return trial
+    return None
+
+
+def _entry(solution: Solution, request: Request) -> float:
+    """Gain of the residue alone worth a refit: part of the price, the poles still move."""
+    points = solution.problem.data.x.size
+    return 0.5 * mode_price(request, points)
+
+
+def resized(
+    solution: Solution, *, drop: int | None = None, add: Candidate | None = None
+) -> Solution:
+    """Refit with one mode fewer or one more."""
+    poles, shape = solution.poles, solution.shape
+    frequency, damping = poles.log_frequency, poles.log_damping
+    if drop is not None:
+        index = shape.sections - shape.modes + drop
+        frequency, damping = np.delete(frequency, index), np.delete(damping, index)
+    if add is not None:
+        frequency = np.append(frequency, add.log_frequency)
+        damping = np.append(damping, add.log_damping)
+    changed = replace(shape, modes=shape.modes + (add is not None) - (drop is not None))
+    problem = ModalProblem(solution.problem.data, changed, poles.delay)
+    return solve(problem, Poles(poles.delay, frequency, damping))
+
+
+def _without_stray(solution: Solution) -> Solution:
+    """Drop modes that left the band by far, became a trend, or sit on a single point."""
+    while solution.shape.modes:
+        stray = np.flatnonzero(_stray(solution))
+        if stray.size == 0:
+            return solution
+        solution = resized(solution, drop=int(stray[0]))
+    return solution
+
+
+def _stray(solution: Solution) -> BoolArray:
+    shape, x = solution.shape, solution.problem.data.x
+    first = shape.sections - shape.modes
+    natural = np.exp(solution.poles.log_frequency[first:])
+    damping = np.exp(solution.poles.log_damping[first:])
+    place = np.clip(np.searchsorted(x, natural), 1, x.size - 1)
+    spacing = x[place] - x[place - 1]
+    outside = (natural > 1.3) | (natural < 0.7 * x[0])
+    spike = 2.0 * damping * natural < 0.1 * spacing
+    return np.asarray(outside | (damping > WIDEST) | spike, dtype=np.bool_)

@@ -1,0 +1,105 @@
+"""Variance of the points of a response: estimated where none was measured, and unbiased weights.
+
+Where no variance is given, v = (alpha |P|^2 + beta) times a slowly varying factor: a constant
+relative part, a floor, and what the residuals show along the frequency axis, all by medians so
+that a missed resonance does not hide itself. |error|^2 of circular Gaussian noise is exponential:
+its median is ln 2 times its mean.
+
+Where a variance is given that follows the measured magnitude point by point (as one derived from
+coherence does), points that happen to be small get too much weight and the fit is biased low. It
+is then scaled from the measured to the modelled magnitude, once. Whether it does is read off the
+data: the regression of the wiggles of ln v on those of ln |measured|^2.
+
+Source: common practice in response estimation; the bias of data-dependent weights is discussed by
+R. Pintelon & J. Schoukens, *System Identification: A Frequency Domain Approach*, 2nd ed., 2012.
+"""
+
+import numpy as np
+from scipy.ndimage import median_filter, uniform_filter1d
+
+from identkit.methods.arrays import ComplexArray, FloatArray
+from identkit.methods.modal_solution import Solution, fitted_response
+
+LN2 = float(np.log(2.0))
+RELATIVE_FLOOR = 1e-9
+LARGEST_CORRECTION = 4.0
+
+
+def start_variance(frequency: FloatArray, response: ComplexArray) -> FloatArray:
+    """Return a first variance from how far each point lies off the line through its neighbours."""
+    points = frequency.size
+    if points < 8:
+        return np.asarray(1e-4 * np.abs(response) ** 2, dtype=float)
+    share = (frequency[1:-1] - frequency[:-2]) / (frequency[2:] - frequency[:-2])
+    off = response[1:-1] - (1.0 - share) * response[:-2] - share * response[2:]
+    gain = 1.0 + share**2 + (1.0 - share) ** 2
+    relative = np.abs(off) ** 2 / gain / _power(response)[1:-1]
+    level = median_filter(np.pad(relative, 1, mode="edge"), _window(points), mode="nearest") / LN2
+    return np.asarray(np.maximum(level, RELATIVE_FLOOR**2) * _power(response), dtype=float)
+
+
+def updated_variance(
+    solution: Solution, response: ComplexArray, variance: FloatArray, estimated: bool
+) -> FloatArray:
+    """Return the variance to use next, given a fit.
+
+    Parameters
+    ----------
+    solution
+        A fit of the response with `variance`.
+    response
+        (points,) measured.
+    variance
+        (points,) variance used in the fit.
+    estimated
+        Whether it was estimated; then it is estimated afresh from the residuals.
+    """
+    model = fitted_response(solution)
+    if estimated:
+        return _from_residuals(np.abs(response - model) ** 2, model)
+    return _model_based(variance, response, model)
+
+
+def _from_residuals(error: FloatArray, model: ComplexArray) -> FloatArray:
+    power = _power(model)
+    relative, floor = _relative_and_floor(error, power)
+    shape = relative * power + floor
+    level = median_filter(error / shape, _window(error.size), mode="nearest") / LN2
+    level = uniform_filter1d(level, _window(error.size), mode="nearest")
+    return np.asarray(shape * np.maximum(level, 1e-3), dtype=float)
+
+
+def _relative_and_floor(error: FloatArray, power: FloatArray) -> tuple[float, float]:
+    """Split the error in a part relative to power and a constant, on bins of equal power."""
+    bins = np.array_split(np.argsort(power), max(2, min(12, error.size // 25)))
+    mean = np.array([np.median(error[part]) / LN2 for part in bins])
+    level = np.array([np.median(power[part]) for part in bins])
+    relative, floor = float(np.median(mean / level)), 0.0
+    for _ in range(20):
+        spread = relative * level + floor + 1e-300
+        design = np.column_stack([level, np.ones_like(level)]) / spread[:, None]
+        scale = np.linalg.norm(design, axis=0)
+        answer = np.linalg.lstsq(design / scale, mean / spread, rcond=None)[0] / scale
+        relative, floor = float(max(answer[0], 0.0)), float(max(answer[1], 0.0))
+    return max(relative, RELATIVE_FLOOR**2), floor
+
+
+def _model_based(variance: FloatArray, response: ComplexArray, model: ComplexArray) -> FloatArray:
+    wiggle = np.log(_power(response) / _power(model))
+    rough = np.diff(np.log(np.maximum(variance, 1e-300)))
+    follows = np.diff(wiggle)
+    energy = float(follows @ follows)
+    if energy == 0.0 or float(rough @ follows) / energy < 0.5:
+        return variance
+    factor = np.clip(np.exp(-wiggle), 1.0 / LARGEST_CORRECTION, LARGEST_CORRECTION)
+    return np.asarray(variance * factor, dtype=float)
+
+
+def _power(response: ComplexArray) -> FloatArray:
+    power = np.abs(response) ** 2
+    floor = 1e-24 * max(float(np.max(power, initial=0.0)), 1e-300)
+    return np.asarray(np.maximum(power, floor), dtype=float)
+
+
+def _window(points: int) -> int:
+    return max(15, 2 * (points // 24) + 1)
