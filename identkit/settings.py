@@ -19,7 +19,7 @@ from pydantic import (
     model_validator,
 )
 
-from identkit.errors import InputError, Problem
+from identkit.errors import InputError
 from identkit.settings_messages import problems_of, read_toml
 
 
@@ -362,47 +362,3 @@ def _looked_up(tables: dict[str, Any], name: str) -> Any:
     for key in name.split("."):
         value = value[key]
     return value
-
-
-def refuse_unavailable(settings: Settings) -> None:
-    """Refuse what the schema knows but this version cannot do yet; nothing is silently ignored.
-
-    Raises
-    ------
-    InputError
-        With one problem per key that asks for something not built yet.
-    """
-    problems = [
-        Problem(f"{settings.path}, {place}", found, f"{expected}; not available in this version")
-        for place, asked, found, expected in _not_yet(settings)
-        if asked
-    ]
-    if problems:
-        raise InputError(problems)
-
-
-def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
-    """List every key that can ask for more than is built: place, asked, found, what is there."""
-    responses, bound, export = settings.responses, settings.bound, settings.export
-    model, nominal, history = settings.model, settings.nominal, settings.history
-    ready = HistorySettings().url
-    return [
-        ("[records]", settings.records is not None, "time records", "[responses] files"),
-        _row("[responses] sample_period", responses.sample_period, 0.0),
-        _row("[model] sharing", model.sharing, "auto", "none"),
-        _row("[nominal] choice", nominal.choice, "centre"),
-        _row("[bound] form", bound.form, "multiplicative"),
-        _row("[bound] remove", list(bound.remove), []),
-        _row("[bound] holds", bound.holds, "measured"),
-        _row("[bound] exchangeable", bound.exchangeable, "unit"),
-        _row("[bound] hold_out", bound.hold_out, 0.0),
-        _row("[bound] factors", bound.factors, "auto"),
-        _row("[bound] split", bound.split, ""),
-        _row("[export] period", export.period, 0.0),
-        _row("[history] url", history.url, ready),
-    ]
-
-
-def _row(place: str, value: object, *ready: object) -> tuple[str, bool, str, str]:
-    words = " or ".join(json.dumps(choice) for choice in ready)
-    return place, value not in ready, json.dumps(value), words

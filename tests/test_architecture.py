@@ -30,6 +30,7 @@ LEVELS = {
     "atomic": 0,
     "settings_messages": 1,
     "progress": 1,
+    "not_yet": 3,
     "demo": 3,
     "show": 7,
     "set_audit": 7,

@@ -2,8 +2,9 @@
 
 import json
 import os
+from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -14,7 +15,13 @@ from identkit.errors import InputError, Problem
 from identkit.grids import Gridded, gather
 from identkit.readers.columns import ColumnChoice, column_choices
 from identkit.readers.measured import MeasuredResponse
-from identkit.readers.path_pattern import NUMBER_LABELS, LabelledFile, PathPattern
+from identkit.readers.netcdf import SUFFIXES, read_netcdf
+from identkit.readers.path_pattern import (
+    NUMBER_LABELS,
+    LabelledFile,
+    PathPattern,
+    relative_to,
+)
 from identkit.readers.text import read_text
 from identkit.settings import ResponseSettings, Settings
 
@@ -29,7 +36,12 @@ class _Campaign:
 
     files: list[LabelledFile] = field(default_factory=list)
     measured: list[MeasuredResponse] = field(default_factory=list)
-    problems: list[Problem] = field(default_factory=list)
+    bad: list[tuple[str, Problem]] = field(default_factory=list)
+
+    def keep(self, places: Sequence[int]) -> None:
+        """Go on with these responses only."""
+        self.files = [self.files[k] for k in places]
+        self.measured = [self.measured[k] for k in places]
 
 
 def read_responses(
@@ -151,52 +163,60 @@ def read_campaign(
         With one problem per bad file, or if no good file is left.
     """
     choices = column_choices(options.columns, options.units)
-    campaign = _Campaign(problems=list(found.strays))
+    campaign = _Campaign(bad=[(problem.place, problem) for problem in found.strays])
     for done, file in enumerate(found.files, start=1):
-        _read_into(campaign, file, choices, options.averages)
+        place = relative_to(file.path, folder)
+        try:
+            read = _read_file(file, place, options, choices, alone=len(found.files) == 1)
+        except InputError as error:
+            campaign.bad += [(place, problem) for problem in error.problems]
+        else:
+            campaign.files += [each for each, _ in read]
+            campaign.measured += [measured for _, measured in read]
         if progress is not None:
             progress(done, len(found.files))
-    campaign.problems += _variance_strays(campaign)
-    if campaign.problems and (options.bad_files == "stop" or not campaign.files):
-        raise InputError(campaign.problems)
+    _take_out_variance_strays(campaign, folder)
+    if campaign.bad and (options.bad_files == "stop" or not campaign.files):
+        raise InputError([problem for _, problem in campaign.bad])
     return _assembled(campaign, options, folder)
 
 
-def _read_into(
-    campaign: _Campaign,
+def _read_file(
     file: LabelledFile,
+    place: str,
+    options: ResponseSettings,
     choices: dict[str, ColumnChoice],
-    averages: float | None,
-) -> None:
-    try:
-        measured = read_text(file.path, choices, averages)
-    except InputError as error:
-        campaign.problems.extend(error.problems)
-        return
-    campaign.files.append(file)
-    campaign.measured.append(measured)
+    *,
+    alone: bool,
+) -> list[tuple[LabelledFile, MeasuredResponse]]:
+    """Read one file by the reader its suffix asks for."""
+    if file.path.suffix.lower() not in SUFFIXES:
+        return [(file, read_text(file.path, choices, options.averages, place))]
+    found = read_netcdf(file, options, place)
+    if alone:
+        return found
+    if len(found) == 1:
+        return [(replace(found[0][0], identity=file.identity), found[0][1])]
+    return [(replace(f, identity=f"{file.identity}/{f.identity}"), m) for f, m in found]
 
 
-def _variance_strays(campaign: _Campaign) -> list[Problem]:
+def _take_out_variance_strays(campaign: _Campaign, folder: Path) -> None:
     """Take out the files whose variance is known in another way than that of most files."""
     sources = [measured.variance_source for measured in campaign.measured]
     if len(set(sources)) < 2:
-        return []
+        return
     usual = max(dict.fromkeys(sources), key=sources.count)
     words = {
-        "measured": "a variance column",
-        "coherence": "a coherence column",
-        "residuals": "neither variance nor usable coherence",
+        "measured": "a variance of its own",
+        "coherence": "a variance from coherence",
+        "residuals": "neither variance nor coherence with averages",
     }
-    strays = [k for k, source in enumerate(sources) if source != usual]
-    problems = [
-        Problem(str(campaign.files[k].path), words[sources[k]], f"{words[usual]}, as most files")
-        for k in strays
-    ]
-    keep = [k for k in range(len(sources)) if k not in strays]
-    campaign.files = [campaign.files[k] for k in keep]
-    campaign.measured = [campaign.measured[k] for k in keep]
-    return problems
+    for file, source in zip(campaign.files, sources, strict=True):
+        if source != usual:
+            place = relative_to(file.path, folder)
+            problem = Problem(place, words[source], f"{words[usual]}, as most files have")
+            campaign.bad.append((place, problem))
+    campaign.keep([k for k, source in enumerate(sources) if source == usual])
 
 
 def _assembled(campaign: _Campaign, options: ResponseSettings, folder: Path) -> Gridded:
@@ -204,6 +224,7 @@ def _assembled(campaign: _Campaign, options: ResponseSettings, folder: Path) -> 
     groups: dict[bytes, list[int]] = {}
     for k, measured in enumerate(campaign.measured):
         groups.setdefault(measured.frequency.tobytes(), []).append(k)
+    _refuse_same_names(campaign.files)
     attributes = _attributes(campaign, options)
     parts = [
         _dataset([campaign.files[k] for k in group], [campaign.measured[k] for k in group], folder)
@@ -212,19 +233,34 @@ def _assembled(campaign: _Campaign, options: ResponseSettings, folder: Path) -> 
     return gather([part.assign_attrs(attributes) for part in parts])
 
 
+def _refuse_same_names(files: Sequence[LabelledFile]) -> None:
+    twice = [name for name, count in Counter(file.identity for file in files).items() if count > 1]
+    if twice:
+        problems = [Problem(f"response {name}", "the name more than once", "one") for name in twice]
+        raise InputError(problems)
+
+
 def _attributes(campaign: _Campaign, options: ResponseSettings) -> dict[str, Any]:
     skipped = [
-        {"file": problem.place, "reason": f"found {problem.found}; expected {problem.expected}"}
-        for problem in campaign.problems
+        {"file": file, "reason": str(problem).removeprefix(file).lstrip(",: ")}
+        for file, problem in campaign.bad
     ]
     return {
         "sample_period": options.sample_period,
-        "input_unit": options.units.input,
-        "output_unit": options.units.output,
+        "input_unit": _unit(campaign, "input_unit", options.units.input),
+        "output_unit": _unit(campaign, "output_unit", options.units.output),
         "variance_source": campaign.measured[0].variance_source,
         "rest_lines": sum(measured.rest_lines for measured in campaign.measured),
         "skipped_files": json.dumps(skipped),
     }
+
+
+def _unit(campaign: _Campaign, name: str, stated: str) -> str:
+    """Return the unit the study states, else the one the files do."""
+    found = sorted({getattr(each, name) for each in campaign.measured} - {""})
+    if len(found) > 1:
+        raise InputError(Problem(f"the {name} of the files", " and ".join(found), "one unit"))
+    return stated or (found[0] if found else "")
 
 
 def _dataset(
@@ -232,14 +268,18 @@ def _dataset(
 ) -> xr.Dataset:
     """Stack responses on one grid."""
 
-    def stacked(name: str) -> Any:
-        return np.stack([getattr(each, name) for each in measured])[:, None, None, :]
+    def stacked(name: str, missing: float | bool = np.nan) -> Any:
+        empty = np.full(measured[0].frequency.shape, missing)
+        values = [getattr(each, name) for each in measured]
+        return np.stack([empty if value is None else value for value in values])[:, None, None, :]
 
     variables = {"frequency_response": (_DIMS, stacked("response"))}
     if measured[0].variance is not None:
         variables["frequency_response_variance"] = (_DIMS, stacked("variance"))
-    if all(each.coherence is not None for each in measured):
+    if any(each.coherence is not None for each in measured):
         variables["coherence"] = (_DIMS, stacked("coherence"))
+    if any(each.usable is not None for each in measured):
+        variables["usable_mask"] = (_DIMS, stacked("usable", missing=True))
     data = xr.Dataset(
         variables,
         coords={
@@ -272,9 +312,5 @@ def _labels(files: Sequence[LabelledFile], folder: Path) -> dict[str, Any]:
         number = name in NUMBER_LABELS or any(isinstance(value, float) for value in values)
         missing = np.nan if number else ""
         labels[name] = ("response", [missing if value is None else value for value in values])
-    labels["source"] = ("response", [_source(file.path, folder) for file in files])
+    labels["source"] = ("response", [relative_to(file.path, folder) for file in files])
     return labels
-
-
-def _source(path: Path, folder: Path) -> str:
-    return Path(os.path.relpath(path, folder)).as_posix()

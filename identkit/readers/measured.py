@@ -1,11 +1,12 @@
 """One measured response as plain arrays, and the rules every measured response must keep."""
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from identkit.methods.arrays import BoolArray, ComplexArray, FloatArray
+from identkit.methods.coherence_variance import coherence_variance
 
 _ROUNDING = 1e-6  # a coherence printed as 1.0000003 is 1 within its digits
 
@@ -28,6 +29,10 @@ class MeasuredResponse:
         "measured", "coherence" or "residuals" (none given: to be estimated by the fit).
     rest_lines
         Lines at 0 Hz that were left out.
+    usable
+        Points that may be used, where the file marks them.
+    input_unit, output_unit
+        Units of the plant's input and output, where the file states them.
     """
 
     frequency: FloatArray
@@ -36,6 +41,17 @@ class MeasuredResponse:
     coherence: FloatArray | None
     variance_source: str
     rest_lines: int = 0
+    usable: BoolArray | None = None
+    input_unit: str = ""
+    output_unit: str = ""
+
+
+def with_variance(measured: MeasuredResponse, averages: float | None) -> MeasuredResponse:
+    """Return a response with the variance that its coherence gives, where it has no other."""
+    if measured.variance is not None or measured.coherence is None or averages is None:
+        return measured
+    variance = coherence_variance(measured.response, measured.coherence, averages)
+    return replace(measured, variance=variance, variance_source="coherence")
 
 
 @dataclass(frozen=True)

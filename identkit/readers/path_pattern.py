@@ -6,6 +6,7 @@ no label. Fields are matched by the `parse` library, one folder of the path at a
 
 import fnmatch
 import math
+import os
 import re
 import string
 from collections.abc import Iterator
@@ -137,20 +138,20 @@ class PathPattern:
         for path, names in self._candidates(start):
             labels = self._match(names)
             if labels is None:
-                strays.append(self._stray(path))
+                strays.append(self._stray(path, folder))
             else:
                 found.append((path, names, labels))
-        files = self._labelled(found, strays)
+        files = self._labelled(found, strays, folder)
         if not files and not strays:
             raise InputError(self._nothing_found(start))
-        _refuse_repeats(files)
+        _refuse_repeats(files, folder)
         return FoundFiles(tuple(files), tuple(strays))
 
     def label(self, path: Path) -> dict[str, Label]:
         """Return the labels of a file given by hand; none if its path does not fit the pattern."""
         names = list(path.resolve().parts[-len(self._components) :])
         labels = self._match(names) if len(names) == len(self._components) else None
-        return {} if labels is None else _checked_labels(labels, path)
+        return {} if labels is None else _checked_labels(labels, str(path))
 
     def _check(self) -> None:
         expected = 'fields such as {unit} or {temperature:g} in a path such as "bench/{unit}.csv"'
@@ -190,7 +191,10 @@ class PathPattern:
         return labels
 
     def _labelled(
-        self, found: list[tuple[Path, list[str], dict[str, Any]]], strays: list[Problem]
+        self,
+        found: list[tuple[Path, list[str], dict[str, Any]]],
+        strays: list[Problem],
+        folder: Path,
     ) -> list[LabelledFile]:
         fixed = next(
             (k for k, part in enumerate(self._components) if not part.is_fixed),
@@ -200,14 +204,16 @@ class PathPattern:
         files = []
         for (path, _, labels), identity in zip(found, identities, strict=True):
             try:
-                files.append(LabelledFile(path, identity, _checked_labels(labels, path)))
+                checked = _checked_labels(labels, relative_to(path, folder))
+                files.append(LabelledFile(path, identity, checked))
             except InputError as error:
                 strays.extend(error.problems)
         return sorted(files, key=lambda file: natural_key(file.identity))
 
-    def _stray(self, path: Path) -> Problem:
+    def _stray(self, path: Path, folder: Path) -> Problem:
         expected = f'a name that fits the pattern "{self.text}"'
-        return Problem(str(path), "a name with a label of the wrong kind", expected)
+        place = relative_to(path, folder)
+        return Problem(place, "a name with a label of the wrong kind", expected)
 
     def _nothing_found(self, start: Path) -> Problem:
         folder = start
@@ -273,42 +279,54 @@ def _without_suffix(path: str, pattern: str) -> str:
     return path.removesuffix(suffix) if known else path
 
 
-def _checked_labels(found: dict[str, Any], path: Path) -> dict[str, Label]:
-    return {name: _checked_label(name, value, path) for name, value in found.items()}
+def relative_to(path: Path, folder: Path) -> str:
+    """Return a path as seen from a folder, with ``/`` between folders."""
+    return Path(os.path.relpath(path, folder)).as_posix()
 
 
-def _checked_label(name: str, value: Any, path: Path) -> Label:
+def _checked_labels(found: dict[str, Any], place: str) -> dict[str, Label]:
+    return {name: checked_label(name, value, place) for name, value in found.items()}
+
+
+def checked_label(name: str, value: Any, place: str) -> Label:
+    """Return a label as the kind it must be: number, ISO date or text.
+
+    Raises
+    ------
+    InputError
+        If it cannot be that.
+    """
     if name in NUMBER_LABELS:
-        return _number(name, value, path)
+        return _number(name, value, place)
     if name == "measured_at":
-        return _date(value, path)
+        return _date(value, place)
     if name not in TEXT_LABELS and isinstance(value, int | float):
-        return _number(name, value, path)
+        return _number(name, value, place)
     return str(value)
 
 
-def _number(name: str, value: Any, path: Path) -> float:
+def _number(name: str, value: Any, place: str) -> float:
     try:
         number = float(value)
     except (TypeError, ValueError):
         number = math.nan
     if not math.isfinite(number):
-        raise InputError(Problem(str(path), f"{name} {value!r} in the path", "a number"))
+        raise InputError(Problem(place, f"the label {name} {value!r}", "a number"))
     return number
 
 
-def _date(value: Any, path: Path) -> str:
+def _date(value: Any, place: str) -> str:
     try:
         date = value if isinstance(value, datetime) else datetime.fromisoformat(str(value))
     except ValueError:
         expected = "an ISO date such as 2026-01-31"
-        problem = Problem(str(path), f"measured_at {value!r} in the path", expected)
+        problem = Problem(place, f"the label measured_at {value!r}", expected)
         raise InputError(problem) from None
     text = date.isoformat()
     return text.removesuffix("T00:00:00")
 
 
-def _refuse_repeats(files: list[LabelledFile]) -> None:
+def _refuse_repeats(files: list[LabelledFile], folder: Path) -> None:
     seen: dict[tuple[tuple[str, Label], ...], LabelledFile] = {}
     problems = []
     for file in files:
@@ -316,8 +334,8 @@ def _refuse_repeats(files: list[LabelledFile]) -> None:
         first = seen.setdefault(labels, file)
         if first is not file:
             shown = ", ".join(f"{name} {value}" for name, value in labels) or "none"
-            found = f"the same labels ({shown}) as {first.path}"
+            found = f"the same labels ({shown}) as {relative_to(first.path, folder)}"
             expected = "one file for each set of labels; mark re-measurements by {repeat}"
-            problems.append(Problem(str(file.path), found, expected))
+            problems.append(Problem(relative_to(file.path, folder), found, expected))
     if problems:
         raise InputError(problems)

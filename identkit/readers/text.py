@@ -15,9 +15,8 @@ import numpy as np
 
 from identkit.errors import InputError, Problem
 from identkit.methods.arrays import ComplexArray, FloatArray
-from identkit.methods.coherence_variance import coherence_variance
 from identkit.readers.columns import ColumnChoice, FoundColumns, find_columns
-from identkit.readers.measured import MeasuredResponse, first_fault
+from identkit.readers.measured import MeasuredResponse, first_fault, with_variance
 
 _EXPECTED = "a text file in UTF-8 with a header row"
 _DELIMITERS = ("\t", ";", ",")
@@ -37,7 +36,7 @@ class _TextTable:
 
 
 def read_text(
-    path: Path, choices: dict[str, ColumnChoice], averages: float | None
+    path: Path, choices: dict[str, ColumnChoice], averages: float | None, place: str = ""
 ) -> MeasuredResponse:
     """Read one text file of a measured scalar response.
 
@@ -50,39 +49,38 @@ def read_text(
     averages
         With coherence and more than 1 average the variance follows from them
         (`coherence_variance`); a variance column goes before.
+    place
+        What to call the file in messages; its path by default.
 
     Raises
     ------
     InputError
         With one problem, naming file, line and column.
     """
-    table = _take_apart(_decode(path), str(path))
+    place = place or str(path)
+    table = _take_apart(_decode(path, place), place)
     where = f"{table.place}, line {table.header_line}"
     columns = find_columns(table.header, choices, where)
     values = _numbers(table, columns)
-    return _measured(table, columns, values, averages)
+    return with_variance(_measured(table, columns, values), averages)
 
 
-def _decode(path: Path) -> str:
+def _decode(path: Path, place: str) -> str:
     """Return the text of a file, or say why it is none."""
     try:
         data = path.read_bytes()
-    except PermissionError:
-        raise InputError(Problem(str(path), "no permission to read it", _EXPECTED)) from None
     except OSError as error:
-        found = error.strerror or type(error).__name__
-        raise InputError(
-            Problem(str(path), f"a file that cannot be read ({found})", _EXPECTED)
-        ) from None
+        found = f"a file that cannot be read ({error.strerror or type(error).__name__})"
+        raise InputError(Problem(place, found, _EXPECTED)) from None
     found = _why_no_text(data)
     if found:
-        raise InputError(Problem(str(path), found, _EXPECTED))
+        raise InputError(Problem(place, found, _EXPECTED))
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         line = data[: error.start].count(b"\n") + 1
         found = f"the wrong encoding (byte 0x{data[error.start]:02x} is not UTF-8)"
-        raise InputError(Problem(f"{path}, line {line}", found, _EXPECTED)) from None
+        raise InputError(Problem(f"{place}, line {line}", found, _EXPECTED)) from None
 
 
 def _why_no_text(data: bytes) -> str:
@@ -208,26 +206,20 @@ def _as_number(text: str) -> float | None:
         return None
 
 
-def _measured(
-    table: _TextTable, columns: FoundColumns, values: FloatArray, averages: float | None
-) -> MeasuredResponse:
+def _measured(table: _TextTable, columns: FoundColumns, values: FloatArray) -> MeasuredResponse:
     """Bring the columns to one response, and refuse it where it breaks a rule."""
     _refuse_not_finite(table, columns, values)
-    scaled = values * np.array(columns.scales)[:, np.newaxis]
+    moving = values[columns.roles.index("frequency")] != 0.0
+    scaled = values[:, moving] * np.array(columns.scales)[:, np.newaxis]
     by_role = dict(zip(columns.roles, scaled, strict=True))
-    moving = by_role["frequency"] != 0.0
-    lines = [line for line, kept in zip(table.lines, moving, strict=True) if kept]
-    by_role = {role: column[moving] for role, column in by_role.items()}
     frequency, response = by_role["frequency"], _response(by_role)
     coherence, variance = by_role.get("coherence"), by_role.get("variance")
     fault = first_fault(frequency, response, coherence, variance)
     if fault:
+        lines = [line for line, kept in zip(table.lines, moving, strict=True) if kept]
         place = table.place if fault.index < 0 else f"{table.place}, line {lines[fault.index]}"
         raise InputError(Problem(place, fault.found, fault.expected))
     source = "residuals" if variance is None else "measured"
-    if variance is None and coherence is not None and averages is not None:
-        variance = coherence_variance(response, coherence, averages)
-        source = "coherence"
     rest_lines = int(np.count_nonzero(~moving))
     return MeasuredResponse(frequency, response, variance, coherence, source, rest_lines)
 
