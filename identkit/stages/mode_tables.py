@@ -9,8 +9,12 @@ from identkit.methods.mode_template import ModeTable
 CHANNEL_DIMS = ("response", "mode", "output", "input")
 
 
-def mode_table(fits: xr.Dataset) -> ModeTable:
-    """Return all fitted modes of a fits dataset as plain arrays on the scales of pairing."""
+def mode_table(fits: xr.Dataset, groups: ModeTable | None = None) -> ModeTable:
+    """Return all fitted modes of a fits dataset as plain arrays on the scales of pairing.
+
+    Temperature, head and lot are taken from `groups` where given: a part of a campaign keeps
+    the group numbers of the whole.
+    """
     frequency = fits["modal_frequency"].values.astype(float)
     damping = fits["damping_ratio"].values.astype(float)
     residue = fits["residue"].transpose(*CHANNEL_DIMS).values.astype(float)
@@ -27,9 +31,9 @@ def mode_table(fits: xr.Dataset) -> ModeTable:
         _known(errors["modal_frequency"]) / np.where(usable, frequency, 1.0),
         _known(errors["damping_ratio"]) / np.where(usable, positive, 1.0),
         _known(errors["residue"].reshape(channels.shape)),
-        known_temperature(fits),
-        group_index(fits, "head"),
-        group_index(fits, "lot"),
+        known_temperature(fits) if groups is None else groups.temperature,
+        group_index(fits, "head") if groups is None else groups.head,
+        group_index(fits, "lot") if groups is None else groups.lot,
     )
 
 

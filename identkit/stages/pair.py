@@ -4,15 +4,16 @@ Every response's fitted modes are assigned to population modes at minimum cost; 
 shifted and crossing modes are reported, never forced.
 """
 
-from collections.abc import Callable
-
 import numpy as np
 import xarray as xr
 
+from identkit.batch import Progress
 from identkit.errors import InputError, Problem
+from identkit.grids import Gridded
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.methods.mode_assignment import UNPAIRED, crossing_modes
 from identkit.methods.mode_population import (
+    assign_all,
     expected_log_frequency,
     find_population_modes,
     found_share,
@@ -21,8 +22,7 @@ from identkit.methods.mode_template import ModeTable, ModeTemplate
 from identkit.methods.shifted_modes import pair_shifted_modes
 from identkit.outcomes import Outcome
 from identkit.stages.mode_tables import CHANNEL_DIMS, mode_errors, mode_table
-
-Refit = Callable[[xr.Dataset, FloatArray, FloatArray, FloatArray, BoolArray], xr.Dataset]
+from identkit.stages.warm_refit import WarmRefit, find_missing_modes
 
 PER_MODE = ("modal_frequency", "damping_ratio", "mode_significance")
 PER_CHANNEL = ("residue", "residue_rate")
@@ -30,34 +30,45 @@ PER_CHANNEL = ("residue", "residue_rate")
 
 def pair_modes(
     fits: xr.Dataset,
+    responses: Gridded | None = None,
+    screening: Gridded | None = None,
     *,
     share: float = 0.5,
     unpaired_cost: float = 10.0,
+    delay: bool = True,
+    jobs: int = 1,
+    progress: Progress | None = None,
 ) -> xr.Dataset:
     """Name every fitted mode after a mode of the population (Kuhn 1955, Munkres 1957).
 
     The cost of a pair is the scaled difference of log frequency (temperature trend and lot taken
     out), log damping and signed residue of the head, with bounded growth; a mode may stay
     unpaired on either side at `unpaired_cost`. The population's modes come from the fits
-    themselves (methods/mode_population.py).
+    themselves (methods/mode_population.py). Where the responses are given, those that lack a
+    mode are refined once more from the population and keep what then stands out of the noise.
 
     Parameters
     ----------
     fits
         Fitted modes, dims response, mode, output, input, parameter, parameter_other.
+    responses, screening
+        What was fitted, for the warm refit; none is made without responses.
     share
         A mode belongs to the population when it is found in at least this share of the
         responses of the head that shows it best.
     unpaired_cost
         Cost of one unpaired mode; a pair costing more than twice this is not made. Six spreads
         off in one quantity cost 11.5.
+    delay, jobs, progress
+        As in `fit_modes`, for the warm refit.
 
     Returns
     -------
     Dataset
         As `fits`, with modes named M1, M2 ... by population frequency and E1, E2 ... for extra
         ones; ``mode_in_population``, ``mode_outcome``, ``mode_position``, standard errors,
-        ``mode_share``, ``mode_expected_frequency``.
+        ``mode_share``, ``mode_expected_frequency``, ``mode_found_warm_mask``. For scalar plants
+        base, delay and covariance are those of the refit where one was kept.
 
     Raises
     ------
@@ -71,7 +82,17 @@ def pair_modes(
     """
     table = _checked_table(fits)
     template, assigned = find_population_modes(table, share=share, unpaired_cost=unpaired_cost)
-    return name_modes(fits, table, template, assigned)
+    named = pair_shifted_modes(table, template, assigned)[0]
+    gained = np.zeros((len(assigned), len(template.log_frequency)), dtype=bool)
+    if responses is not None:
+        refit = WarmRefit(responses, screening, delay, jobs, progress)
+        fits, gained = find_missing_modes(fits, table, template, named, refit, unpaired_cost)
+        table = mode_table(fits)
+        assigned = assign_all(table, template, unpaired_cost)
+    paired = name_modes(fits, table, template, assigned)
+    warm = np.zeros(paired["modal_frequency"].shape, dtype=bool)
+    warm[:, : gained.shape[1]] = gained
+    return paired.assign(mode_found_warm_mask=(("response", "mode"), warm))
 
 
 def name_modes(
