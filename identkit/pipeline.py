@@ -1,0 +1,231 @@
+"""The order of the stages: what each reads, writes and depends on."""
+
+import json
+import os
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import xarray as xr
+
+from identkit.grids import Gridded, load, save
+from identkit.not_yet import refuse_unavailable
+from identkit.progress import Progress, silent
+from identkit.readers.campaign import CampaignFiles
+from identkit.settings import Settings, load_settings
+from identkit.stages.read import READ_SETTINGS, find_measurements, read
+from identkit.stages.selection import left_out
+from identkit.study import Stage, StudyFolder
+
+
+@dataclass(frozen=True)
+class Run:
+    """How a study ended.
+
+    Attributes
+    ----------
+    folder
+        The results folder.
+    verdict
+        Sentences a person can act on.
+    held
+        Whether the set holds what it is meant to hold; true where no set was asked for.
+    report
+        The report page, if the run got that far.
+    """
+
+    folder: Path
+    verdict: tuple[str, ...]
+    held: bool
+    report: Path | None
+
+
+@dataclass
+class Work:
+    """What a step works on: the settings, its stage, and the results so far."""
+
+    study: StudyFolder
+    stage: Stage
+    found: CampaignFiles
+    jobs: int
+    progress: Callable[[int, int], None]
+    kept: dict[str, Any] = field(default_factory=dict)
+
+    @property
+    def settings(self) -> Settings:
+        """The study's settings."""
+        return self.study.settings
+
+    def gridded(self, name: str) -> Gridded:
+        """Return the labelled data of a results file, read once per run."""
+        if name not in self.kept:
+            self.kept[name] = load(self.study.path(name))
+        data: Gridded = self.kept[name]
+        return data
+
+    def dataset(self, name: str) -> xr.Dataset:
+        """Return the labelled data of a results file that has no frequency grid of its own."""
+        data = self.gridded(name)
+        assert isinstance(data, xr.Dataset)
+        return data
+
+    def save(self, data: Gridded, name: str) -> None:
+        """Write labelled data to a results file and keep it for the steps that follow."""
+        save(data, self.stage.path(name))
+        self.kept[name] = data
+
+    @cached_property
+    def left_out(self) -> dict[str, str]:
+        """Responses the settings leave out of nominal and bound, with reasons."""
+        return left_out(
+            self.gridded("responses.nc"),
+            self.gridded("screening.nc"),
+            exclude=[(rule.labels, rule.reason) for rule in self.settings.bound.exclude],
+            leave_out=self.settings.screen.leave_out,
+        )
+
+
+@dataclass(frozen=True)
+class Step:
+    """One stage as the pipeline sees it."""
+
+    name: str
+    work: Callable[[Work], None]
+    files: tuple[str, ...]
+    after: tuple[str, ...] = ()
+    settings: tuple[str, ...] = ()
+
+
+def run_study(
+    study: Path | str,
+    *,
+    until: str | None = None,
+    redo: str | None = None,
+    jobs: int | None = None,
+    progress: Progress = silent,
+) -> Run:
+    """Run the stages of a study in order, leaving alone those whose results are still good.
+
+    Parameters
+    ----------
+    study
+        The study file.
+    until
+        Last stage to run; all when None.
+    redo
+        Stage to do again, with everything that depends on it.
+    jobs
+        Number of processes; all cores when None. Results do not depend on it.
+    progress
+        Gives, for a stage's name, a callable for (done, total).
+
+    Raises
+    ------
+    InputError
+        If the study file or a measured file is wrong.
+    InfeasibleError
+        If a bound that was asked for does not exist.
+    """
+    settings = load_settings(study)
+    refuse_unavailable(settings)
+    found = find_measurements(settings)
+    kept: dict[str, Any] = {}
+    with StudyFolder(settings) as folder:
+        if redo is not None:
+            folder.forget(redo)
+        for step in _steps_until(until):
+            stage = folder.stage(
+                step.name,
+                files=step.files,
+                settings=step.settings,
+                after=step.after,
+                inputs=[file.path for file in found.files] if step.name == "read" else [],
+            )
+            if not stage.current:
+                with stage.work():
+                    cores = jobs or os.cpu_count() or 1
+                    step.work(Work(folder, stage, found, cores, progress(step.name), kept))
+        return _ending(folder, until)
+
+
+def _steps_until(until: str | None) -> tuple[Step, ...]:
+    names = [step.name for step in STEPS]
+    # time records come with a later version; until then there is nothing to estimate
+    last = {"estimate": "read"}.get(until or "", until)
+    return STEPS[: names.index(last) + 1] if last is not None else STEPS
+
+
+def _read(work: Work) -> None:
+    work.save(read(work.settings, work.found, work.progress), "responses.nc")
+
+
+def _screen(work: Work) -> None:
+    from identkit.stages.screen import screen
+
+    limits = work.settings.screen.model_dump(exclude={"leave_out"})
+    marked = screen(work.gridded("responses.nc"), band=work.settings.responses.band, **limits)
+    work.save(marked, "screening.nc")
+
+
+def _fit(work: Work) -> None:
+    from identkit.stages.fit import fit_modes
+    from identkit.stages.tables import fits_table, write_table
+
+    model = work.settings.model.model_dump(exclude={"sharing"})
+    fits = fit_modes(
+        work.gridded("responses.nc"),
+        work.gridded("screening.nc"),
+        **model,
+        jobs=work.jobs,
+        progress=work.progress,
+    )
+    work.save(fits, "fits.nc")
+    write_table(fits_table(fits), work.stage.path("fits.csv"))
+
+
+def _pair(work: Work) -> None:
+    from identkit.stages.pair import pair_modes
+    from identkit.stages.tables import modes_table, write_table
+
+    modes = pair_modes(work.dataset("fits.nc"))
+    work.save(modes, "modes.nc")
+    write_table(modes_table(modes), work.stage.path("modes.csv"))
+
+
+def _population(work: Work) -> None:
+    from identkit.stages.population import describe_population
+    from identkit.stages.tables import population_table, write_table
+
+    population = describe_population(
+        work.dataset("modes.nc"),
+        reference_temperature=work.settings.nominal.reference_temperature,
+        leave_out=tuple(work.left_out),
+    )
+    work.save(population, "population.nc")
+    write_table(population_table(population), work.stage.path("population.csv"))
+
+
+STEPS = (
+    Step("read", _read, ("responses.nc",), (), READ_SETTINGS),
+    Step("screen", _screen, ("screening.nc",), ("read",), ("responses.band", "screen")),
+    Step("fit", _fit, ("fits.nc", "fits.csv"), ("read", "screen"), ("model",)),
+    Step("pair", _pair, ("modes.nc", "modes.csv"), ("fit",)),
+    Step(
+        "population",
+        _population,
+        ("population.nc", "population.csv"),
+        ("pair", "screen"),
+        ("nominal.reference_temperature", "bound.exclude", "screen.leave_out"),
+    ),
+)
+
+
+def _ending(folder: StudyFolder, until: str | None) -> Run:
+    certificate = folder.path("certificate.json")
+    report = folder.path("report.html")
+    if until is not None or not certificate.exists():
+        return Run(folder.folder, (f"Results up to {until} are in {folder.folder}",), True, None)
+    ending = json.loads(certificate.read_text(encoding="utf-8"))
+    return Run(folder.folder, tuple(ending["verdict"]), bool(ending["held"]), report)
