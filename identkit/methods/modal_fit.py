@@ -27,11 +27,11 @@ from identkit.methods.modal_least_squares import (
     usable_points,
 )
 from identkit.methods.modal_model import BASES
-from identkit.methods.modal_problem import ModalProblem, Poles
+from identkit.methods.modal_problem import ModalProblem
 from identkit.methods.modal_solution import Solution, scale_data, solve
 from identkit.methods.order_settling import Request, mode_cap, settle
 from identkit.methods.residual_variance import start_variance, updated_variance
-from identkit.methods.starting_poles import leading_first, starting_point
+from identkit.methods.starting_poles import starting_point
 from identkit.outcomes import Outcome
 
 LIKELIHOOD_RATIO_LEVEL = 1e-3
@@ -144,20 +144,7 @@ def _fit(
         data = scale_data(frequency, response, variance)
         problem = ModalProblem(data, solution.shape)
         solution = settle(solve(problem, solution.poles), request, 1.0 if estimated else scale)
-    return with_leading_pivot(solution), variance
-
-
-def with_leading_pivot(solution: Solution) -> Solution:
-    """Name pivot the section of largest static deflection, if the search ended otherwise."""
-    shape = solution.shape
-    if shape.base != "pivot" or shape.modes == 0 or shape.general:
-        return solution
-    order = leading_first(solution.problem.data, solution.poles)
-    if order[0] == 0:
-        return solution
-    poles = solution.poles
-    poles = Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
-    return solve(solution.problem, poles)
+    return solution, variance
 
 
 def _general_if_needed(solution: Solution, request: Request) -> Solution:

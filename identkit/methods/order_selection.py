@@ -6,11 +6,13 @@
   damping would gain: the residual's projection on the part of its column that the present model's
   tangent space does not hold.
 * The Wald test names the mode whose removal costs least.
-* The Bayesian information criterion settles: chi^2 / scale + parameters ln(reals).
+* The extended Bayesian information criterion settles: chi^2 / scale + parameters ln(reals)
+  + 2 modes ln(points), the last because a mode may stand at any of the points.
 
 Sources: S. Chen, S. A. Billings & W. Luo, Int. J. Control 50 (1989) 1873-1896 (orthogonal least
 squares); C. R. Rao, Proc. Cambridge Phil. Soc. 44 (1948) 50-57 (score test); G. Schwarz, Ann.
-Statist. 6 (1978) 461-464 (information criterion).
+Statist. 6 (1978) 461-464 (information criterion); J. Chen & Z. Chen, Biometrika 95 (2008) 759-771
+(extended criterion, with its gamma = 1).
 """
 
 from dataclasses import dataclass
@@ -38,9 +40,12 @@ class Candidate:
     gain: float
 
 
-def information_criterion(cost: float, scale: float, parameters: int, points: int) -> float:
-    """Return chi^2 over the noise scale plus parameters times ln(2 points)."""
-    return cost / scale + parameters * float(np.log(2.0 * points))
+def information_criterion(
+    cost: float, scale: float, parameters: int, modes: int, points: int
+) -> float:
+    """Return chi^2 over the noise scale plus the price of parameters and of places of modes."""
+    price = parameters * np.log(2.0 * points) + 2.0 * modes * np.log(points)
+    return cost / scale + float(price)
 
 
 def forward_selection(

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from identkit.methods.arrays import BoolArray
+from identkit.methods.arrays import BoolArray, FloatArray
 from identkit.methods.modal_problem import ModalProblem, ModelShape, Poles
 from identkit.methods.modal_solution import Solution, solve
 from identkit.methods.order_selection import (
@@ -48,13 +48,15 @@ def mode_cap(points: int) -> int:
 
 def mode_price(request: Request, points: int) -> float:
     """Return the decrease of chi^2 that one more mode must bring."""
-    return (4 if request.general else 3) * float(np.log(2.0 * points))
+    parameters = 4 if request.general else 3
+    return parameters * float(np.log(2.0 * points)) + 2.0 * float(np.log(points))
 
 
 def settle(solution: Solution, request: Request, scale: float) -> Solution:
     """Drop and add modes until the information criterion rests (or the number asked for)."""
     solution = _without_stray(solution)
     for _ in range(2 * MODE_CAP):
+        solution = with_leading_pivot(solution)
         changed = _dropped(solution, request, scale) or _added(solution, request, scale)
         if changed is None:
             return solution
@@ -62,11 +64,32 @@ def settle(solution: Solution, request: Request, scale: float) -> Solution:
     return solution
 
 
+def with_leading_pivot(solution: Solution) -> Solution:
+    """Name pivot the section of largest static deflection, if the search ended otherwise."""
+    shape, poles = solution.shape, solution.poles
+    if shape.base != "pivot" or shape.modes == 0:
+        return solution
+    first = int(shape.feedthrough)
+    residue = solution.state.coefficients[first : first + shape.sections]
+    order = leading_first(residue / poles.stiffness)
+    if order[0] == 0:
+        return solution
+    poles = Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
+    return solve(solution.problem, poles)
+
+
+def leading_first(static: FloatArray) -> list[int]:
+    """Order sections with the one of largest static deflection first."""
+    lead = int(np.argmax(np.abs(static)))
+    return [lead, *(k for k in range(static.size) if k != lead)]
+
+
 def _criterion(solution: Solution, scale: float) -> float:
     points = solution.problem.data.x.size
     freedom = max(2 * points - solution.shape.parameters, 1)
     noise = max(1.0, min(scale, solution.cost / freedom))
-    return information_criterion(solution.cost, noise, solution.shape.parameters, points)
+    shape = solution.shape
+    return information_criterion(solution.cost, noise, shape.parameters, shape.modes, points)
 
 
 def _dropped(solution: Solution, request: Request, scale: float) -> Solution | None:

@@ -10,9 +10,16 @@ coherence does), points that happen to be small get too much weight and the fit 
 is then scaled from the measured to the modelled magnitude, once. Whether it does is read off the
 data: the regression of the wiggles of ln v on those of ln |measured|^2.
 
+A variance estimated from few averages scatters from point to point, which costs efficiency and
+makes intervals too short. Where the residuals do not share the wiggles of the stated variance
+(regression of one on the other), it is smoothed along the frequency axis; single points that
+stand far out keep their own.
+
 Source: common practice in response estimation; the bias of data-dependent weights is discussed by
 R. Pintelon & J. Schoukens, *System Identification: A Frequency Domain Approach*, 2nd ed., 2012.
 """
+
+from collections.abc import Callable
 
 import numpy as np
 from scipy.ndimage import median_filter, uniform_filter1d
@@ -23,6 +30,8 @@ from identkit.methods.modal_solution import Solution, fitted_response
 LN2 = float(np.log(2.0))
 RELATIVE_FLOOR = 1e-9
 LARGEST_CORRECTION = 4.0
+SMALLEST_WINDOW = 15
+SMALLEST_WIGGLE = 0.02
 
 
 def start_variance(frequency: FloatArray, response: ComplexArray) -> FloatArray:
@@ -55,24 +64,31 @@ def updated_variance(
         Whether it was estimated; then it is estimated afresh from the residuals.
     """
     model = fitted_response(solution)
+    error = np.abs(response - model) ** 2
     if estimated:
-        return _from_residuals(np.abs(response - model) ** 2, model)
-    return _model_based(variance, response, model)
+        return _from_residuals(error, model)
+    return _without_scatter(_model_based(variance, response, model), error, model)
 
 
 def _from_residuals(error: FloatArray, model: ComplexArray) -> FloatArray:
     power = _power(model)
-    relative, floor = _relative_and_floor(error, power)
+    relative, floor = _relative_and_floor(error, power, _mean_by_median)
     shape = relative * power + floor
     level = median_filter(error / shape, _window(error.size), mode="nearest") / LN2
     level = uniform_filter1d(level, _window(error.size), mode="nearest")
     return np.asarray(shape * np.maximum(level, 1e-3), dtype=float)
 
 
-def _relative_and_floor(error: FloatArray, power: FloatArray) -> tuple[float, float]:
+def _mean_by_median(error: FloatArray) -> float:
+    return float(np.median(error)) / LN2
+
+
+def _relative_and_floor(
+    error: FloatArray, power: FloatArray, mean_of: Callable[[FloatArray], float]
+) -> tuple[float, float]:
     """Split the error in a part relative to power and a constant, on bins of equal power."""
     bins = np.array_split(np.argsort(power), max(2, min(12, error.size // 25)))
-    mean = np.array([np.median(error[part]) / LN2 for part in bins])
+    mean = np.array([mean_of(error[part]) for part in bins])
     level = np.array([np.median(power[part]) for part in bins])
     relative, floor = float(np.median(mean / level)), 0.0
     for _ in range(20):
@@ -95,6 +111,37 @@ def _model_based(variance: FloatArray, response: ComplexArray, model: ComplexArr
     return np.asarray(variance * factor, dtype=float)
 
 
+def _without_scatter(variance: FloatArray, error: FloatArray, model: ComplexArray) -> FloatArray:
+    """Smooth a variance whose wiggles are not in the residuals: they are its own error."""
+    if error.size < 4 * SMALLEST_WINDOW:
+        return variance
+    smooth = _smooth(variance, _power(model))
+    wiggle = variance / smooth - 1.0
+    if float(np.median(np.abs(wiggle))) < SMALLEST_WIGGLE:
+        return variance
+    ordinary = np.abs(np.log(variance / smooth)) < 4.0 * np.median(
+        np.abs(np.log(variance / smooth))
+    )
+    excess = error / smooth
+    excess = np.minimum(excess / max(float(np.mean(excess[ordinary])), 1e-300), 8.0) - 1.0
+    wiggle, excess = wiggle[ordinary], excess[ordinary]
+    if float(wiggle @ excess) / float(wiggle @ wiggle) > 0.5:
+        return variance
+    return np.where(ordinary, smooth, variance)
+
+
+def _smooth(variance: FloatArray, power: FloatArray) -> FloatArray:
+    """Return relative part and floor of a variance, times its slow variation."""
+    relative, floor = _relative_and_floor(variance, power, np.mean)
+    shape = relative * power + floor
+    ratio = variance / shape
+    typical = median_filter(ratio, _window(ratio.size), mode="nearest")
+    ratio = np.clip(ratio, typical / 4.0, typical * 4.0)
+    return np.asarray(
+        shape * uniform_filter1d(ratio, _window(ratio.size), mode="nearest"), dtype=float
+    )
+
+
 def _power(response: ComplexArray) -> FloatArray:
     power = np.abs(response) ** 2
     floor = 1e-24 * max(float(np.max(power, initial=0.0)), 1e-300)
@@ -102,4 +149,4 @@ def _power(response: ComplexArray) -> FloatArray:
 
 
 def _window(points: int) -> int:
-    return max(15, 2 * (points // 24) + 1)
+    return max(SMALLEST_WINDOW, 2 * (points // 24) + 1)

@@ -17,7 +17,13 @@ from identkit.methods.modal_problem import (
     times_jx,
 )
 from identkit.methods.order_selection import forward_selection
-from identkit.methods.order_settling import WIDEST, Request, mode_cap, mode_price
+from identkit.methods.order_settling import (
+    WIDEST,
+    Request,
+    leading_first,
+    mode_cap,
+    mode_price,
+)
 from identkit.methods.pole_relocation import relocate_poles, starting_sections
 
 START_SECTIONS = 16
@@ -96,14 +102,7 @@ def _with_pivot(data: ScaledData, poles: Poles, stiffness: FloatArray, rate: Flo
     if stiffness.size == 0:
         low = float(np.log(max(data.x[0] * 1.5, 1e-6)))
         return Poles(poles.delay, np.array([low]), np.array([np.log(0.4)]))
-    order = leading_first(data, poles)
-    return Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
-
-
-def leading_first(data: ScaledData, poles: Poles) -> list[int]:
-    """Order sections with the one of largest static deflection first."""
-    shape = ModelShape("none", poles.log_frequency.size, feedthrough=True)
+    shape = ModelShape("none", poles.log_frequency.size)
     state = ModalProblem(data, shape).linearise(poles)
-    static = np.abs(state.coefficients[1:]) / poles.stiffness
-    lead = int(np.argmax(static))
-    return [lead, *(k for k in range(static.size) if k != lead)]
+    order = leading_first(state.coefficients[1:] / poles.stiffness)
+    return Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
