@@ -329,6 +329,14 @@ def _read_record(path: Path) -> dict[str, Any]:
 
 
 def _input_entry(path: Path, known: dict[str, Any] | None) -> dict[str, Any]:
+    try:
+        return _known_or_read(path, known)
+    except OSError as error:
+        # The read stage says what is wrong with the file; here it only must not look unchanged.
+        return {"size": -1, "modified_ns": -1, "sha256": f"unreadable: {error.strerror}"}
+
+
+def _known_or_read(path: Path, known: dict[str, Any] | None) -> dict[str, Any]:
     status = path.stat()
     if known and (known["size"], known["modified_ns"]) == (status.st_size, status.st_mtime_ns):
         return known
