@@ -22,6 +22,7 @@ from identkit.readers.path_pattern import (
     PathPattern,
     relative_to,
 )
+from identkit.readers.path_pattern import CampaignFiles as CampaignFiles
 from identkit.readers.text import read_text
 from identkit.settings import ResponseSettings, Settings
 
@@ -113,14 +114,6 @@ def read_responses(
     )
 
 
-@dataclass(frozen=True)
-class CampaignFiles:
-    """The files of a campaign with their labels, and those whose labels are wrong."""
-
-    files: tuple[LabelledFile, ...]
-    strays: tuple[Problem, ...] = ()
-
-
 def find_files(
     files: str | Path | Sequence[str | Path], *, folder: Path, pattern: str | None = None
 ) -> CampaignFiles:
@@ -132,8 +125,7 @@ def find_files(
         If a pattern matches nothing or is malformed, or two files carry the same labels.
     """
     if isinstance(files, str):
-        found = PathPattern(files).find(folder)
-        return CampaignFiles(found.files, found.strays)
+        return PathPattern(files).find(folder)
     paths = [files] if isinstance(files, Path) else [Path(file) for file in files]
     if not paths:
         raise InputError(Problem("files", "an empty list", "at least one file"))
@@ -163,7 +155,7 @@ def read_campaign(
         With one problem per bad file, or if no good file is left.
     """
     choices = column_choices(options.columns, options.units)
-    campaign = _Campaign(bad=[(problem.place, problem) for problem in found.strays])
+    campaign = _Campaign(bad=[(problem.place, problem) for _, problem in found.strays])
     for done, file in enumerate(found.files, start=1):
         place = relative_to(file.path, folder)
         try:

@@ -4,7 +4,6 @@ A field never spans a ``/``; ``{temperature:g}`` asks for a number; ``{}`` stand
 no label. Fields are matched by the `parse` library, one folder of the path at a time.
 """
 
-import fnmatch
 import math
 import os
 import re
@@ -48,11 +47,16 @@ class LabelledFile:
 
 
 @dataclass(frozen=True)
-class FoundFiles:
+class CampaignFiles:
     """What a pattern finds: the files, and those that nearly match but carry a wrong label."""
 
     files: tuple[LabelledFile, ...]
-    strays: tuple[Problem, ...]
+    strays: tuple[tuple[Path, Problem], ...] = ()
+
+    @property
+    def paths(self) -> list[Path]:
+        """Every file that counts, good or stray: what a change of the campaign is seen by."""
+        return [file.path for file in self.files] + [path for path, _ in self.strays]
 
 
 @dataclass(frozen=True)
@@ -123,7 +127,7 @@ class PathPattern:
         names = [name for part in self._components for _, name, _, _ in part.pieces if name]
         return tuple(dict.fromkeys(names))
 
-    def find(self, folder: Path) -> FoundFiles:
+    def find(self, folder: Path) -> CampaignFiles:
         """Return every file under `folder` that matches, in natural order.
 
         Raises
@@ -134,18 +138,18 @@ class PathPattern:
         """
         start = Path("/") if self._absolute else folder
         found: list[tuple[Path, list[str], dict[str, Any]]] = []
-        strays: list[Problem] = []
+        strays: list[tuple[Path, Problem]] = []
         for path, names in self._candidates(start):
             labels = self._match(names)
             if labels is None:
-                strays.append(self._stray(path, folder))
+                strays.append((path, self._stray(path, folder)))
             else:
                 found.append((path, names, labels))
         files = self._labelled(found, strays, folder)
         if not files and not strays:
             raise InputError(self._nothing_found(start))
         _refuse_repeats(files, folder)
-        return FoundFiles(tuple(files), tuple(strays))
+        return CampaignFiles(tuple(files), tuple(strays))
 
     def label(self, path: Path) -> dict[str, Label]:
         """Return the labels of a file given by hand; none if its path does not fit the pattern."""
@@ -185,7 +189,7 @@ class PathPattern:
         labels: dict[str, Any] = {}
         for component, name in zip(self._components, names, strict=True):
             found = component.match(name)
-            if found is None or any(labels.get(k, v) != v for k, v in found.items()):
+            if found is None or any(k in labels and labels[k] != v for k, v in found.items()):
                 return None
             labels |= found
         return labels
@@ -193,7 +197,7 @@ class PathPattern:
     def _labelled(
         self,
         found: list[tuple[Path, list[str], dict[str, Any]]],
-        strays: list[Problem],
+        strays: list[tuple[Path, Problem]],
         folder: Path,
     ) -> list[LabelledFile]:
         fixed = next(
@@ -207,7 +211,7 @@ class PathPattern:
                 checked = _checked_labels(labels, relative_to(path, folder))
                 files.append(LabelledFile(path, identity, checked))
             except InputError as error:
-                strays.extend(error.problems)
+                strays += [(path, problem) for problem in error.problems]
         return sorted(files, key=lambda file: natural_key(file.identity))
 
     def _stray(self, path: Path, folder: Path) -> Problem:
@@ -221,10 +225,7 @@ class PathPattern:
             if not component.is_fixed or not (folder / component.fixed_name).is_dir():
                 break
             folder = folder / component.fixed_name
-        example = next(_some_files(folder), None)
-        what = "an empty folder" if example is None else f"for example {example}"
-        if not folder.is_dir():
-            what = "no such folder"
+        what = _what_is_in(folder)
         found = f'no file that matches "{self.text}"; nearest existing folder {folder}: {what}'
         return Problem(self.place, found, "a pattern that matches at least one file")
 
@@ -241,7 +242,7 @@ def _folders(
     if component.is_fixed:
         inner = folder / component.fixed_name
         if inner.is_dir():
-            yield inner, [*names, component.text]
+            yield inner, [*names, component.fixed_name]
         return
     for entry in _entries(folder, component):
         if entry.is_dir() and component.match(entry.name) is not None:
@@ -260,11 +261,15 @@ def _entries(folder: Path, component: _Component) -> list[Path]:
     )
 
 
-def _some_files(folder: Path) -> Iterator[Path]:
-    """Give files below a folder, the likely ones only."""
-    for path in folder.rglob("*") if folder.is_dir() else ():
-        if any(fnmatch.fnmatch(path.name, f"*{suffix}") for suffix in _SUFFIXES):
-            yield path
+def _what_is_in(folder: Path) -> str:
+    """Say in a few words what a folder holds, with one file of measurements if there is any."""
+    if not folder.is_dir():
+        return "no such folder"
+    if not any(folder.iterdir()):
+        return "an empty folder"
+    likely = (path for path in folder.rglob("*") if path.suffix.lower() in _SUFFIXES)
+    example = next(likely, None)
+    return f"for example {example}" if example else "no file of measurements in it"
 
 
 def _identities(paths: list[str], pattern: str) -> list[str]:
