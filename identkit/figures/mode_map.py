@@ -167,9 +167,17 @@ def _panel(axes: Axes, picked: ModeMap, at: int, x: FloatArray, limit: float) ->
             color=colour,
             lw=0.7,
             alpha=0.55,
+            rasterized=True,
         )
         axes.plot(
-            x[chosen], deviation[chosen], marker, color=colour, ms=2.6, mec="none", alpha=0.75
+            x[chosen],
+            deviation[chosen],
+            marker,
+            color=colour,
+            ms=2.6,
+            mec="none",
+            alpha=0.75,
+            rasterized=True,
         )
     _beyond(axes, picked, at, x, limit)
     axes.set_title(f"{picked.modes[at]}  {frequency_label(picked.population_frequency[at])}")

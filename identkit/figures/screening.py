@@ -157,13 +157,13 @@ def _sheet(axes: Axes, picked: ScreeningOverview, layout: Layout) -> None:
         row, column = np.nonzero(marked[at])
         shift = (at - (count - 1) / 2.0) * 0.28
         axes.plot(column + shift, row, marker, color=colour, ms=5, mec=PAPER, mew=0.5)
-    _tile_edges(axes, down, across)
+    _tile_edges(axes, down, across, layout)
 
 
-def _tile_edges(axes: Axes, down: tuple[str, ...], across: tuple[str, ...]) -> None:
+def _tile_edges(axes: Axes, down: tuple[str, ...], across: tuple[str, ...], layout: Layout) -> None:
     axes.set_xticks(range(len(across)), across)
     axes.set_yticks(range(len(down)), down)
-    crowded = sum(len(text) for text in across) > 90 or any(len(text) > 6 for text in across)
+    crowded = sum(len(text) + 2 for text in across) > 14.0 * layout.width
     axes.tick_params(axis="x", labelsize="x-small", rotation=90 if crowded else 0, length=0)
     axes.tick_params(axis="y", labelsize="x-small", length=0)
     axes.set_xticks(np.arange(-0.5, len(across)), minor=True)

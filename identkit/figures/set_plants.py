@@ -1,12 +1,15 @@
 """The plants of a set file as labelled data, and their reach along frequency."""
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from identkit.methods.arrays import ComplexArray, FloatArray
 from identkit.plant_set.fields import FittedPlant, Matrices, PlantSetFields
+from identkit.plant_set.pointwise import pointwise_reach
 from identkit.plant_set.response import (
     nominal_response,
     plant_response,
@@ -33,7 +36,7 @@ def labelled(plants: Sequence[FittedPlant]) -> xr.Dataset:
     )
 
 
-def _column(plants: Sequence[FittedPlant], name: str) -> np.ndarray:
+def _column(plants: Sequence[FittedPlant], name: str) -> NDArray[Any]:
     values = [plant.labels.get(name) for plant in plants]
     if all(isinstance(value, int | float) for value in values if value is not None):
         return np.array([np.nan if value is None else value for value in values], dtype=float)
@@ -41,7 +44,7 @@ def _column(plants: Sequence[FittedPlant], name: str) -> np.ndarray:
 
 
 def reach_along(contents: PlantSetFields, frequency: FloatArray) -> FloatArray | None:
-    """Return the reach of every plant at every frequency.
+    """Return the reach of every plant of a set at every frequency.
 
     Parameters
     ----------
@@ -53,32 +56,33 @@ def reach_along(contents: PlantSetFields, frequency: FloatArray) -> FloatArray |
     Returns
     -------
     FloatArray or None
-        (plants, points); None for matrix plants, for sampled sets and for forms whose reach is
-        not one number per frequency.
+        (plants, points); None for sampled sets and for forms whose reach is not one number per
+        frequency.
     """
-    if not contents.is_scalar or contents.form not in FORMS or contents.time.period > 0.0:
+    if contents.form not in FORMS or contents.time.period > 0.0:
         return None
-    nominal = nominal_response(contents, frequency)[0, 0]
-    plants = np.array([plant_response(plant, frequency)[0, 0] for plant in contents.plants])
-    if not len(plants):
-        return np.zeros((0, frequency.size))
-    return error_of(contents.form, plants, nominal) / weight_along(contents, frequency)
+    nominal = _points_first(nominal_response(contents, frequency))
+    outputs, inputs = nominal.shape[1:]
+    sizes = {"additive": (outputs, inputs), "input-multiplicative": (inputs, inputs)}
+    rows, columns = sizes.get(contents.form, (outputs, outputs))
+    left = _weight(contents, contents.weights.left, rows, frequency)
+    right = _weight(contents, contents.weights.right, columns, frequency)
+    reach = [
+        pointwise_reach(
+            contents.form, _points_first(plant_response(plant, frequency)), nominal, left, right
+        )
+        for plant in contents.plants
+    ]
+    return np.array(reach, dtype=float).reshape(len(reach), frequency.size)
 
 
-def error_of(form: str, plants: ComplexArray, nominal: ComplexArray) -> FloatArray:
-    """Return the magnitude of each plant's error in one of the scalar forms."""
-    if form == "additive":
-        return np.abs(plants - nominal)
-    if form == "inverse-multiplicative":
-        return np.abs(nominal / plants - 1.0)
-    return np.abs(plants / nominal - 1.0)
+def _weight(
+    contents: PlantSetFields, side: Matrices | None, size: int, frequency: FloatArray
+) -> ComplexArray:
+    if side is None:
+        return np.broadcast_to(np.eye(size, dtype=complex), (frequency.size, size, size))
+    return _points_first(state_space_response(side, set_points(contents, frequency)))
 
 
-def weight_along(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
-    """Return the product of the scalar weights' magnitudes at (points,) Hz."""
-    points = set_points(contents, frequency)
-    magnitude = np.ones(frequency.size)
-    for side in (contents.weights.left, contents.weights.right):
-        if isinstance(side, Matrices):
-            magnitude = magnitude * np.abs(state_space_response(side, points)[0, 0])
-    return magnitude
+def _points_first(response: ComplexArray) -> ComplexArray:
+    return np.moveaxis(response, -1, 0)

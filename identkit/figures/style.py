@@ -106,6 +106,7 @@ def house_settings(font_size: float) -> dict[Any, Any]:
         "grid.color": RULE,
         "grid.linewidth": 0.6,
         "text.color": INK,
+        "text.parse_math": False,
         "xtick.color": SOFT_INK,
         "ytick.color": SOFT_INK,
         "xtick.labelcolor": INK,

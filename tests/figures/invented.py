@@ -1,15 +1,19 @@
 """Datasets of a small invented study, filled from its truth, for tests of figures and report."""
 
+from dataclasses import replace
+
 import numpy as np
 import xarray as xr
 
-from identkit.methods.modal_model import modal_response
-from identkit.synthetic import invent_campaign, to_dataset
+from identkit.figures.fit_quality import plant_of
+from identkit.methods.magnitude_weight import fit_magnitude_weight
+from identkit.methods.modal_model import ModalParameters, modal_response
+from identkit.methods.state_space import frequency_response, modal_realisation
+from identkit.plant_set import fields
+from identkit.synthetic import InventedBench, invent_campaign, to_dataset
 
 
 def small_campaign(units=6, heads=2, temperatures=(10.0, 50.0), seed=3, points=300):
-    from identkit.synthetic import InventedBench
-
     return invent_campaign(
         seed=seed,
         units=units,
@@ -146,8 +150,100 @@ def population_of(modes):
     )
 
 
-def relative_errors(campaign):
-    """(responses, points) |P / P0 - 1| against the first plant of the campaign."""
-    plants = np.array([modal_response(campaign.frequency, r.plant) for r in campaign.responses])
-    nominal = plants[:: len(plants) // 5].mean(axis=0)
-    return np.abs(plants / nominal - 1.0), nominal
+def plant_set_of(modes, *, order=6, points=240, excluded=()):
+    """A set around the mean plant of the invented modes, with a weight that holds them all."""
+    names = [str(name) for name in modes["response"].values if str(name) not in dict(excluded)]
+    used = modes.sel(response=names)
+    plants = [plant_of(used, at) for at in range(len(names))]
+    nominal = modal_realisation(_mean_plant(used), delay_order=2)
+    frequency = np.geomspace(50.0, 22000.0, points)
+    over = frequency_response(nominal, frequency).reshape(-1)
+    error = np.array([np.abs(modal_response(frequency, p) / over - 1.0) for p in plants])
+    radius = np.maximum(error.max(axis=0) * 1.02, 0.02)
+    weight = fit_magnitude_weight(frequency, radius, order)
+    fitted = tuple(_fitted(used, at, plant) for at, plant in enumerate(plants))
+    return _set(nominal, weight, frequency, radius, error, fitted, excluded)
+
+
+def _mean_plant(modes):
+    chosen = modes.isel(mode=slice(0, 8)).mean("response")
+    return ModalParameters(
+        modal_frequency=chosen["modal_frequency"].values,
+        damping_ratio=chosen["damping_ratio"].values,
+        residue=chosen["residue"].values[:, 0, 0],
+        residue_rate=np.zeros(8),
+        base="pivot",
+        base_frequency=float(chosen["base_frequency"]),
+        base_damping_ratio=float(chosen["base_damping_ratio"]),
+        base_residue=float(chosen["base_residue"].values[0, 0]),
+        feedthrough=float(chosen["feedthrough"].values[0, 0]),
+        delay=float(chosen["delay"]),
+    )
+
+
+def _fitted(modes, at, plant):
+    one = modes.isel(response=at)
+    labels = {
+        name: one[name].item() for name in ("unit", "head", "temperature", "lot") if name in one
+    }
+    return fields.FittedPlant(
+        response=str(one["response"].item()),
+        labels=labels,
+        modal_frequency=plant.modal_frequency,
+        damping_ratio=plant.damping_ratio,
+        residue=plant.residue[:, None, None],
+        residue_rate=plant.residue_rate[:, None, None],
+        base="pivot",
+        base_gain=np.zeros((1, 1)),
+        base_frequency=plant.base_frequency,
+        base_damping_ratio=plant.base_damping_ratio,
+        base_residue=np.array([[plant.base_residue]]),
+        feedthrough=np.array([[plant.feedthrough]]),
+        delay=plant.delay,
+    )
+
+
+def _set(nominal, weight, frequency, radius, error, plants, excluded):
+    weight_matrices = fields.Matrices(*weight.state_space())
+    magnitude = weight.magnitude(frequency)
+    top = error.argmax(axis=0)
+    set_by = tuple(plants[k].response if error[k, at] > 0.02 else "" for at, k in enumerate(top))
+    reach = error / magnitude
+    plants = tuple(
+        replace(p, reach=float(r.max()), reach_frequency=float(frequency[r.argmax()]))
+        for p, r in zip(plants, reach, strict=True)
+    )
+    first = sorted(plants, key=lambda p: -p.reach)[:4]
+    certificate = fields.Certificate(
+        measured=fields.Measured(
+            held=len(plants),
+            of=len(plants),
+            setting=len(set(set_by) - {""}),
+            excluded=tuple(fields.Excluded(*pair) for pair in excluded),
+        ),
+        between_grid=fields.BetweenGrid("exact norm", float(reach.max()), 1e-6),
+        optimality=fields.Optimality(
+            weight.excess_db, weight.floor_db, weight.gap_db, weight.order
+        ),
+        envelope=fields.Envelope(temperature=(10.0, 50.0)),
+        audit=fields.AuditVerdict(passed=True),
+    )
+    empty = fields.Interconnection(*(np.zeros((0, 0)) for _ in range(4)))
+    return fields.PlantSetFields(
+        form="multiplicative",
+        time=fields.TimeBase(),
+        inputs=(fields.Channel("drive", "A"),),
+        outputs=(fields.Channel("position", "um"),),
+        band=(50.0, 22000.0),
+        nominal=fields.Nominal(nominal.A, nominal.B, nominal.C, nominal.D),
+        weights=fields.Weights(left=weight_matrices),
+        parameters=(),
+        interconnection=empty,
+        plants=plants,
+        radii=fields.Radii(frequency, radius, magnitude, set_by, np.ones(frequency.size), 0.02),
+        certificate=certificate,
+        attribution=tuple(
+            fields.Attribution(p.response, p.reach_frequency, p.reach, "M5") for p in first
+        ),
+        provenance=fields.Provenance(versions={"identkit": "0.1.0"}, time="2026-05-01T10:00:00"),
+    )

@@ -1,0 +1,175 @@
+"""The report: one self-contained page, verdict first."""
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from jinja2 import Environment, PackageLoader, StrictUndefined, select_autoescape
+
+from identkit.atomic import write_text
+from identkit.figures.radius import readable_names
+from identkit.figures.style import frequency_label
+from identkit.grids import datasets
+from identkit.report import tables
+from identkit.report.contents import ReportInput
+from identkit.report.gallery import Exhibit, hang, population_modes
+from identkit.report.numbers import number
+from identkit.report.tables import Table
+from identkit.report.verdict import headline, verdict
+
+__all__ = ["ReportInput", "build_report", "write_report"]
+
+CAUTIONS = (
+    "Excitation tests and changes to a controller can damage hardware and hurt people. Keep "
+    "people clear, limit force, travel and current, and have an emergency stop in reach.",
+    "A coverage figure is a statement about sampled units under stated assumptions. It is no "
+    "safety certificate.",
+    "The set says what was measured and fitted inside its band and conditions. Outside them "
+    "nothing is known from this report.",
+    "Local codes, standards and the judgement of licensed practitioners prevail over anything "
+    "written here.",
+)
+
+
+@dataclass(frozen=True)
+class Tile:
+    """One key figure: a short name, its value, a few words."""
+
+    name: str
+    value: str
+    words: str
+
+
+def write_report(given: ReportInput, results_folder: Path) -> Path:
+    """Write ``figures/`` and ``report.html`` into a results folder.
+
+    Parameters
+    ----------
+    given
+        What the stages wrote.
+    results_folder
+        Receives the pictures, then the page; each file is replaced whole or not at all.
+
+    Returns
+    -------
+    Path
+        Of the page.
+    """
+    return build_report(results_folder, given)
+
+
+def build_report(folder: Path, context: ReportInput) -> Path:
+    """Write the report of `context` into `folder`; see `write_report`."""
+    exhibits = hang(context, folder / "figures")
+    page = folder / "report.html"
+    write_text(page, render(context, exhibits))
+    return page
+
+
+def render(given: ReportInput, exhibits: Mapping[str, Exhibit]) -> str:
+    """Return the page as HTML that needs nothing from outside.
+
+    Parameters
+    ----------
+    given
+        What the stages wrote.
+    exhibits
+        Pictures by name; one that is missing leaves no gap.
+    """
+    environment = Environment(
+        loader=PackageLoader("identkit", "report"),
+        autoescape=select_autoescape(default=True, default_for_string=True),
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    style = environment.loader.get_source(environment, "page.css")[0]  # type: ignore[union-attr]
+    return environment.get_template("page.html").render(
+        style=style,
+        study=given.study_name,
+        subtitle=_subtitle(given),
+        headline=headline(given),
+        tiles=_tiles(given),
+        sentences=list(given.verdict) or verdict(given),
+        exhibits=exhibits,
+        tables=_all_tables(given),
+        provenance=_provenance(given),
+        cautions=CAUTIONS,
+    )
+
+
+def _subtitle(given: ReportInput) -> str:
+    parts = []
+    first = datasets(given.responses)[0]
+    drive, output = first["input"].values, first["output"].values
+    parts.append(f"{', '.join(map(str, drive))} to {', '.join(map(str, output))}")
+    if given.plant_set is not None:
+        low, high = given.plant_set.band
+        parts.append(f"{given.plant_set.form} set")
+        parts.append(f"{frequency_label(low)} to {frequency_label(high)}")
+        if given.plant_set.provenance.time:
+            parts.append(given.plant_set.provenance.time[:10])
+    return " · ".join(parts)
+
+
+def _tiles(given: ReportInput) -> list[Tile]:
+    tiles = []
+    names, frequency = population_modes(given)
+    contents = given.plant_set
+    if contents is not None:
+        measured, best = contents.certificate.measured, contents.certificate.optimality
+        out = len(measured.excluded)
+        words = f"responses; {out} left out" if out else "responses used"
+        tiles.append(Tile("Held", f"{measured.held} of {measured.of}", words))
+        words = f"{number(max(best.gap_db, 0.0), 2)} dB from the best possible"
+        tiles.append(Tile("Weight", f"order {best.order}", words))
+    if names:
+        span = f"{frequency_label(frequency.min())} to {frequency_label(frequency.max())}"
+        tiles.append(Tile("Modes", str(len(names)), span))
+    if contents is not None and contents.attribution:
+        top = max(contents.attribution, key=lambda each: each.reach)
+        unit = readable_names(contents).get(top.label, top.label)
+        place = " · ".join(part for part in (frequency_label(top.frequency), top.mode) if part)
+        tiles.append(Tile("Set by", unit, f"near {place}"))
+    return tiles
+
+
+def _all_tables(given: ReportInput) -> dict[str, Table]:
+    names, frequency = population_modes(given)
+    found = {
+        "attribution": tables.attribution_table(given),
+        "worst": tables.worst_table(given, names, frequency),
+        "population": tables.population_table(given),
+        "heads": tables.head_table(given),
+        "mode_outcomes": tables.mode_outcome_table(given),
+        "fit_outcomes": tables.fit_outcome_table(given),
+        "marks": tables.marks_table(given),
+        "skipped": tables.skipped_table(given),
+        "excluded": tables.excluded_table(given),
+        "orders": tables.order_table(given),
+        "audit": tables.audit_table(given),
+    }
+    return {name: table for name, table in found.items() if table is not None}
+
+
+def _provenance(given: ReportInput) -> dict[str, Any]:
+    recorded = given.plant_set.provenance if given.plant_set is not None else None
+    run = given.run
+    versions = {"python": run.get("python", ""), **run.get("libraries", {})}
+    if recorded is not None:
+        versions = {**versions, **recorded.versions}
+    stages = {
+        name: f"{float(entry.get('seconds', 0.0)):.2f} s"
+        for name, entry in run.get("stages", {}).items()
+    }
+    inputs = {name: entry.get("sha256", "") for name, entry in run.get("inputs", {}).items()}
+    settings = recorded.settings if recorded is not None else {}
+    return {
+        "versions": {name: str(value) for name, value in versions.items() if value},
+        "version": str(run.get("version", "")),
+        "stages": stages,
+        "inputs": inputs or (dict(recorded.input_digests) if recorded is not None else {}),
+        "settings": json.dumps(settings, indent=1, default=str) if settings else "",
+    }

@@ -1,0 +1,308 @@
+"""The verdict: what a person may rely on, in sentences that each name their basis."""
+
+import json
+import re
+from collections import Counter, defaultdict
+from dataclasses import dataclass
+
+import numpy as np
+
+from identkit.figures.labels import natural_key, units_of
+from identkit.figures.radius import readable_names
+from identkit.figures.style import frequency_label
+from identkit.grids import datasets
+from identkit.methods.arrays import FloatArray
+from identkit.outcomes import Outcome
+from identkit.plant_set.fields import Excluded, PlantSetFields
+from identkit.report.contents import ReportInput
+from identkit.report.numbers import counted, listed, number, percent
+
+HELD, NOT_HELD, NO_SET = "held", "not held", "no set"
+
+
+@dataclass(frozen=True)
+class Headline:
+    """The answer in a few words.
+
+    Attributes
+    ----------
+    state
+        "held", "not held" or "no set".
+    sentence
+        One sentence.
+    """
+
+    state: str
+    sentence: str
+
+
+def headline(given: ReportInput) -> Headline:
+    """Return the answer in a few words: whether the set holds what was measured and used."""
+    contents = given.plant_set
+    if contents is None:
+        return Headline(NO_SET, "No plant set was made; the stages that ran are below.")
+    measured, audit = contents.certificate.measured, contents.certificate.audit
+    if audit is not None and not audit.passed:
+        failed = audit.failed[0] if audit.failed else "no reason is recorded"
+        return Headline(NOT_HELD, f"The audit failed: {_ended(failed)}")
+    if measured.held < measured.of:
+        missing = measured.of - measured.held
+        return Headline(
+            NOT_HELD, f"{counted(missing, 'response')} of {measured.of} used lie outside the set."
+        )
+    return Headline(HELD, f"The set holds all {measured.of} measured responses that were used.")
+
+
+def verdict(given: ReportInput) -> list[str]:
+    """Return the verdict in plain sentences, each with its basis.
+
+    Parameters
+    ----------
+    given
+        What the stages wrote; a stage that did not run adds no sentence.
+    """
+    sentences = [_held(given), *_left_out(given), *_marked_but_kept(given), _modes(given)]
+    makers = (_odd_modes, _shifted, _weight, _between_grid, _setters, _limit_of_control)
+    sentences += [make(given) for make in (*makers, _audit, _coverage, _envelope)]
+    return [sentence for sentence in sentences if sentence]
+
+
+def _held(given: ReportInput) -> str:
+    read = sum(part.sizes["response"] for part in datasets(given.responses))
+    if given.plant_set is None:
+        return f"{counted(read, 'response')} read; no set was made."
+    measured = given.plant_set.certificate.measured
+    left = len(measured.excluded)
+    rest = f"{read} read; {left} left out" if left else f"{read} read, none left out"
+    return f"Holds {measured.held} of {measured.of} measured responses used ({rest})."
+
+
+def _left_out(given: ReportInput) -> list[str]:
+    sentences = []
+    if given.plant_set is not None:
+        by_reason: dict[str, list[str]] = defaultdict(list)
+        for excluded in given.plant_set.certificate.measured.excluded:
+            by_reason[excluded.reason].append(excluded.label)
+        owners = _owners(given)
+        for reason, names in by_reason.items():
+            units = sorted({owners.get(name, name) for name in names}, key=natural_key)
+            whose = f"unit {listed(units)}" if len(units) == 1 else f"units {listed(units)}"
+            sentences.append(
+                f"Left out of the bound: {counted(len(names), 'response')} of {whose} "
+                f"({reason}). Nothing is claimed about them."
+            )
+    skipped = skipped_files(given)
+    if skipped:
+        verb = "was" if len(skipped) == 1 else "were"
+        files = listed([name for name, _ in skipped], 3)
+        sentences.append(
+            f"{counted(len(skipped), 'file')} could not be used and {verb} skipped: {files}."
+        )
+    return sentences
+
+
+def _owners(given: ReportInput) -> dict[str, str]:
+    owners: dict[str, str] = {}
+    for part in datasets(given.responses):
+        names = part["response"].values.astype(str).tolist()
+        owners.update(zip(names, units_of(part).tolist(), strict=True))
+    return owners
+
+
+def skipped_files(given: ReportInput) -> list[tuple[str, str]]:
+    """Return (file, reason) of every file that was skipped when the responses were read."""
+    text = given.responses.attrs.get("skipped_files") or "[]"
+    return [(str(entry["file"]), str(entry["reason"])) for entry in json.loads(text)]
+
+
+def excluded_names(contents: PlantSetFields | None) -> dict[str, str]:
+    """Return the responses left out of the bound, each with its reason."""
+    if contents is None:
+        return {}
+    excluded: tuple[Excluded, ...] = contents.certificate.measured.excluded
+    return {each.label: each.reason for each in excluded}
+
+
+def _marked_but_kept(given: ReportInput) -> list[str]:
+    if given.screening is None:
+        return []
+    out = excluded_names(given.plant_set)
+    counts: Counter[str] = Counter()
+    kept = 0
+    for part in datasets(given.screening):
+        marks = part["mark"].values.astype(str).tolist()
+        for name, row in zip(part["response"].values, part["response_mark"].values, strict=True):
+            if row.any() and str(name) not in out:
+                kept += 1
+                counts.update(mark for mark, hit in zip(marks, row, strict=True) if hit)
+    if not kept:
+        return []
+    kinds = listed([f"{count} as {mark}" for mark, count in counts.most_common()])
+    return [
+        f"Screening marked {counted(kept, 'response')} that stayed in the bound ({kinds}): marks "
+        f"never drop anything, so look at them before relying on the set."
+    ]
+
+
+def _modes(given: ReportInput) -> str:
+    if given.population is None:
+        return ""
+    spread = frequency_spread(given)
+    value = given.population["population_value"].sel(quantity="modal_frequency").values
+    names = given.population["mode"].values.astype(str)
+    if not names.size:
+        return "No mode is common to the responses."
+    span = f"from {frequency_label(value.min())} to {frequency_label(value.max())}"
+    sentence = f"{counted(len(names), 'mode')} describe{'s' * (len(names) == 1)} the population, "
+    sentence += span if len(names) > 1 else f"at {frequency_label(value[0])}"
+    if not np.isfinite(spread).any():
+        return sentence + "."
+    widest = int(np.nanargmax(spread))
+    return (
+        f"{sentence}; between plants at one temperature their frequencies spread by "
+        f"{percent(np.nanmin(spread))} to {percent(np.nanmax(spread))} (one sigma, error of the "
+        f"fits taken out), most for {names[widest]} at {frequency_label(value[widest])}."
+    )
+
+
+def frequency_spread(given: ReportInput) -> FloatArray:
+    """Return each population mode's relative frequency spread between plants, one sigma."""
+    if given.population is None:
+        return np.zeros(0)
+    chosen = given.population.sel(quantity="modal_frequency")
+    parts = [
+        chosen[name].values for name in ("unit_deviation", "head_deviation", "residual_deviation")
+    ]
+    known = np.isfinite(parts).any(axis=0)
+    return np.where(known, np.sqrt(np.nansum(np.square(parts), axis=0)), np.nan)
+
+
+def _odd_modes(given: ReportInput) -> str:
+    if given.modes is None or "mode_in_population" not in given.modes:
+        return ""
+    extra = given.modes.isel(mode=~given.modes["mode_in_population"].values.astype(bool))
+    units = units_of(given.modes)
+    found = []
+    for at in range(extra.sizes["mode"]):
+        frequency = extra["modal_frequency"].values[:, at]
+        owners = sorted(set(units[np.isfinite(frequency)].tolist()), key=natural_key)
+        if owners:
+            place = frequency_label(float(np.nanmedian(frequency)))
+            found.append(f"{extra['mode'].values[at]} near {place} ({listed(owners, 3)})")
+    if not found:
+        return ""
+    return f"Modes that the population does not have: {listed(found, 4)}; inspect these units."
+
+
+def _shifted(given: ReportInput) -> str:
+    if given.modes is None or "mode_outcome" not in given.modes:
+        return ""
+    hits = given.modes["mode_outcome"].values == Outcome.MODE_SHIFTED
+    units = units_of(given.modes)
+    by_unit: dict[str, list[str]] = {}
+    for at, name in enumerate(given.modes["mode"].values.astype(str)):
+        for unit in sorted(set(units[hits[:, at]].tolist())):
+            by_unit.setdefault(unit, []).append(str(name))
+    if not by_unit:
+        return ""
+    ordered = sorted(by_unit, key=natural_key)
+    shown = listed([f"{listed(by_unit[unit])} of {unit}" for unit in ordered], 4)
+    return f"Far from where the population has them stand {shown}: kept out of its spread; inspect."
+
+
+def _weight(given: ReportInput) -> str:
+    if given.plant_set is None:
+        return ""
+    best = given.plant_set.certificate.optimality
+    return (
+        f"Weight of order {best.order} is within {number(max(best.gap_db, 0.0), 2)} dB of the "
+        f"best possible of that order: it exceeds the required radius times the allowed profile "
+        f"by at most {number(best.excess_db)} dB, and no weight of this order can do better than "
+        f"{number(best.floor_db)} dB at these frequencies (linear program, proved floor)."
+    )
+
+
+def _between_grid(given: ReportInput) -> str:
+    if given.plant_set is None:
+        return ""
+    between = given.plant_set.certificate.between_grid
+    worst = f"1 + {number(between.worst - 1.0, 2)}" if 0 < between.worst - 1.0 < 1e-3 else ""
+    return (
+        f"Between the measured frequencies the largest reach found is "
+        f"{worst or number(between.worst, 6)} ({between.method}; tolerance "
+        f"{number(between.tolerance, 2)})."
+    )
+
+
+def _setters(given: ReportInput) -> str:
+    contents = given.plant_set
+    if contents is None or not contents.attribution:
+        return ""
+    names = readable_names(contents)
+    shown = []
+    for entry in sorted(contents.attribution, key=lambda each: -each.reach):
+        mode = f" ({entry.mode})" if entry.mode else ""
+        name = names.get(entry.label, entry.label)
+        shown.append(f"{name} near {frequency_label(entry.frequency)}{mode}")
+    return f"The bound is set by {listed(shown, 3)}: improving anything else gains nothing there."
+
+
+def _limit_of_control(given: ReportInput) -> str:
+    contents = given.plant_set
+    if contents is None or "multiplicative" not in contents.form:
+        return ""
+    radii = contents.radii
+    above = np.flatnonzero(radii.weight_magnitude >= 1.0)
+    if contents.form == "inverse-multiplicative":
+        return ""
+    if not above.size:
+        return "The weight stays below 1 (100 %) over the whole band."
+    return (
+        f"The weight first passes 1 (100 %) at {frequency_label(radii.frequency[above[0]])}: a "
+        f"loop that rests on this set alone must keep its complementary sensitivity below 1 "
+        f"there (|W T| < 1, Doyle and Stein 1981)."
+    )
+
+
+def _audit(given: ReportInput) -> str:
+    if given.plant_set is None or given.plant_set.certificate.audit is None:
+        return ""
+    audit = given.plant_set.certificate.audit
+    if audit.passed:
+        return (
+            "The audit passed: reach of every plant was computed again from the set file alone, "
+            "by code that shares nothing with the code that made the set."
+        )
+    forced = " The set file was written all the same, because that was asked for." * audit.forced
+    return f"The audit failed: {_ended('; '.join(audit.failed))}{forced}"
+
+
+def _coverage(given: ReportInput) -> str:
+    if given.coverage.get("sentence"):
+        return str(given.coverage["sentence"])
+    stated = given.plant_set.certificate.coverage if given.plant_set is not None else None
+    if stated is None:
+        return (
+            "The set holds the plants that were measured; nothing is claimed about the next unit. "
+            "No coverage figure is a safety certificate."
+        )
+    return (
+        f"With {percent(stated.confidence)} confidence the set holds at least "
+        f"{percent(stated.content)} of all units ({stated.method}, {counted(stated.units, 'unit')}"
+        f"). This figure is no safety certificate."
+    )
+
+
+def _envelope(given: ReportInput) -> str:
+    if given.plant_set is None:
+        return ""
+    low, high = given.plant_set.band
+    text = f"Everything is claimed from {frequency_label(low)} to {frequency_label(high)}"
+    temperature = given.plant_set.certificate.envelope.temperature
+    if temperature is not None:
+        text += f" and at the temperatures measured ({temperature[0]:g} to {temperature[1]:g} °C)"
+    return text + "; outside, nothing is."
+
+
+def _ended(sentence: str) -> str:
+    return re.sub(r"[.;\s]*$", "", sentence) + "."
