@@ -17,6 +17,8 @@ from identkit.plant_set.fields import (
     Coverage,
     Envelope,
     Excluded,
+    Extension,
+    FurtherCeiling,
     Interconnection,
     Matrices,
     Measured,
@@ -195,7 +197,20 @@ def _radii(node: Node) -> Radii:
         node.at("allowed_excess").vector(points),
         node.at("floor").number(),
         None if ceiling is None else ceiling.vector(points),
+        _optional(node.maybe("extension"), _extension),
+        _optional(node.maybe("further_ceiling"), _further_ceiling),
     )
+
+
+def _extension(node: Node) -> Extension:
+    return Extension(
+        node.at("factor").number(), node.at("frequency").vector(), node.at("at_infinity").flag()
+    )
+
+
+def _further_ceiling(node: Node) -> FurtherCeiling:
+    frequency = node.at("frequency").vector()
+    return FurtherCeiling(frequency, node.at("value").vector(frequency.size))
 
 
 def _certificate(node: Node) -> Certificate:

@@ -152,6 +152,33 @@ class FittedPlant:
 
 
 @dataclass(frozen=True, eq=False)
+class Extension:
+    """How the weight goes on outside its points: within `factor` of the nearest end.
+
+    Attributes
+    ----------
+    factor
+        At least 1.
+    frequency
+        (points,) Hz, where it was kept there.
+    at_infinity
+        Whether it was kept at infinite frequency too.
+    """
+
+    factor: float
+    frequency: FloatArray
+    at_infinity: bool
+
+
+@dataclass(frozen=True, eq=False)
+class FurtherCeiling:
+    """Absolute limits `value` of the weight at `frequency` (Hz) where no radius is given."""
+
+    frequency: FloatArray
+    value: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
 class Radii:
     """Required radius and weight at every frequency (points,) where the weight was bounded.
 
@@ -169,6 +196,8 @@ class Radii:
         Smallest radius ever bounded.
     ceiling
         Absolute limit of the weight, or None.
+    extension, further_ceiling
+        What else the weight was asked to keep, or None.
     """
 
     frequency: FloatArray
@@ -178,6 +207,8 @@ class Radii:
     allowed_excess: FloatArray
     floor: float
     ceiling: FloatArray | None = None
+    extension: Extension | None = None
+    further_ceiling: FurtherCeiling | None = None
 
 
 @dataclass(frozen=True)

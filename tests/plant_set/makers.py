@@ -1,10 +1,14 @@
 """Small plant sets made from plain arrays, so that the set file is tested without its builder."""
 
+import sys
 from dataclasses import replace
 
 import numpy as np
 
+from identkit.methods.magnitude_weight import fit_magnitude_weight
+from identkit.methods.radius_problem import OUTSIDE_DECADES, OUTSIDE_POINTS
 from identkit.plant_set import fields as f
+from identkit.plant_set.claims import excess_db
 from identkit.plant_set.interconnection import output_multiplicative
 from identkit.plant_set.model import PlantSet
 from identkit.plant_set.reach import Surroundings, reach_of_plants
@@ -13,6 +17,7 @@ from identkit.plant_set.sample import series, static
 from identkit.plant_set.schur import plant_matrices
 
 BAND = (50.0, 20_000.0)
+FLOOR = 0.02
 
 
 def plant(
@@ -89,30 +94,87 @@ def make_set(plants: list[f.FittedPlant], nominal: f.Matrices, weight: f.Matrice
     scaled = _fields(plants, nominal, weight)
     largest = float(reach_of_plants(scaled, plants).value.max())
     weight = replace(weight, C=weight.C * largest, D=weight.D * largest)
-    whole = _fields(plants, nominal, weight)
-    reach = reach_of_plants(whole, plants)
-    plants = [
-        replace(item, reach=float(value), reach_frequency=float(frequency))
-        for item, value, frequency in zip(plants, reach.value, reach.frequency, strict=True)
-    ]
-    return PlantSet(**{**vars(whole), "plants": tuple(plants), "radii": _radii(whole, plants)})
-
-
-def _radii(contents: f.PlantSetFields, plants: list[f.FittedPlant]) -> f.Radii:
     grid = np.geomspace(*BAND, 300)
+    return _finished(_fields(plants, nominal, weight), grid, np.ones(grid.size))
+
+
+def _finished(
+    contents: f.PlantSetFields,
+    grid: np.ndarray,
+    allowed_excess: np.ndarray,
+    *,
+    floor_db: float | None = None,
+    extension: f.Extension | None = None,
+) -> PlantSet:
+    """State reach, radii and certificate."""
+    reach = reach_of_plants(contents, contents.plants)
+    plants = tuple(
+        replace(item, reach=float(value), reach_frequency=float(frequency))
+        for item, value, frequency in zip(
+            contents.plants, reach.value, reach.frequency, strict=True
+        )
+    )
+    radii = replace(_radii(contents, grid), allowed_excess=allowed_excess, extension=extension)
+    whole = replace(contents, plants=plants, radii=radii)
+    excess = excess_db(whole)
+    floor_db = excess if floor_db is None else floor_db
+    certificate = replace(
+        contents.certificate,
+        measured=f.Measured(len(plants), len(plants), len(set(radii.set_by) - {""})),
+        between_grid=f.BetweenGrid("adaptive grid", float(reach.value.max()), 1e-6),
+        optimality=f.Optimality(excess, floor_db, excess - floor_db, contents.weights.left.states),
+    )
+    best = plants[int(reach.value.argmax())]
+    line = f.Attribution(best.response, best.reach_frequency, best.reach, "M1")
+    return PlantSet(**{**vars(whole), "certificate": certificate, "attribution": (line,)})
+
+
+def _radii(contents: f.PlantSetFields, grid: np.ndarray) -> f.Radii:
     nominal, left, _ = Surroundings(contents).at(grid)
+    centre = nominal[:, 0, 0]
     errors = np.array(
-        [np.abs(plant_response(p, grid)[0, 0] / nominal[:, 0, 0] - 1) for p in plants]
+        [np.abs(plant_response(p, grid)[0, 0] / centre - 1.0) for p in contents.plants]
     )
     largest, who = errors.max(axis=0), errors.argmax(axis=0)
-    names = [plants[k].response if r > 0.02 else "" for k, r in zip(who, largest, strict=True)]
+    names = [
+        contents.plants[k].response if r > FLOOR else "" for k, r in zip(who, largest, strict=True)
+    ]
     return f.Radii(
         grid,
-        np.maximum(largest, 0.02),
+        np.maximum(largest, FLOOR),
         np.abs(left[:, 0, 0]),
         tuple(names),
         np.ones(grid.size),
-        0.02,
+        FLOOR,
+    )
+
+
+def optimal_set(
+    plants: list[f.FittedPlant], nominal: f.Matrices, order: int, points: int = 240
+) -> PlantSet:
+    """Bound the plants as the project does: best weight on a grid, peaks between added, again."""
+    one = static(np.eye(1))
+    grid, fitted = np.geomspace(*BAND, points), None
+    for _ in range(12):
+        radii = _radii(_fields(plants, nominal, one), grid)
+        profile = np.interp(np.log(grid), np.log([100.0, 1000.0]), [1.0, 3.0])
+        fitted = fit_magnitude_weight(
+            grid, radii.required_radius, order, profile=profile, start=fitted
+        )
+        weight = f.Matrices(*fitted.state_space())
+        contents = _fields(plants, nominal, weight)
+        reach = reach_of_plants(contents, plants)
+        if reach.value.max() <= 1.0 + 1e-9:
+            break
+        grid = np.union1d(grid, reach.frequency[reach.value > 1.0 + 1e-9])
+    steps = np.geomspace(1.25, 10.0**OUTSIDE_DECADES, OUTSIDE_POINTS)
+    outside = np.concatenate([[0.0], (grid[0] / steps)[::-1], grid[-1] * steps])
+    return _finished(
+        contents,
+        grid,
+        profile,
+        floor_db=fitted.floor_db,
+        extension=f.Extension(10.0, outside, True),
     )
 
 
@@ -132,7 +194,7 @@ def _fields(
         parameters=(),
         interconnection=output_multiplicative(nominal, weight, one),
         plants=tuple(plants),
-        radii=f.Radii(empty, empty, empty, (), empty, 0.02),
+        radii=f.Radii(empty, empty, empty, (), empty, FLOOR),
         certificate=f.Certificate(
             f.Measured(len(plants), len(plants), len(plants)),
             f.BetweenGrid("adaptive grid", 1.0, 1e-6),
@@ -147,3 +209,7 @@ def _fields(
 def small() -> PlantSet:
     """Return a set of eight plants with four modes."""
     return make_set(family(8), plant_matrices(nominal_plant()), lead_weight(1.0))
+
+
+if __name__ == "__main__":
+    optimal_set(family(24), plant_matrices(nominal_plant()), 6).save(sys.argv[1])
