@@ -13,8 +13,8 @@ from scipy import signal
 
 BLOCKS = 12
 SEGMENT = 4096
-BAND_HZ = (0.14, 30.0)
-LINES = 120
+BAND_HZ = (0.14, 56.0)
+LINES = 160
 
 
 def chosen_lines(frequency: np.ndarray) -> np.ndarray:
