@@ -84,7 +84,8 @@ def first_fault(
         if fault:
             return fault
     if len(frequency) < 2:
-        return Fault(-1, f"{len(frequency)} points above 0 Hz", "at least 2 points")
+        points = "no point" if len(frequency) == 0 else "1 point"
+        return Fault(-1, f"{points} above 0 Hz", "at least 2 points")
     return None
 
 
