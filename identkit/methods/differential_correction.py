@@ -21,6 +21,8 @@ from identkit.methods.infeasibility_certificate import proves_infeasible
 
 MAX_PROGRAMS = 150
 CEILING_SLACK = 1e-9
+LARGEST = 1e3
+NEARLY_COMMON = 0.5
 
 
 @dataclass(frozen=True)
@@ -290,7 +292,10 @@ class _Descent:
             return False
         coefficients = (factor * solution.coefficients[0], solution.coefficients[1])
         self.best = Ratio(factor * numerator, denominator, level, self.scaled.bases, coefficients)
-        self.scaled = _scale(self.bounds, self.order, factor * numerator, denominator)
+        common = cancelling_factor(self.bounds.x, self.scaled.bases, coefficients)
+        self.scaled = _scale(
+            self.bounds, self.order, factor * numerator / common, denominator / common
+        )
         return True
 
     def _add_violated(self, solution: _Solution, level: float) -> bool:
@@ -329,6 +334,26 @@ def _scale(
     return _Scaled((bases[0], bases[1]), (values[0], values[1]), numerator, denominator)
 
 
+def cancelling_factor(
+    x: FloatArray, bases: tuple[ArnoldiBasis, ArnoldiBasis], parts: tuple[FloatArray, FloatArray]
+) -> FloatArray:
+    """Return the narrow dips that N and D have in common, as a factor of order 1 elsewhere.
+
+    A pair with nearly common roots close to the axis leaves the ratio as it is but spoils N and D
+    as weights: the next pair would look large in the dip and small everywhere else.
+    """
+    common = np.ones(x.size)
+    zeros, poles = (basis.roots(part) for basis, part in zip(bases, parts, strict=True))
+    for pole in poles[poles.imag >= 0.0]:
+        distance = max(abs(pole.imag), abs(pole.real) - 1.0, 1e-14)
+        if not zeros.size or np.abs(zeros - pole).min() > NEARLY_COMMON * distance:
+            continue
+        width = max(0.5 * abs(1.0 - pole.real**2), distance)
+        dip = ((x - pole.real) ** 2 + distance**2) / ((x - pole.real) ** 2 + width**2)
+        common = common * (dip if pole.imag > 0.0 else np.sqrt(dip))
+    return common
+
+
 def _row_factors(
     ratio: FloatArray, lower: FloatArray, limit: FloatArray
 ) -> tuple[tuple[FloatArray, FloatArray], tuple[FloatArray, FloatArray]]:
@@ -354,7 +379,10 @@ def _hard_rows(hard: HardRows, bases: tuple[ArnoldiBasis, ArnoldiBasis]) -> Floa
 def _largest_margin(
     soft: FloatArray, hard: FloatArray, normal: FloatArray
 ) -> tuple[FloatArray, float, FloatArray] | None:
-    """Minimise z with soft @ c <= z, hard @ c <= 0, normal @ c = 1: unknowns, z, multipliers."""
+    """Minimise z with soft @ c <= z, hard @ c <= 0, normal @ c = 1: unknowns, z, multipliers.
+
+    The box on c keeps the program well posed; where it is active the multipliers prove nothing.
+    """
     from scipy.optimize import linprog
 
     count = normal.size
@@ -366,7 +394,7 @@ def _largest_margin(
         b_ub=np.zeros(matrix.shape[0]),
         A_eq=np.append(normal, 0.0)[None],
         b_eq=np.ones(1),
-        bounds=[(None, None)] * count + [(-1.0, None)],
+        bounds=[(-LARGEST, LARGEST)] * count + [(-1.0, None)],
         method="highs-ds",
         options={"primal_feasibility_tolerance": 1e-10, "dual_feasibility_tolerance": 1e-10},
     )
@@ -380,14 +408,13 @@ def _largest_coefficients(
 ) -> FloatArray:
     """Bound the coefficients of any pair that keeps the bounds and has mean denominator 1.
 
-    The values d >= 0 have mean 1 under the measure, so none exceeds 1 / min(measure) and the
-    coefficients in the orthonormal basis have a 2-norm of at most that to the power 1/2;
-    n <= limit / ratio * d bounds the numerator likewise where limits are finite.
+    Between the bounds d >= 0, and its mean under the measure is 1, so none of its values exceeds
+    1 / min(measure) and the coefficients in the orthonormal basis have a 2-norm of at most that to
+    the power 1/2. n <= limit / ratio * d bounds the numerator likewise.
     """
     data = bounds.measure > 0.0
     denominator = float(bounds.measure[data].min()) ** -0.5
-    relative = (bounds.limit(level) / ratio)[data]
-    numerator = denominator * float(relative.max()) if np.isfinite(relative).all() else np.inf
+    numerator = denominator * float((bounds.limit(level) / ratio)[data].max())
     return np.repeat([numerator, denominator], order + 1)
 
 

@@ -27,9 +27,10 @@ def proves_infeasible(
     largest
         (unknowns,) bound on |c| of every solution, entry by entry.
     """
-    y = np.maximum(multipliers, 0.0)
-    combined = rows.T @ y
-    eta = float(combined @ normal) / float(normal @ normal)
-    remainder = np.abs(combined - eta * normal)
-    rounding = 4.0 * np.finfo(float).eps * (np.abs(rows).T @ y) * rows.shape[0] ** 0.5
-    return bool(eta > float((remainder + rounding) @ largest))
+    from scipy.optimize import nnls
+
+    support = multipliers > 0.0
+    y = nnls(rows[support].T, normal)[0]
+    remainder = np.abs(rows[support].T @ y - normal)
+    rounding = 4.0 * np.finfo(float).eps * (np.abs(rows[support]).T @ y) * y.size**0.5
+    return bool(float((remainder + rounding) @ largest) < 1.0)

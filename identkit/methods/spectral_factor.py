@@ -116,6 +116,8 @@ def _polishing_step(roots: ComplexArray, polynomial: WarpedPolynomial) -> Comple
     model = np.ones(u.size)
     for root in roots:
         model = model * np.abs((u - root) / ((1.0 + u) * (1.0 + abs(root))))
+    if model.min() <= 0.0:
+        return None
     misfit = np.log(polynomial.values / model)
     real, upper = roots.imag == 0.0, roots.imag > 0.0
     slope_real = -(roots[real] / (u[:, None] - roots[real])).real
