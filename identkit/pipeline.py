@@ -207,6 +207,39 @@ def _population(work: Work) -> None:
     write_table(population_table(population), work.stage.path("population.csv"))
 
 
+def _nominal(work: Work) -> None:
+    from identkit.stages.nominal import choose_nominal, measured_lines
+
+    nominal = choose_nominal(
+        work.dataset("modes.nc"),
+        work.dataset("population.nc"),
+        choice=work.settings.nominal.choice,
+        band=work.settings.responses.band,
+        lines=measured_lines(work.gridded("responses.nc")),
+        left_out=work.left_out,
+        radius_floor=work.settings.bound.radius_floor,
+    )
+    work.save(nominal, "nominal.nc")
+
+
+def _bound(work: Work) -> None:
+    from identkit.stages.bound import bound_spread
+
+    options = work.settings.bound
+    bound = bound_spread(
+        work.dataset("modes.nc"),
+        work.dataset("nominal.nc"),
+        form=options.form,
+        order=options.order,
+        profile=options.profile,
+        cap=options.cap,
+        radius_floor=options.radius_floor,
+        left_out=work.left_out,
+        jobs=work.jobs,
+    )
+    work.save(bound, "bound.nc")
+
+
 STEPS = (
     Step("read", _read, ("responses.nc",), (), READ_SETTINGS),
     Step("screen", _screen, ("screening.nc",), ("read",), ("responses.band", "screen")),
@@ -219,6 +252,14 @@ STEPS = (
         ("pair", "screen"),
         ("nominal.reference_temperature", "bound.exclude", "screen.leave_out"),
     ),
+    Step(
+        "nominal",
+        _nominal,
+        ("nominal.nc",),
+        ("read", "pair", "population"),
+        ("nominal", "responses.band", "bound.radius_floor"),
+    ),
+    Step("bound", _bound, ("bound.nc",), ("pair", "nominal"), ("bound",)),
 )
 
 

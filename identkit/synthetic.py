@@ -16,7 +16,7 @@ from identkit.methods.modal_model import ModalParameters, modal_response
 
 REFERENCE_TEMPERATURE = 25.0
 HEAD_SIGNS = np.array([1.0, 1.0, -1.0, -1.0])
-"""Upper and lower heads see the sway modes with opposite signs."""
+"""Upper and lower heads see sway on opposite sides of the neutral line."""
 
 
 @dataclass(frozen=True)
@@ -30,13 +30,13 @@ class InventedMode:
     damping_ratio
         1.
     share
-        Residue as a share of the base residue.
+        Residue as a share of the base residue, mean over heads.
     frequency_slope
         Relative change of the frequency per K.
     damping_slope
         Relative change of the damping ratio per K.
     sway
-        Whether upper and lower heads see it with opposite signs.
+        Share added for upper heads and taken off for lower ones.
     """
 
     frequency: float
@@ -44,7 +44,7 @@ class InventedMode:
     share: float
     frequency_slope: float
     damping_slope: float
-    sway: bool = False
+    sway: float = 0.0
 
 
 MODES = (
@@ -52,10 +52,10 @@ MODES = (
     InventedMode(3420.0, 0.017, -0.075, -2.0e-4, 3.0e-3),
     InventedMode(4780.0, 0.014, 0.160, -2.6e-4, 3.0e-3),
     InventedMode(6310.0, 0.020, -0.420, -3.2e-4, 4.0e-3),
-    InventedMode(8260.0, 0.015, 0.240, -2.2e-4, 3.0e-3, sway=True),
+    InventedMode(8260.0, 0.015, 0.170, -2.2e-4, 3.0e-3, sway=0.070),
     InventedMode(10650.0, 0.016, -0.520, -1.8e-4, 2.0e-3),
-    InventedMode(13900.0, 0.013, 0.300, -2.8e-4, 3.0e-3, sway=True),
-    InventedMode(18400.0, 0.021, -0.900, -2.4e-4, 4.0e-3),
+    InventedMode(13900.0, 0.013, 0.050, -2.8e-4, 3.0e-3, sway=0.110),
+    InventedMode(18400.0, 0.021, 0.640, -2.4e-4, 4.0e-3),
 )
 BASE_FREQUENCY, BASE_DAMPING_RATIO, BASE_RESIDUE = 72.0, 0.42, 2.6e9
 DELAY = 11e-6
@@ -235,7 +235,7 @@ def _plant(
     damping = np.array(
         [m.damping_ratio * (1.0 + m.damping_slope * temperature_step) for m in MODES]
     )
-    residue = np.array([m.share * (sign if m.sway else 1.0) for m in MODES]) * BASE_RESIDUE
+    residue = np.array([m.share + sign * m.sway for m in MODES]) * BASE_RESIDUE
     return ModalParameters(
         modal_frequency=frequency * factors[0],
         damping_ratio=damping * factors[1],
