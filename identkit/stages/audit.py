@@ -34,7 +34,7 @@ from identkit.plant_set.raw_points import (
 )
 from identkit.plant_set.reach import reach_of_plants
 from identkit.plant_set.response import plant_response
-from identkit.stages.fitted_plants import fitted_plants, label_columns, labels_of
+from identkit.stages.set_plants import label_columns, labels_of, set_plants
 
 NO_FIT, NOT_JUDGED = "no fit", "not judged"
 RESPONSES_AT_ONCE = 256
@@ -73,8 +73,8 @@ def audit(
 
     A fitted plant is held if its reach over the band is at most 1 (within the tolerance the set
     states between grid points). Measured points are judged with an allowance for their noise, see
-    `plant_set.raw_points`. Where the variance of the points is not known, that of the residuals of
-    the fit around each point stands in; without a fit either, nothing beyond the weight is called
+    `plant_set.raw_points`. Where the variance of the points is not known, the relative residuals
+    of the fit around each point stand in; without a fit either, nothing beyond the weight is called
     "not held".
 
     Parameters
@@ -106,7 +106,7 @@ def audit(
     """
     if modes is None and responses is None:
         raise InputError(Problem("audit", "neither fits nor responses", "something to judge"))
-    plants, unfitted = ([], {}) if modes is None else fitted_plants(modes)
+    plants, unfitted = ([], {}) if modes is None else set_plants(modes)
     names, labels = _responses(modes, responses)
     columns = _blank(len(names))
     place = {name: index for index, name in enumerate(names)}
@@ -290,9 +290,10 @@ def _variance(
     for index, plant in enumerate(plants):
         if plant is None:
             continue
-        square = np.abs(measured[index] - plant_response(plant, frequency)[0, 0]) ** 2
+        fitted = plant_response(plant, frequency)[0, 0]
+        square = np.abs(measured[index] / fitted - 1.0) ** 2
         good = np.isfinite(square) if usable is None else np.isfinite(square) & usable[index]
-        result[index] = _moving_mean(square, good)
+        result[index] = _moving_mean(square, good) * np.abs(fitted) ** 2
     return result
 
 

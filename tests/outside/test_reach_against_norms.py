@@ -1,8 +1,6 @@
 """Reach against norms of other libraries and against printed values."""
 
-import importlib.util
 from dataclasses import replace
-from pathlib import Path
 
 import control
 import numpy as np
@@ -18,26 +16,6 @@ from identkit.plant_set.sample import static
 from identkit.plant_set.schur import SchurResponse, plant_matrices
 
 pytestmark = pytest.mark.outside
-
-
-@pytest.fixture(scope="module")
-def makers():
-    """The makers of small sets, loaded by path: tests are not an importable package."""
-    path = Path(__file__).parents[1] / "plant_set" / "makers.py"
-    spec = importlib.util.spec_from_file_location("makers_for_norms", path)
-    module = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(module)
-    return module
-
-
-@pytest.fixture(scope="module")
-def small_set(makers):
-    return makers.small()
-
-
-@pytest.fixture(scope="module")
-def make_family(makers):
-    return makers.family
 
 
 def peak(system: f.Matrices, band: tuple[float, float]) -> tuple[float, float]:

@@ -17,8 +17,8 @@ from identkit.plant_set.schur import plant_matrices, plant_poles, zeros
 
 
 def dense(contents: f.PlantSetFields, item: f.FittedPlant) -> tuple[float, float]:
-    """Slow twin: a million points, no refinement."""
-    grid = np.geomspace(*contents.band, 400_001)
+    """Slow twin: a hundred thousand points, no refinement."""
+    grid = np.geomspace(*contents.band, 100_001)
     response = np.moveaxis(plant_response(item, grid), -1, 0)
     values = Surroundings(contents).reach_at(grid, response)
     return float(values.max()), float(grid[values.argmax()])
@@ -28,7 +28,7 @@ def test_reach_is_never_below_a_dense_grid(small_set):
     for item, value, place in zip(small_set.plants, *vars(small_set.reach()).values(), strict=True):
         slow, where = dense(small_set, item)
         assert slow <= value * (1.0 + 1e-12)
-        assert value == pytest.approx(slow, rel=1e-6)
+        assert value == pytest.approx(slow, rel=1e-5)
         assert place == pytest.approx(where, rel=1e-4)
 
 
@@ -69,17 +69,18 @@ def test_the_band_limits_the_claim(small_set):
 
 
 def test_chunks_do_not_change_the_answer(small_set, make_family):
-    plants = make_family(60, seed=9)
+    plants = make_family(50, seed=9)
     together = small_set.reach(plants)
-    apart = [small_set.reach([item]) for item in plants]
-    np.testing.assert_allclose(together.value, [item.value[0] for item in apart], rtol=1e-9)
+    some = [0, 23, 24, 47, 48, 49]
+    apart = [small_set.reach([plants[k]]).value[0] for k in some]
+    np.testing.assert_allclose(together.value[some], apart, rtol=1e-9)
     assert small_set.reach([]).value.shape == (0,)
 
 
 def test_delay_counts(small_set):
     item = replace(small_set.plants[0], delay=3e-6)
     slow, _ = dense(small_set, item)
-    assert small_set.reach([item]).value[0] == pytest.approx(slow, rel=1e-6)
+    assert small_set.reach([item]).value[0] == pytest.approx(slow, rel=1e-5)
     assert small_set.reach([item]).value[0] != pytest.approx(small_set.plants[0].reach, rel=1e-3)
 
 
