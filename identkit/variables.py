@@ -55,123 +55,284 @@ class Variable:
     optional: bool = False
 
 
+def _along(dims: tuple[str, ...], *rows: tuple[str, str, str, str]) -> tuple[Variable, ...]:
+    """Return variables along the same dims from (name, kind, unit, meaning); ? marks optional."""
+    return tuple(
+        Variable(name.rstrip("?"), dims, kind, unit, meaning, name.endswith("?"))
+        for name, kind, unit, meaning in rows
+    )
+
+
 LABELS = (
-    Variable("response", ("response",), "text", "", "Name of a response, unique in the study."),
-    Variable("unit", ("response",), "text", "", "The unit measured.", True),
-    Variable("head", ("response",), "text", "", "The head measured.", True),
-    Variable("temperature", ("response",), "number", "degC", "Temperature of the unit.", True),
-    Variable("position", ("response",), "number", "as given", "Radial position.", True),
-    Variable("lot", ("response",), "text", "", "Production lot.", True),
-    Variable("measured_at", ("response",), "text", "", "ISO date of the measurement.", True),
-    Variable("repeat", ("response",), "text", "", "Which re-measurement of one thing.", True),
-    Variable("fixture", ("response",), "text", "", "The fixture it was measured on.", True),
-    Variable("source", ("response",), "text", "", "File, relative to the study's folder.", True),
+    *_along(
+        ("response",),
+        ("response", "text", "", "Name of a response, unique in the study."),
+        ("unit?", "text", "", "The unit measured."),
+        ("head?", "text", "", "The head measured."),
+        ("temperature?", "number", "degC", "Temperature of the unit."),
+        ("position?", "number", "as given", "Radial position."),
+        ("lot?", "text", "", "Production lot."),
+        ("measured_at?", "text", "", "ISO date of the measurement."),
+        ("repeat?", "text", "", "Which re-measurement of one thing."),
+        ("fixture?", "text", "", "The fixture it was measured on."),
+        ("source?", "text", "", "File, relative to the study's folder."),
+    ),
     Variable("output", ("output",), "text", "", "Name of an output channel.", True),
     Variable("input", ("input",), "text", "", "Name of an input channel.", True),
 )
+_FREQUENCY = Variable("frequency", ("frequency",), "number", "Hz", "Increasing.")
+_MODE_NAMES = Variable("mode", ("mode",), "text", "", "M1, M2 ... by population frequency.")
 
 READ = (
-    Variable("frequency", ("frequency",), "number", "Hz", "Increasing."),
-    Variable("frequency_response", POINT, "complex", _RATIO, "Measured response, e^{+jwt}."),
-    Variable(
-        "frequency_response_variance",
+    _FREQUENCY,
+    *_along(
         POINT,
-        "number",
-        "(output/input)^2",
-        "E|error|^2, total of both parts.",
-        True,
+        ("frequency_response", "complex", _RATIO, "Measured response, convention e^{+jwt}."),
+        (
+            "frequency_response_variance?",
+            "number",
+            "(output/input)^2",
+            "E|error|^2, total of both parts.",
+        ),
+        ("coherence?", "number", "1", "Magnitude-squared coherence."),
+        ("usable_mask?", "flag", "", "Points that may be used."),
     ),
-    Variable("coherence", POINT, "number", "1", "Magnitude-squared coherence.", True),
     Variable("averages", ("response",), "number", "1", "Number of averages.", True),
-    Variable("usable_mask", POINT, "flag", "", "Points that may be used.", True),
 )
 
 SCREEN = (
-    Variable("usable_mask", POINT, "flag", "", "Points that the fit uses."),
-    Variable("low_coherence_mask", POINT, "flag", "", "Points below the coherence limit."),
-    Variable("outside_band_mask", POINT, "flag", "", "Points outside the band."),
-    Variable("missing_mask", POINT, "flag", "", "Points without a finite value."),
-    Variable("mark", ("mark",), "text", "", '"noise", "outlier" or "too-few-points".'),
-    Variable("response_mark", ("response", "mark"), "flag", "", "Whether the mark is set."),
-    Variable(
-        "response_mark_value", ("response", "mark"), "number", "1", "What the mark is judged by."
+    _FREQUENCY,
+    *_along(
+        POINT,
+        ("usable_mask", "flag", "", "Points that the fit uses."),
+        ("low_coherence_mask", "flag", "", "Points below the coherence limit."),
+        ("outside_band_mask", "flag", "", "Points outside the band."),
+        ("missing_mask", "flag", "", "Points without a usable value."),
     ),
-    Variable(
-        "response_mark_limit", ("response", "mark"), "number", "1", "The limit it is held to."
+    Variable("mark", ("mark",), "text", "", '"noise", "outlier" or "too-few-points".'),
+    *_along(
+        ("response", "mark"),
+        ("response_mark", "flag", "", "Whether the mark is set."),
+        ("response_mark_value", "number", "1", "What the mark is judged by."),
+        ("response_mark_limit", "number", "1", "The limit it is held to."),
     ),
 )
 
 _MODES = (
-    Variable("modal_frequency", PER_MODE, "number", "Hz", "Undamped frequency of a mode."),
-    Variable("damping_ratio", PER_MODE, "number", "1", "Damping ratio of a mode."),
-    Variable("residue", PER_MODE_CHANNEL, "number", _RESIDUE, "Residue of a mode."),
-    Variable(
-        "residue_rate",
-        PER_MODE_CHANNEL,
-        "number",
-        "output/input (rad/s)",
-        "Factor of jw in the residue of a generally damped mode.",
-        True,
+    *_along(
+        PER_MODE,
+        ("modal_frequency", "number", "Hz", "Undamped frequency of a mode."),
+        ("damping_ratio", "number", "1", "Damping ratio of a mode."),
+        ("mode_significance", "number", "1", "Residue over its standard error."),
+        ("mode_outcome?", "whole", "", "Outcome code of a mode."),
     ),
-    Variable("mode_significance", PER_MODE, "number", "1", "Residue over its standard error."),
-    Variable("mode_outcome", PER_MODE, "whole", "", "Outcome code of a mode.", True),
-)
-_BASE = (
-    Variable("base_gain", PER_CHANNEL, "number", _RESIDUE, "g of a free base, g/s^2.", True),
-    Variable("base_frequency", ("response",), "number", "Hz", "Frequency of the pivot.", True),
-    Variable("base_damping_ratio", ("response",), "number", "1", "Damping of the pivot.", True),
-    Variable("base_residue", PER_CHANNEL, "number", _RESIDUE, "Residue of the pivot.", True),
-    Variable("feedthrough", PER_CHANNEL, "number", _RATIO, "Direct term d."),
-    Variable("delay", ("response",), "number", "s", "Delay of the plant."),
+    *_along(
+        PER_MODE_CHANNEL,
+        ("residue", "number", _RESIDUE, "Residue of a mode."),
+        ("residue_rate?", "number", "output/input rad/s", "Factor of jw in a residue."),
+    ),
+    *_along(
+        PER_CHANNEL,
+        ("base_gain?", "number", _RESIDUE, "g of a free base, g/s^2."),
+        ("base_residue?", "number", _RESIDUE, "Residue of the pivot."),
+        ("feedthrough", "number", _RATIO, "Direct term d."),
+    ),
+    *_along(
+        ("response",),
+        ("base_frequency?", "number", "Hz", "Frequency of the pivot."),
+        ("base_damping_ratio?", "number", "1", "Damping ratio of the pivot."),
+        ("delay", "number", "s", "Delay of the plant."),
+        ("noise_ratio", "number", "1", "Reduced chi-square; missing where noise was estimated."),
+        ("fit_outcome", "whole", "", "Outcome code of the fit."),
+        ("usable_points", "whole", "", "Points the fit used."),
+    ),
     Variable(
         "parameter_covariance",
         ("response", "parameter", "parameter_other"),
         "number",
-        "",
-        "Covariance of the fitted parameters, each in its own unit, in the order of the fit.",
+        "own units",
+        "Covariance of the fitted parameters, in the order of the response's own fit.",
     ),
-    Variable(
-        "noise_ratio",
-        ("response",),
-        "number",
-        "1",
-        "Reduced chi-square; missing where the variance was estimated from residuals.",
-    ),
-    Variable("fit_outcome", ("response",), "whole", "", "Outcome code of the fit."),
-    Variable("usable_points", ("response",), "whole", "", "Points the fit used."),
+    Variable("parameter", ("parameter",), "text", "", "Names of the fitted parameters.", True),
+    Variable("parameter_other", ("parameter_other",), "text", "", "The same names.", True),
 )
-FIT = _MODES + _BASE
+FIT = (
+    *_MODES,
+    Variable("mode", ("mode",), "whole", "", "Place of a mode, by frequency.", True),
+    Variable("start_mode", PER_MODE, "whole", "", "Mode of the start it came from, -1 none.", True),
+)
 
 PAIR = (
-    *FIT,
+    *_MODES,
     Variable("mode", ("mode",), "text", "", "M1, M2 ... by population frequency; E1 ... extra."),
-    Variable("mode_in_population", ("mode",), "flag", "", "Whether the population has it."),
-    Variable("mode_position", PER_MODE, "whole", "", "Place in the response's own fit, -1 none."),
-    Variable(
-        "modal_frequency_standard_error", PER_MODE, "number", "Hz", "From the fit covariance."
+    *_along(
+        ("mode",),
+        ("mode_in_population", "flag", "", "Whether the population has it."),
+        ("mode_share?", "number", "1", "Share of responses of its best head that show it."),
     ),
-    Variable("damping_ratio_standard_error", PER_MODE, "number", "1", "From the fit covariance."),
+    *_along(
+        PER_MODE,
+        ("mode_position", "whole", "", "Place in the response's own fit, -1 none."),
+        ("modal_frequency_standard_error", "number", "Hz", "From the fit covariance."),
+        ("damping_ratio_standard_error", "number", "1", "From the fit covariance."),
+        ("mode_crossing_mask?", "flag", "", "Modes in another order than in the population."),
+        ("mode_expected_frequency?", "number", "Hz", "Where the population has the mode."),
+        ("mode_found_warm_mask?", "flag", "", "Found only when started from the population."),
+    ),
     Variable(
         "residue_standard_error", PER_MODE_CHANNEL, "number", _RESIDUE, "From the fit covariance."
     ),
 )
 
+_STATISTICS = (
+    ("population_value", "number", "own unit", "Mean at the reference temperature."),
+    ("population_value_standard_error", "number", "own unit", "Standard error of that mean."),
+    ("temperature_slope", "number", "1/K", "Relative change per kelvin."),
+    ("temperature_slope_standard_error", "number", "1/K", "Standard error of that slope."),
+    ("position_slope?", "number", "1/position", "Relative change per unit of position."),
+    ("position_slope_standard_error?", "number", "1/position", "Standard error of that slope."),
+    ("unit_deviation", "number", "1", "Between units, relative, one sigma."),
+    ("unit_deviation_standard_error?", "number", "1", "Standard error of it."),
+    ("head_deviation", "number", "1", "Between heads of one unit, relative, one sigma."),
+    ("head_deviation_standard_error?", "number", "1", "Standard error of it."),
+    ("residual_deviation", "number", "1", "What is left unexplained, relative, one sigma."),
+    ("residual_deviation_standard_error?", "number", "1", "Standard error of it."),
+    ("fit_deviation", "number", "1", "Measurement noise of a fit, relative, one sigma."),
+)
+_PLANT_SCALARS = (
+    ("base_gain?", "number", _RESIDUE, "g of a free base, g/s^2."),
+    ("base_frequency?", "number", "Hz", "Frequency of the pivot."),
+    ("base_damping_ratio?", "number", "1", "Damping ratio of the pivot."),
+    ("base_residue?", "number", _RESIDUE, "Residue of the pivot."),
+    ("feedthrough", "number", _RATIO, "Direct term d."),
+    ("delay", "number", "s", "Delay of the plant."),
+)
 POPULATION = (
+    *_along(PER_QUANTITY, *_STATISTICS),
+    *_along(
+        ("base_quantity",), *((f"base_{row[0].rstrip('?')}?", *row[1:]) for row in _STATISTICS)
+    ),
+    *_along((), *_PLANT_SCALARS),
+    *_along(
+        ("mode",),
+        ("responses_found", "whole", "", "Responses that show the mode."),
+        ("responses_missing", "whole", "", "Responses that do not."),
+        ("responses_shifted?", "whole", "", "Responses that show it far from the population."),
+    ),
+    *_along(
+        ("mode", "quantity", "head"),
+        ("head_value", "number", "own unit", "Mean of a head at the reference temperature."),
+        ("head_value_standard_error?", "number", "own unit", "Standard error of that mean."),
+    ),
+    Variable("unit_effect", ("unit", "effect"), "number", "1", "Predicted effect of a unit.", True),
     Variable(
-        "population_value", PER_QUANTITY, "number", "own unit", "Mean at the reference temperature."
+        "unit_effect_deviation", ("effect",), "number", "1", "Between units, one sigma.", True
     ),
     Variable(
-        "population_value_standard_error", PER_QUANTITY, "number", "own unit", "Of that mean."
+        "unit_effect_correlation",
+        ("effect", "effect_other"),
+        "number",
+        "1",
+        "Correlation of unit effects, shrunk.",
+        True,
     ),
-    Variable("temperature_slope", PER_QUANTITY, "number", "1/K", "Relative change per kelvin."),
-    Variable("temperature_slope_standard_error", PER_QUANTITY, "number", "1/K", "Of that slope."),
-    Variable("unit_deviation", PER_QUANTITY, "number", "1", "Between units, relative, 1 sigma."),
-    Variable("head_deviation", PER_QUANTITY, "number", "1", "Between heads of one unit."),
-    Variable("residual_deviation", PER_QUANTITY, "number", "1", "What is left unexplained."),
-    Variable("fit_deviation", PER_QUANTITY, "number", "1", "Measurement noise, from the fits."),
-    Variable("responses_found", ("mode",), "whole", "", "Responses that show the mode."),
-    Variable("responses_missing", ("mode",), "whole", "", "Responses that do not."),
-    Variable("head_value", ("mode", "quantity", "head"), "number", "own unit", "Mean of a head."),
+    Variable("unit_effect_shrinkage", (), "number", "1", "How far it was shrunk, 0 to 1.", True),
+    Variable("lot_effect", ("lot", "effect"), "number", "1", "Mean unit effect of a lot.", True),
+    _MODE_NAMES,
+    Variable("quantity", ("quantity",), "text", "", "What of a mode: its frequency, damping ..."),
+    Variable("base_quantity", ("base_quantity",), "text", "", "What beside the modes.", True),
+    Variable("head", ("head",), "text", "", "The heads.", True),
+    Variable("unit", ("unit",), "text", "", "The units.", True),
+    Variable("lot", ("lot",), "text", "", "The lots.", True),
+    Variable("effect", ("effect",), "text", "", "Mode (or base) and quantity.", True),
+    Variable("effect_other", ("effect_other",), "text", "", "The same.", True),
+)
+
+NOMINAL = (
+    _FREQUENCY,
+    _MODE_NAMES,
+    Variable("nominal_A", ("nominal_state", "nominal_state_other"), "number", "1/s", "State."),
+    Variable("nominal_B", ("nominal_state", "input"), "number", "mixed", "Input."),
+    Variable("nominal_C", ("output", "nominal_state"), "number", "mixed", "Output."),
+    Variable("nominal_D", ("output", "input"), "number", _RATIO, "Direct term."),
+    *_along(
+        ("mode",),
+        ("modal_frequency", "number", "Hz", "Undamped frequency of a mode of the nominal."),
+        ("damping_ratio", "number", "1", "Damping ratio of a mode of the nominal."),
+    ),
+    *_along(
+        ("mode", "output", "input"),
+        ("residue", "number", _RESIDUE, "Residue of a mode of the nominal."),
+        ("residue_rate?", "number", "output/input rad/s", "Factor of jw in a residue."),
+    ),
+    *_along((), *_PLANT_SCALARS),
+    *_along(
+        (),
+        ("delay_order", "whole", "", "Order of the all-pass that stands for the delay."),
+        ("floor_distance_peak_db", "number", "dB", "Largest distance from the floor."),
+        ("floor_distance_mean_db", "number", "dB", "Mean distance over log frequency."),
+    ),
+    *_along(
+        ("frequency",),
+        ("nominal_radius", "number", "1", "Largest |P/P0 - 1| of the plants."),
+        ("radius_floor", "number", "1", "Least radius of any nominal at this frequency."),
+        ("radius_floor_saturated", "flag", "", "Whether no nominal stays below 1."),
+    ),
+)
+
+BOUND = (
+    _FREQUENCY,
+    *_along(
+        ("frequency",),
+        ("required_radius", "number", "1", "Radius the weight has to exceed."),
+        ("radius_setter", "text", "", "Response that sets it; empty where the floor does."),
+        ("weight_magnitude", "number", "1", "|W|."),
+        ("allowed_excess", "number", "1", "Shape of the excess allowed."),
+    ),
+    Variable("weight_A", ("weight_state", "weight_state_other"), "number", "1/s", "State."),
+    Variable("weight_B", ("weight_state", "weight_input"), "number", "mixed", "Input."),
+    Variable("weight_C", ("weight_output", "weight_state"), "number", "mixed", "Output."),
+    Variable("weight_D", ("weight_output", "weight_input"), "number", "1", "Direct term."),
+    *_along(
+        ("weight_root",),
+        ("weight_pole", "complex", "rad/s", "Poles of the weight, stable."),
+        ("weight_zero", "complex", "rad/s", "Zeros of the weight, minimum phase."),
+    ),
+    *_along(
+        (),
+        ("weight_gain", "number", "1", "Gain of the weight, zeros over poles."),
+        ("weight_order", "whole", "", "Order of the weight."),
+        ("excess_db", "number", "dB", "Largest excess of the weight over the radius profile."),
+        ("floor_db", "number", "dB", "Proved lower bound of that at this order."),
+        ("gap_db", "number", "dB", "Their difference."),
+        ("between_grid_worst", "number", "1", "Largest exact reach between the points."),
+        ("between_grid_tolerance", "number", "1", "Tolerance of that norm."),
+        ("nominal_unstable_poles", "whole", "", "Unstable poles of the nominal."),
+    ),
+    *_along(
+        ("trial",),
+        ("trial_order", "whole", "", "Orders tried."),
+        ("trial_excess_db", "number", "dB", "Excess of each."),
+        ("trial_floor_db", "number", "dB", "Proved lower bound of each."),
+    ),
+    *_along(
+        ("response",),
+        ("reach", "number", "1", "Smallest factor of the set that holds the fitted plant."),
+        ("reach_frequency", "number", "Hz", "Where it is set."),
+        ("reach_mode", "text", "", "The mode nearest to that."),
+        ("response_used", "flag", "", "Whether the bound counts it."),
+        ("exclusion_reason", "text", "", "Why not."),
+        ("unstable_poles", "whole", "", "Unstable poles of the fitted plant."),
+    ),
+    *_along(
+        ("interval",),
+        ("interval_low", "number", "Hz", "Lower end of an interval with one setter."),
+        ("interval_high", "number", "Hz", "Upper end."),
+        ("interval_response", "text", "", "The response that sets the bound there."),
+        ("interval_reach", "number", "1", "Its largest reach there."),
+        ("interval_frequency", "number", "Hz", "Where it is largest."),
+        ("interval_mode", "text", "", "The mode nearest to that."),
+    ),
 )
 
 VARIABLES: Mapping[str, tuple[Variable, ...]] = {
@@ -180,6 +341,8 @@ VARIABLES: Mapping[str, tuple[Variable, ...]] = {
     "fit": FIT,
     "pair": PAIR,
     "population": POPULATION,
+    "nominal": NOMINAL,
+    "bound": BOUND,
 }
 FILES = {
     "read": "responses.nc",
@@ -187,6 +350,8 @@ FILES = {
     "fit": "fits.nc",
     "pair": "modes.nc",
     "population": "population.nc",
+    "nominal": "nominal.nc",
+    "bound": "bound.nc",
 }
 
 
@@ -215,7 +380,7 @@ def check(
     InputError
         If a variable has wrong dimensions or the wrong kind of values.
     """
-    known = {variable.name: variable for variable in (*VARIABLES[stage], *LABELS)}
+    known = {variable.name: variable for variable in (*LABELS, *VARIABLES[stage])}
     for name in names:
         if name not in dataset.variables:
             raise MissingStageError(stage, f"{asked_by} (for {name})")

@@ -1,8 +1,13 @@
+from importlib.resources import files
+
 import numpy as np
 import pytest
 import xarray as xr
 
 from identkit.errors import InputError, MissingStageError
+from identkit.grids import datasets, load
+from identkit.pipeline import run_study
+from identkit.synthetic import InventedBench, invent_campaign, write_campaign
 from identkit.variables import FILES, LABELS, VARIABLES, check, file_format_page
 
 
@@ -47,8 +52,10 @@ def test_every_variable_stands_once_per_file_and_says_what_it_is(stage):
     assert len(set(names)) == len(names)
     for variable in VARIABLES[stage]:
         assert variable.meaning.endswith("."), variable.name
-        assert variable.kind in ("flag", "text", "whole") or variable.unit or "covariance" in (
-            variable.name
+        assert (
+            variable.kind in ("flag", "text", "whole")
+            or variable.unit
+            or "covariance" in (variable.name)
         ), variable.name
 
 
@@ -58,3 +65,27 @@ def test_the_page_has_every_file_and_every_variable():
         assert FILES.get(stage, stage) in page
         for variable in (*variables, *LABELS):
             assert f"`{variable.name}`" in page
+
+
+def unregistered(data, stage):
+    """Return what is wrong with the variables of a stage, against the dictionary."""
+    known = {variable.name: variable for variable in (*LABELS, *VARIABLES[stage])}
+    needed = {variable.name for variable in VARIABLES[stage] if not variable.optional}
+    there = {str(name) for name in data.variables}
+    for name in there & set(known):
+        check(data, [name], stage=stage, asked_by="test")
+    return sorted(there - set(known)), sorted(needed - there)
+
+
+@pytest.mark.slow
+def test_every_stage_writes_what_the_dictionary_says(tmp_path):
+    """A small invented campaign, read from files and taken through the stages to the bound."""
+    bench = InventedBench(points=400)
+    write_campaign(tmp_path, invent_campaign(units=4, heads=2, bench=bench), bad_files=False)
+    columns = files("identkit").joinpath("demo_study.toml").read_text(encoding="utf-8")
+    study = tmp_path / "study.toml"
+    study.write_text(columns.split("exclude =")[0], encoding="utf-8")
+    run = run_study(study, until="bound", jobs=1)
+    for stage in VARIABLES:
+        for part in datasets(load(run.folder / FILES[stage])):
+            assert unregistered(part, stage) == ([], []), stage
