@@ -10,6 +10,7 @@ from typing import Any
 
 import xarray as xr
 
+from identkit.atomic import write_text
 from identkit.grids import Gridded, load, save
 from identkit.not_yet import refuse_unavailable
 from identkit.progress import Progress, silent
@@ -189,7 +190,15 @@ def _pair(work: Work) -> None:
     from identkit.stages.pair import pair_modes
     from identkit.stages.tables import modes_table, write_table
 
-    modes = pair_modes(work.dataset("fits.nc"))
+    modes = pair_modes(
+        work.dataset("fits.nc"),
+        work.gridded("responses.nc"),
+        work.gridded("screening.nc"),
+        reference_temperature=work.settings.nominal.reference_temperature,
+        delay=work.settings.model.delay,
+        jobs=work.jobs,
+        progress=work.progress,
+    )
     work.save(modes, "modes.nc")
     write_table(modes_table(modes), work.stage.path("modes.csv"))
 
@@ -240,11 +249,46 @@ def _bound(work: Work) -> None:
     work.save(bound, "bound.nc")
 
 
+def _coverage(work: Work) -> None:
+    from identkit.stages.coverage import state_coverage
+
+    asked = work.settings.bound
+    coverage = state_coverage(
+        content=asked.content, confidence=asked.confidence, exchangeable=asked.exchangeable
+    )
+    write_text(work.stage.path("coverage.json"), json.dumps(coverage, indent=1))
+
+
+def _report(work: Work) -> None:
+    from identkit.report.contents import ReportInput
+    from identkit.report.page import write_report
+
+    given = ReportInput(
+        study_name=work.settings.study.name,
+        responses=work.gridded("responses.nc"),
+        screening=work.gridded("screening.nc"),
+        fits=work.dataset("fits.nc"),
+        modes=work.dataset("modes.nc"),
+        population=work.dataset("population.nc"),
+        nominal=work.dataset("nominal.nc"),
+        bound=work.dataset("bound.nc"),
+        coverage=json.loads(work.study.path("coverage.json").read_text(encoding="utf-8")),
+        run=work.study.record,
+    )
+    write_report(given, work.study.folder)
+
+
 STEPS = (
     Step("read", _read, ("responses.nc",), (), READ_SETTINGS),
     Step("screen", _screen, ("screening.nc",), ("read",), ("responses.band", "screen")),
     Step("fit", _fit, ("fits.nc", "fits.csv"), ("read", "screen"), ("model",)),
-    Step("pair", _pair, ("modes.nc", "modes.csv"), ("fit",)),
+    Step(
+        "pair",
+        _pair,
+        ("modes.nc", "modes.csv"),
+        ("read", "screen", "fit"),
+        ("nominal.reference_temperature", "model.delay"),
+    ),
     Step(
         "population",
         _population,
@@ -260,6 +304,14 @@ STEPS = (
         ("nominal", "responses.band", "bound.radius_floor"),
     ),
     Step("bound", _bound, ("bound.nc",), ("pair", "nominal"), ("bound",)),
+    Step(
+        "coverage",
+        _coverage,
+        ("coverage.json",),
+        ("bound",),
+        ("bound.content", "bound.confidence", "bound.exchangeable"),
+    ),
+    Step("report", _report, ("report.html",), ("bound", "coverage"), ("study.name",)),
 )
 
 
