@@ -418,7 +418,7 @@ def file_format_page() -> str:
 def _table(variables: Iterable[Variable]) -> str:
     rows = ["| variable | dimensions | values | unit | meaning |", "|---|---|---|---|---|"]
     for each in variables:
-        meaning = each.meaning + (" Optional." if each.optional else "")
+        meaning = each.meaning.replace("|", r"\|") + (" Optional." if each.optional else "")
         dims = ", ".join(each.dims) or "none"
         words = _KINDS[each.kind][0]
         rows.append(f"| `{each.name}` | {dims} | {words} | {each.unit} | {meaning} |")
