@@ -31,6 +31,9 @@ from identkit.methods.weight_order import choose_order
 NEARLY = 3e-4
 FIT_TOLERANCE_DB = 0.015
 MOST_ROUNDS = 8
+# A trial weight may miss points by 0.04 dB; its stated excess counts what that costs.
+TRIAL_LEVEL = 1.005
+MOST_CHOICES = 4
 
 S = TypeVar("S")
 T = TypeVar("T")
@@ -150,7 +153,7 @@ class _Bounding:
         weight, trials, rule = self._first_weight()
         rounds = 0
         while self._look_between(weight) > 1.0 + NEARLY and rounds < MOST_ROUNDS:
-            weight = self._fit(weight.order, start=weight)
+            weight = self._refitted(weight)
             rounds += 1
         bound = WeightedNominal(weight, self.common)
         starts = self._best_points(weight)
@@ -201,10 +204,15 @@ class _Bounding:
     def _first_weight(self) -> tuple[MagnitudeWeight, tuple[OrderTrial, ...], str]:
         if self.order_given is not None:
             return self._fit(self.order_given), (), f"order {self.order_given}: asked for"
-        points, radius, profile, cap = self._fit_points()
-        choice = choose_order(
-            points, radius, profile=profile, cap=cap, tolerance_db=FIT_TOLERANCE_DB
-        )
+        for _ in range(MOST_CHOICES):
+            points, radius, profile, cap = self._fit_points()
+            choice = choose_order(
+                points, radius, profile=profile, cap=cap, tolerance_db=FIT_TOLERANCE_DB
+            )
+            missed = [self.curve.missed(weight, TRIAL_LEVEL) for weight in choice.weights]
+            if not any(places.size for places in missed):
+                break
+            self.fitted = np.append(self.fitted, self.curve.frequency[np.concatenate(missed)])
         trials = []
         for weight in choice.weights:
             full = self._scaled(weight, max(self.curve.shortfall(weight), 1.0), refuse=False)
@@ -222,6 +230,16 @@ class _Bounding:
             tolerance_db=FIT_TOLERANCE_DB,
             start=start,
         )
+
+    def _refitted(self, weight: MagnitudeWeight) -> MagnitudeWeight:
+        """Fit again from the last weight; from scratch as well if that is not proved the best."""
+        try:
+            warm = self._fit(weight.order, start=weight)
+        except InfeasibleError:
+            return self._fit(weight.order)
+        if warm.gap_db - warm.damping_cost_db <= 2.0 * FIT_TOLERANCE_DB:
+            return warm
+        return min(warm, self._fit(weight.order), key=lambda each: each.excess_db)
 
     def _fit_points(self) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray | None]:
         chosen = np.isin(self.curve.frequency, self.fitted)

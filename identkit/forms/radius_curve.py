@@ -10,6 +10,7 @@ from identkit.methods.curve_thinning import thinned
 from identkit.methods.magnitude_weight import MagnitudeWeight
 
 THINNING_DB = 0.01
+WIDEST_GAP = 0.02
 
 
 @dataclass(frozen=True)
@@ -60,8 +61,12 @@ class RadiusCurve:
         )
 
     def decisive(self) -> BoolArray:
-        """Return the points between which the curve is straight to 0.01 dB."""
-        return thinned(np.log(self.frequency), decibels(self.required), THINNING_DB)
+        """Return points between which the curve is straight to 0.01 dB, none 2 % apart."""
+        log_frequency = np.log(self.frequency)
+        keep = thinned(log_frequency, decibels(self.required), THINNING_DB)
+        cells = np.floor(log_frequency / WIDEST_GAP)
+        keep[np.flatnonzero(np.diff(cells, prepend=cells[0]) > 0.0)] = True
+        return keep
 
     def shortfall(self, weight: MagnitudeWeight) -> float:
         """Return the factor by which the weight has to grow to hold every point."""

@@ -66,6 +66,8 @@ def even_part(system: StateSpace) -> EvenPart:
     system
         One input, one output; no two poles may sum to zero (no poles on the axis).
     """
+    if not system.states:
+        return EvenPart(np.zeros(0), float(system.D[0, 0] ** 2))
     gramian = solve_continuous_lyapunov(system.A.T, -system.C.T @ system.C)
     row = system.D[0, 0] * system.C[0] + system.B[:, 0] @ gramian
     return EvenPart(row, float(system.D[0, 0] ** 2))
@@ -89,6 +91,8 @@ def level_crossings(test: LevelTest, level: float, low: float, high: float) -> F
         Ascending, rad/s. Zeros within 1e-4 of the axis are reported too: a false hit costs one
         evaluation, a missed one would cost the certificate.
     """
+    if not len(test.B):
+        return np.zeros(0)
     squared = test.A @ test.A
     row = 2.0 * (level**2 * test.bound.row - test.error.row) @ test.A
     constant = level**2 * test.bound.constant - test.error.constant
