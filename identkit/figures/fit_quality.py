@@ -17,6 +17,7 @@ from identkit.figures.style import (
     SOFT_INK,
     WIDE,
     Layout,
+    clipped,
     group_style,
     in_house_style,
     log_frequency_axis,
@@ -25,7 +26,8 @@ from identkit.figures.style import (
 )
 from identkit.grids import Gridded, datasets
 from identkit.methods.arrays import ComplexArray, FloatArray, IntArray
-from identkit.methods.modal_model import ModalParameters, modal_response
+from identkit.methods.modal_model import modal_response
+from identkit.plants import plant_parameters
 
 RESIDUAL_95 = float(np.sqrt(-np.log(0.05)))
 """Below this, in standard errors, lie 95 % of complex Gaussian errors (Rayleigh 1880)."""
@@ -85,7 +87,7 @@ def pick_fit_quality(fits: xr.Dataset, responses: Gridded) -> FitQuality:
     score = np.where(np.isfinite(ratio), ratio, -np.inf)
     worst = int(score.argmax())
     frequency, measured, deviation = _points(responses, str(fits["response"].values[worst]))
-    fitted = modal_response(frequency, plant_of(fits, worst))
+    fitted = modal_response(frequency, plant_parameters(fits, worst))
     degrees = 2 * max(frequency.size, 2) - _free_parameters(fits, worst)
     half = 1.96 * np.sqrt(2.0 / max(degrees, 1))
     return FitQuality(
@@ -99,35 +101,6 @@ def pick_fit_quality(fits: xr.Dataset, responses: Gridded) -> FitQuality:
         measured=20.0 * np.log10(np.abs(measured)),
         fitted=20.0 * np.log10(np.abs(fitted)),
         residual=np.abs(measured - fitted) / deviation,
-    )
-
-
-def plant_of(fits: xr.Dataset, at: int) -> ModalParameters:
-    """Return the fitted plant of the `at`-th response; missing modes are left out."""
-    one = fits.isel(response=at)
-    frequency = one["modal_frequency"].values.astype(float)
-    known = np.isfinite(frequency)
-
-    def pair(name: str) -> FloatArray:
-        values = one[name].values[:, 0, 0].astype(float)[known]
-        return np.asarray(np.nan_to_num(values), dtype=float)
-
-    def scalar(name: str) -> float:
-        value = float(np.ravel(one[name].values)[0]) if name in one else 0.0
-        return value if np.isfinite(value) else 0.0
-
-    return ModalParameters(
-        modal_frequency=frequency[known],
-        damping_ratio=one["damping_ratio"].values.astype(float)[known],
-        residue=pair("residue"),
-        residue_rate=pair("residue_rate") if "residue_rate" in one else np.zeros(known.sum()),
-        base=str(fits.attrs.get("base", "none")),
-        base_gain=scalar("base_gain"),
-        base_frequency=scalar("base_frequency"),
-        base_damping_ratio=scalar("base_damping_ratio"),
-        base_residue=scalar("base_residue"),
-        feedthrough=scalar("feedthrough"),
-        delay=scalar("delay"),
     )
 
 
@@ -182,13 +155,14 @@ def _noise_ratios(axes: Axes, picked: FitQuality, layout: Layout) -> None:
             ms=3.4,
             mec="none",
             alpha=0.85,
-            label=f"{picked.groups.name} {value}".strip(),
+            label=clipped(f"{picked.groups.name} {value}".strip()),
         )
     axes.set_title("" if layout.is_narrow else "noise ratio of every fit, by unit")
     axes.set_ylabel("noise ratio")
     axes.set_xlim(-0.8, len(picked.units) - 0.2)
     every = max(1, -(-len(picked.units) // (8 if layout.is_narrow else 26)))
-    axes.set_xticks(range(0, len(picked.units), every), picked.units[::every])
+    names = [clipped(name, 8) for name in picked.units[::every]]
+    axes.set_xticks(range(0, len(picked.units), every), names)
     axes.tick_params(axis="x", labelsize="small")
     axes.grid(axis="x", visible=False)
     if np.isfinite(picked.noise_ratio).any():
@@ -209,7 +183,7 @@ def _noise_ratios(axes: Axes, picked: FitQuality, layout: Layout) -> None:
 def _worst_fit(axes: Axes, picked: FitQuality, layout: Layout) -> None:
     axes.plot(picked.frequency, picked.measured, ".", color=BANDS[2], ms=2.4, rasterized=True)
     axes.plot(picked.frequency, picked.fitted, color=NOMINAL, lw=1.1)
-    axes.set_title(f"worst fit: {picked.worst_name}")
+    axes.set_title(f"worst fit: {clipped(picked.worst_name, 36)}")
     axes.set_ylabel("magnitude, dB")
     axes.yaxis.set_major_locator(MaxNLocator(5))
     low, high = float(picked.frequency.min()), float(picked.frequency.max())

@@ -15,8 +15,10 @@ from identkit.figures.style import (
     BANDS,
     INK,
     NOMINAL,
+    PAPER,
     WIDE,
     Layout,
+    clipped,
     frequency_label,
     group_style,
     in_house_style,
@@ -180,7 +182,8 @@ def _panel(axes: Axes, picked: ModeMap, at: int, x: FloatArray, limit: float) ->
             rasterized=True,
         )
     _beyond(axes, picked, at, x, limit)
-    axes.set_title(f"{picked.modes[at]}  {frequency_label(picked.population_frequency[at])}")
+    place = frequency_label(float(picked.population_frequency[at]))
+    axes.set_title(f"{clipped(picked.modes[at], 8)}  {place}")
 
 
 def _trend(axes: Axes, picked: ModeMap, at: int, x: FloatArray) -> None:
@@ -208,7 +211,7 @@ def _beyond(axes: Axes, picked: ModeMap, at: int, x: FloatArray, limit: float) -
             {name.split(",")[0] for name, hit in zip(picked.names, chosen, strict=True) if hit}
         )
         farthest = deviation[chosen][np.abs(deviation[chosen]).argmax()]
-        whose = owners[0] if len(owners) == 1 else f"{len(owners)} units"
+        whose = clipped(owners[0], 12) if len(owners) == 1 else f"{len(owners)} units"
         axes.annotate(
             f"{whose}: {farthest:+.1f} %",
             (0.5, 0.90 if sign > 0 else 0.06),
@@ -216,6 +219,7 @@ def _beyond(axes: Axes, picked: ModeMap, at: int, x: FloatArray, limit: float) -
             ha="center",
             color=ALARM,
             size="small",
+            bbox={"facecolor": PAPER, "edgecolor": "none", "alpha": 0.85, "pad": 0.8},
         )
 
 
@@ -228,7 +232,7 @@ def _legend(figure: Figure, picked: ModeMap, layout: Layout) -> None:
             marker=marker,
             ls="none",
             ms=5,
-            label=f"{picked.groups.name} {value}".strip(),
+            label=clipped(f"{picked.groups.name} {value}".strip()),
         )
         for value, (colour, marker) in (
             (value, group_style(at)) for at, value in enumerate(picked.groups.values)

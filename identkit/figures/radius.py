@@ -8,18 +8,20 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
-from identkit.figures.labels import short_names
+from identkit.figures.labels import short_names, units_of
 from identkit.figures.set_plants import labelled
 from identkit.figures.style import (
     BANDS,
     FLOOR,
     INK,
     NOMINAL,
+    PAPER,
     RULE,
     SOFT_INK,
     WEIGHT,
     WIDE,
     Layout,
+    clipped,
     group_style,
     in_house_style,
     log_frequency_axis,
@@ -30,8 +32,8 @@ from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.plant_set.fields import PlantSetFields
 from identkit.plant_set.response import nominal_response
 
-ROWS = 6
-"""How many responses that set the radius get a row of their own."""
+ROWS = 8
+"""How many units that set the radius get a row of their own."""
 
 
 @dataclass(frozen=True)
@@ -55,7 +57,9 @@ class RadiusWeight:
     setter
         (points,) index into `setters` of who sets the radius; -1 where the radius floor does.
     setters
-        Readable names, by share of the band they set, largest first.
+        Units, by share of the band they set, largest first.
+    touch_frequency, touch_names
+        (touches,) Hz and units of the plants that touch the weight.
     band
         Hz, in which everything is claimed.
     mode_names, mode_frequency
@@ -70,6 +74,8 @@ class RadiusWeight:
     nominal: FloatArray
     setter: IntArray
     setters: tuple[str, ...]
+    touch_frequency: FloatArray
+    touch_names: tuple[str, ...]
     band: tuple[float, float]
     mode_names: tuple[str, ...]
     mode_frequency: FloatArray
@@ -96,9 +102,11 @@ def pick_radius(
     """
     radii = contents.radii
     frequency = radii.frequency
-    names = readable_names(contents)
-    setters = _by_share(radii.set_by)
+    owners = unit_names(contents)
+    set_by = [owners.get(name, name) for name in radii.set_by]
+    setters = _by_share(set_by)
     place = {name: at for at, name in enumerate(setters)}
+    touches = sorted(contents.attribution, key=lambda each: -each.reach)[:ROWS]
     nominal = nominal_response(contents, frequency)[0, 0]
     blank = np.full(frequency.shape, np.nan)
     known = floor is not None and floor_frequency is not None and np.isfinite(floor).any()
@@ -110,8 +118,10 @@ def pick_radius(
         floor=_interpolated(frequency, floor_frequency, floor) if known else blank,
         allowed=excess * radii.allowed_excess * radii.required_radius,
         nominal=20.0 * np.log10(np.abs(nominal)),
-        setter=np.array([place.get(name, -1) for name in radii.set_by], dtype=int),
-        setters=tuple(names.get(name, name) for name in setters),
+        setter=np.array([place.get(name, -1) for name in set_by], dtype=int),
+        setters=tuple(setters),
+        touch_frequency=np.array([each.frequency for each in touches], dtype=float),
+        touch_names=tuple(owners.get(each.label, each.label) for each in touches),
         band=contents.band,
         mode_names=mode_names,
         mode_frequency=np.zeros(0) if mode_frequency is None else mode_frequency,
@@ -126,7 +136,15 @@ def readable_names(contents: PlantSetFields) -> dict[str, str]:
     return dict(zip(data["response"].values.tolist(), short_names(data).tolist(), strict=True))
 
 
-def _by_share(set_by: tuple[str, ...]) -> list[str]:
+def unit_names(contents: PlantSetFields) -> dict[str, str]:
+    """Return the unit of every plant of a set by its response id; the id where none is named."""
+    if not contents.plants:
+        return {}
+    data = labelled(contents.plants)
+    return dict(zip(data["response"].values.tolist(), units_of(data).tolist(), strict=True))
+
+
+def _by_share(set_by: list[str]) -> list[str]:
     counts = Counter(name for name in set_by if name)
     return [name for name, _ in sorted(counts.items(), key=lambda item: (-item[1], item[0]))]
 
@@ -152,7 +170,7 @@ def draw_radius(picked: RadiusWeight, layout: Layout = WIDE) -> Figure:
     nominal, radius, who = figure.subplots(
         3, 1, height_ratios=(1.5, 4.0, 0.35 + 0.25 * max(rows, 1)), sharex=True
     )
-    _nominal(nominal, picked)
+    _nominal(nominal, picked, layout)
     _radius(radius, picked, layout)
     _who(who, picked, layout)
     low, high = picked.band
@@ -162,27 +180,57 @@ def draw_radius(picked: RadiusWeight, layout: Layout = WIDE) -> Figure:
     return figure
 
 
-def _nominal(axes: Axes, picked: RadiusWeight) -> None:
+def _nominal(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     axes.plot(picked.frequency, picked.nominal, color=NOMINAL, lw=1.2)
     axes.set_ylabel("nominal, dB")
     axes.yaxis.set_major_locator(MaxNLocator(4))
-    mark_modes(axes, picked.mode_names, picked.mode_frequency)
+    mark_modes(axes, picked.mode_names, picked.mode_frequency, picked.band, layout)
 
 
-def mark_modes(axes: Axes, names: tuple[str, ...], frequency: FloatArray) -> None:
-    """Write the names of the modes along the upper edge, thin rules below them."""
-    for name, at in zip(names, frequency, strict=True):
-        axes.axvline(at, color=RULE, lw=0.8, zorder=0)
+def mark_modes(
+    axes: Axes,
+    names: tuple[str, ...],
+    frequency: FloatArray,
+    band: tuple[float, float],
+    layout: Layout,
+    *,
+    in_logarithms: bool = False,
+) -> None:
+    """Write the names of the modes along the upper edge, crowded ones one line higher.
+
+    Parameters
+    ----------
+    axes
+        A logarithmic axis, or one that carries logarithms to base 10.
+    names, frequency
+        (modes,) names and Hz, ascending.
+    band
+        Hz, ends of the axis.
+    layout
+        Decides how near is crowded.
+    in_logarithms
+        Whether the axis carries logarithms.
+    """
+    closest = (0.085 if layout.is_narrow else 0.035) * np.log10(band[1] / band[0])
+    raised, before = False, -np.inf
+    for name, hertz in zip(names, frequency, strict=True):
+        if not band[0] <= hertz <= band[1]:
+            continue
+        at = float(np.log10(hertz))
+        raised = at - before < closest and not raised
+        before = at
+        x = at if in_logarithms else hertz
+        axes.axvline(x, color=RULE, lw=0.8, zorder=0)
         axes.annotate(
             name,
-            (at, 1.0),
+            (x, 1.0),
             xycoords=("data", "axes fraction"),
-            xytext=(0, 2),
+            xytext=(0, 10 if raised else 1.5),
             textcoords="offset points",
             ha="center",
             va="bottom",
             color=SOFT_INK,
-            size="x-small",
+            size="small",
         )
 
 
@@ -205,11 +253,38 @@ def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     over = picked.radius > picked.weight * (1.0 + 1e-6)
     if over.any():
         axes.plot(f[over], picked.radius[over], ".", color=INK, ms=3, label="not held")
+    _touches(axes, picked)
     axes.axhline(1.0, color=SOFT_INK, lw=0.7)
     axes.set_ylabel("relative error, 1 = 100 %")
     curves = np.concatenate([picked.radius, picked.weight])
     ratio_axis(axes, bottom, 1.6 * float(np.nanmax(curves)))
     axes.legend(loc="upper left", ncols=1)
+
+
+def _touches(axes: Axes, picked: RadiusWeight) -> None:
+    """Ring the places where a plant touches the weight, and name its unit."""
+    if not picked.touch_frequency.size:
+        return
+    logs = np.log(picked.frequency)
+    height = np.exp(np.interp(np.log(picked.touch_frequency), logs, np.log(picked.weight)))
+    axes.plot(picked.touch_frequency, height, "o", mfc=PAPER, mec=WEIGHT, ms=4.2, zorder=4)
+    named: list[float] = []
+    places = zip(np.log10(picked.touch_frequency), height, picked.touch_names, strict=True)
+    for x, y, name in places:
+        if any(abs(x - other) < 0.06 for other in named):
+            continue
+        named.append(float(x))
+        axes.annotate(
+            clipped(name, 10),
+            (10.0**x, y),
+            xytext=(0, 5),
+            textcoords="offset points",
+            ha="center",
+            size="small",
+            color=WEIGHT,
+            bbox={"facecolor": PAPER, "edgecolor": "none", "alpha": 0.8, "pad": 0.4},
+            zorder=5,
+        )
 
 
 def _bottom(picked: RadiusWeight) -> float:
@@ -220,7 +295,7 @@ def _bottom(picked: RadiusWeight) -> float:
 
 def _who(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     shown = picked.setters[:ROWS]
-    names = list(shown)
+    names = [clipped(name, 12) for name in shown]
     for row in range(len(shown)):
         _segments(axes, picked, picked.setter == row, row, group_style(row)[0])
     if len(picked.setters) > ROWS:
@@ -231,7 +306,7 @@ def _who(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     axes.set_ylim(max(len(names), 1) - 0.4, -0.6)
     axes.grid(axis="y", visible=False)
     axes.spines["left"].set_visible(False)
-    axes.set_title("who sets the radius")
+    axes.set_title("unit that sets the radius")
 
 
 def _segments(axes: Axes, picked: RadiusWeight, chosen: BoolArray, row: int, colour: str) -> None:

@@ -18,6 +18,7 @@ from identkit.figures.style import (
     WEIGHT,
     WIDE,
     Layout,
+    clipped,
     frequency_ticks,
     in_house_style,
     new_figure,
@@ -144,18 +145,19 @@ def draw_reach_strip(picked: ReachStrip, layout: Layout = WIDE) -> Figure:
     top, strip = figure.subplots(
         2, 1, sharex=True, height_ratios=(1.0, float(np.clip(rows * 0.021, 1.2, 6.6)))
     )
-    _largest(top, picked)
+    _largest(top, picked, layout)
     _strip(strip, picked, figure, layout)
     return figure
 
 
-def _largest(axes: Axes, picked: ReachStrip) -> None:
+def _largest(axes: Axes, picked: ReachStrip, layout: Layout) -> None:
     largest = np.fmax.reduce(picked.reach, axis=0)
     axes.stairs(largest, np.log10(picked.edges), color=INK, lw=0.9)
     axes.axhline(1.0, color=WEIGHT, lw=1.0)
     axes.set_ylim(0.0, max(1.15, 1.08 * float(np.nanmax(largest))))
     axes.set_ylabel("largest")
-    mark_modes(axes, picked.mode_names, np.log10(picked.mode_frequency))
+    band = (float(picked.edges[0]), float(picked.edges[-1]))
+    mark_modes(axes, picked.mode_names, picked.mode_frequency, band, layout, in_logarithms=True)
 
 
 def _strip(axes: Axes, picked: ReachStrip, figure: Figure, layout: Layout) -> None:
@@ -193,5 +195,7 @@ def _unit_ticks(axes: Axes, picked: ReachStrip, layout: Layout) -> None:
     ends = np.append(picked.unit_starts[1:], picked.reach.shape[0])
     middles = 0.5 * (picked.unit_starts + ends - 1)
     every = max(1, -(-len(picked.units) // 48))
-    axes.set_yticks(middles[::every], picked.units[::every])
-    axes.tick_params(axis="y", length=0, labelsize="x-small" if len(picked.units) > 16 else "small")
+    axes.set_yticks(middles[::every], [clipped(name, 10) for name in picked.units[::every]])
+    axes.tick_params(
+        axis="y", length=0, labelsize="small" if len(picked.units) <= 30 else "x-small"
+    )

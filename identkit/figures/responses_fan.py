@@ -18,6 +18,7 @@ from identkit.figures.style import (
     NOMINAL,
     WIDE,
     Layout,
+    clipped,
     in_house_style,
     log_frequency_axis,
     new_figure,
@@ -102,22 +103,24 @@ def pick_responses_fan(
         reference = _interpolated(frequency, nominal_frequency, nominal_response)
         name = "nominal"
     else:
-        reference, name = _median_response(measured), "median"
-    deviation = np.degrees(np.angle(measured / reference))
+        reference, name = _median_response(frequency, measured), "median"
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = measured / reference
     base_phase = np.degrees(np.unwrap(np.angle(reference)))
     at, shown = _find(parts, highlight)
-    one = measured[at] if at >= 0 else np.full(frequency.shape, np.nan + 0j)
+    blank = np.full(frequency.shape, np.nan + 0j)
+    one, one_relative = (measured[at], relative[at]) if at >= 0 else (blank, blank)
     return ResponsesFan(
         frequency=frequency,
         magnitude=_percentiles(_decibels(measured)),
-        ratio=_percentiles(_decibels(measured / reference)),
-        phase=base_phase + _percentiles(deviation),
+        ratio=_percentiles(_decibels(relative)),
+        phase=base_phase + _percentiles(np.degrees(np.angle(relative))),
         reference_magnitude=_decibels(reference),
         reference_phase=base_phase,
         reference_name=name,
         highlight_magnitude=_decibels(one),
-        highlight_ratio=_decibels(one / reference),
-        highlight_phase=base_phase + np.degrees(np.angle(one / reference)),
+        highlight_ratio=_decibels(one_relative),
+        highlight_phase=base_phase + np.degrees(np.angle(one_relative)),
         highlight_name=shown,
         count=len(measured),
         unit=_unit(parts[0]),
@@ -148,12 +151,14 @@ def _interpolated(frequency: FloatArray, known: FloatArray, response: ComplexArr
     return np.asarray(np.exp(magnitude + 1j * phase), dtype=complex)
 
 
-def _median_response(measured: ComplexArray) -> ComplexArray:
-    with np.errstate(all="ignore"):
-        middle = (
-            _percentiles(measured.real, (50.0,))[0] + 1j * _percentiles(measured.imag, (50.0,))[0]
-        )
-    return np.asarray(middle, dtype=complex)
+def _median_response(frequency: FloatArray, measured: ComplexArray) -> ComplexArray:
+    """Return the median of both parts, interpolated where every response lacks the point."""
+    real, imaginary = (_percentiles(part, (50.0,))[0] for part in (measured.real, measured.imag))
+    middle = np.asarray(real + 1j * imaginary, dtype=complex)
+    known = np.isfinite(middle) & (middle != 0.0)
+    if known.sum() < 2 or known.all():
+        return middle
+    return _interpolated(frequency, frequency[known], middle[known])
 
 
 def _percentiles(values: FloatArray, at: Sequence[float] = PERCENTILES) -> FloatArray:
@@ -196,7 +201,7 @@ def draw_responses_fan(picked: ResponsesFan, layout: Layout = WIDE) -> Figure:
         shown = (picked.highlight_magnitude, picked.highlight_ratio, picked.highlight_phase)
         for axes, values in zip((magnitude, ratio, phase), shown, strict=True):
             axes.plot(picked.frequency, values, color=ALARM, lw=0.9)
-    magnitude.set_ylabel(f"dB re 1 {picked.unit}".rstrip())
+    magnitude.set_ylabel(f"dB re 1 {clipped(picked.unit)}".rstrip())
     ratio.set_ylabel(f"dB re {picked.reference_name}")
     phase.set_ylabel("phase, degrees")
     magnitude.yaxis.set_major_locator(MaxNLocator(6))
@@ -237,7 +242,7 @@ def _legend(axes: Axes, picked: ResponsesFan, layout: Layout) -> None:
     ]
     handles += axes.plot([], [], color=NOMINAL, lw=1.5, label=picked.reference_name)
     if picked.highlight_name:
-        handles += axes.plot([], [], color=ALARM, lw=0.9, label=picked.highlight_name)
+        handles += axes.plot([], [], color=ALARM, lw=0.9, label=clipped(picked.highlight_name, 30))
     title = axes.set_title(f"{picked.count} measured responses", color=INK)
     title.set_fontweight("bold")
     axes.legend(handles=handles, loc="lower left", ncols=2 if layout.is_narrow else 1)

@@ -17,6 +17,7 @@ from identkit.figures.style import (
     SOFT_INK,
     WIDE,
     Layout,
+    clipped,
     group_style,
     in_house_style,
     log_frequency_axis,
@@ -161,9 +162,9 @@ def _sheet(axes: Axes, picked: ScreeningOverview, layout: Layout) -> None:
 
 
 def _tile_edges(axes: Axes, down: tuple[str, ...], across: tuple[str, ...], layout: Layout) -> None:
-    axes.set_xticks(range(len(across)), across)
-    axes.set_yticks(range(len(down)), down)
-    crowded = sum(len(text) + 2 for text in across) > 14.0 * layout.width
+    axes.set_xticks(range(len(across)), [clipped(text, 16) for text in across])
+    axes.set_yticks(range(len(down)), [clipped(text, 22) for text in down])
+    crowded = sum(min(len(text), 16) + 2 for text in across) > 14.0 * layout.width
     axes.tick_params(axis="x", labelsize="x-small", rotation=90 if crowded else 0, length=0)
     axes.tick_params(axis="y", labelsize="x-small", length=0)
     axes.set_xticks(np.arange(-0.5, len(across)), minor=True)

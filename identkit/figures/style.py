@@ -43,10 +43,8 @@ GROUP_MARKERS = ("o", "s", "^", "D", "v", "P", "X", "h")
 
 REACH_COLOURS = LinearSegmentedColormap.from_list(
     "reach", ["#f4f7f2", "#cfe3dd", "#86bcbf", "#3d86a8", "#2b4f8a", "#3a1f5c"]
-)
+).with_extremes(over=WEIGHT, bad="#ffffff")
 """Light to dark in equal steps of lightness: order survives print and colour-vision deficiency."""
-REACH_COLOURS.set_over(WEIGHT)
-REACH_COLOURS.set_bad("#ffffff")
 
 
 @dataclass(frozen=True)
@@ -139,6 +137,11 @@ def in_house_style(
 def new_figure(layout: Layout, height: float) -> Figure:
     """Return an empty figure of the layout's width and `height` inches."""
     return Figure(figsize=(layout.width, height), layout="constrained")
+
+
+def clipped(text: str, most: int = 18) -> str:
+    """Return at most `most` letters of a user's label, so that no label squeezes a picture flat."""
+    return text if len(text) <= most else text[: most - 1] + "…"
 
 
 def frequency_label(frequency: float) -> str:

@@ -1,4 +1,4 @@
-"""What the bound stage wrote besides the set: pointwise floor and the orders it tried."""
+"""What nominal and bound wrote besides the set: pointwise floor and the orders tried."""
 
 from dataclasses import dataclass
 
@@ -25,20 +25,22 @@ class Floor:
     radius: FloatArray
 
 
-def pointwise_floor(bound: xr.Dataset | None) -> Floor | None:
-    """Return the pointwise floor of the bound stage, None where it was not computed."""
-    if bound is None or "pointwise_floor" not in bound:
+def pointwise_floor(nominal: xr.Dataset | None) -> Floor | None:
+    """Return the floor that the nominal stage computed, None where it did not run."""
+    if nominal is None or "radius_floor" not in nominal:
         return None
-    return Floor(bound["frequency"].values, bound["pointwise_floor"].values)
+    return Floor(nominal["frequency"].values, nominal["radius_floor"].values)
 
 
 def order_tradeoff(bound: xr.Dataset | None, chosen: int) -> OrderTradeoff | None:
     """Return the orders tried with what each achieved, None where only one was tried."""
-    if bound is None or "order_excess_db" not in bound or bound.sizes["order"] < 2:
+    if bound is None or "trial_order" not in bound or bound.sizes["trial"] < 2:
         return None
+    order = np.asarray(bound["trial_order"].values, dtype=np.int64)
+    rising = np.argsort(order, kind="stable")
     return OrderTradeoff(
-        order=np.asarray(bound["order"].values, dtype=np.int64),
-        excess=bound["order_excess_db"].values,
-        floor=bound["order_floor_db"].values,
+        order=order[rising],
+        excess=bound["trial_excess_db"].values[rising],
+        floor=bound["trial_floor_db"].values[rising],
         chosen=chosen,
     )

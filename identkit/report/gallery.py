@@ -104,7 +104,7 @@ def _radius(given: ReportInput) -> Any:
     contents = given.plant_set
     if contents is None or not contents.is_scalar or not contents.radii.frequency.size:
         return None
-    floor = pointwise_floor(given.bound)
+    floor = pointwise_floor(given.nominal)
     curves: dict[str, Any] = (
         {} if floor is None else {"floor_frequency": floor.frequency, "floor": floor.radius}
     )
@@ -116,9 +116,7 @@ def _strip(given: ReportInput) -> Any:
 
 
 def _worst(given: ReportInput) -> Any:
-    if given.plant_set is None or not given.plant_set.plants:
-        return None
-    return pick_worst(given.plant_set, **_modes(given))
+    return pick_worst(given.plant_set, audit=given.audit, **_modes(given))
 
 
 def _orders(given: ReportInput) -> Any:

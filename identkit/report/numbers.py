@@ -4,6 +4,8 @@ from collections.abc import Sequence
 
 import numpy as np
 
+_RAISED = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
+
 
 def number(value: float, digits: int = 3) -> str:
     """Return a number with so many significant digits; a dash where it is missing."""
@@ -16,7 +18,8 @@ def number(value: float, digits: int = 3) -> str:
         decimals = max(0, digits - 1 - int(np.floor(np.log10(magnitude))))
         text = f"{value:.{decimals}f}"
     else:
-        text = f"{value:.{digits - 1}e}"
+        digits_of, power = f"{value:.{digits - 1}e}".split("e")
+        text = f"{digits_of}×10{str(int(power)).translate(_RAISED)}"
     return text.replace("-", "−")
 
 
@@ -35,7 +38,8 @@ def with_interval(value: float, standard_error: float) -> str:
     if abs(value) >= 1e6 or decimals > 8:
         power = int(np.floor(np.log10(abs(value)))) if value else 0
         scale = 10.0**power
-        return f"({with_interval(value / scale, standard_error / scale)})·10^{power}"
+        raised = str(power).translate(_RAISED)
+        return f"({with_interval(value / scale, standard_error / scale)})×10{raised}"
     return f"{value:.{decimals}f} ± {standard_error:.{decimals}f}".replace("-", "−")
 
 

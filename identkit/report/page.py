@@ -12,11 +12,11 @@ from identkit.atomic import write_text
 from identkit.figures.radius import readable_names
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
-from identkit.report import tables
+from identkit.report import measurement_tables, mode_tables, set_tables
 from identkit.report.contents import ReportInput
 from identkit.report.gallery import Exhibit, hang, population_modes
 from identkit.report.numbers import number
-from identkit.report.tables import Table
+from identkit.report.table import Table
 from identkit.report.verdict import headline, verdict
 
 __all__ = ["ReportInput", "build_report", "write_report"]
@@ -95,16 +95,21 @@ def render(given: ReportInput, exhibits: Mapping[str, Exhibit]) -> str:
         sentences=list(given.verdict) or verdict(given),
         exhibits=exhibits,
         tables=_all_tables(given),
+        audit_counts=set_tables.audit_counts(given),
+        failed_checks=set_tables.failed_checks(given),
         provenance=_provenance(given),
         cautions=CAUTIONS,
     )
 
 
 def _subtitle(given: ReportInput) -> str:
-    parts = []
     first = datasets(given.responses)[0]
-    drive, output = first["input"].values, first["output"].values
-    parts.append(f"{', '.join(map(str, drive))} to {', '.join(map(str, output))}")
+    sides = []
+    for side in ("input", "output"):
+        unit = str(first.attrs.get(f"{side}_unit", ""))
+        names = ", ".join(map(str, first[side].values))
+        sides.append(f"{names} ({unit})" if unit else names)
+    parts = [" to ".join(sides)]
     if given.plant_set is not None:
         low, high = given.plant_set.band
         parts.append(f"{given.plant_set.form} set")
@@ -139,17 +144,17 @@ def _tiles(given: ReportInput) -> list[Tile]:
 def _all_tables(given: ReportInput) -> dict[str, Table]:
     names, frequency = population_modes(given)
     found = {
-        "attribution": tables.attribution_table(given),
-        "worst": tables.worst_table(given, names, frequency),
-        "population": tables.population_table(given),
-        "heads": tables.head_table(given),
-        "mode_outcomes": tables.mode_outcome_table(given),
-        "fit_outcomes": tables.fit_outcome_table(given),
-        "marks": tables.marks_table(given),
-        "skipped": tables.skipped_table(given),
-        "excluded": tables.excluded_table(given),
-        "orders": tables.order_table(given),
-        "audit": tables.audit_table(given),
+        "attribution": set_tables.attribution_table(given),
+        "worst": set_tables.worst_table(given, names, frequency),
+        "population": mode_tables.population_table(given),
+        "heads": mode_tables.head_table(given),
+        "mode_outcomes": mode_tables.mode_outcome_table(given),
+        "fit_outcomes": mode_tables.fit_outcome_table(given),
+        "marks": measurement_tables.marks_table(given),
+        "skipped": measurement_tables.skipped_table(given),
+        "excluded": measurement_tables.excluded_table(given),
+        "orders": set_tables.order_table(given),
+        "audit": set_tables.audit_table(given),
     }
     return {name: table for name, table in found.items() if table is not None}
 
@@ -157,9 +162,9 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
 def _provenance(given: ReportInput) -> dict[str, Any]:
     recorded = given.plant_set.provenance if given.plant_set is not None else None
     run = given.run
-    versions = {"python": run.get("python", ""), **run.get("libraries", {})}
-    if recorded is not None:
-        versions = {**versions, **recorded.versions}
+    versions = dict(recorded.versions) if recorded is not None else {}
+    versions |= {"python": run.get("python", ""), **run.get("libraries", {})}
+    versions |= {"identkit": run["version"]} if "version" in run else {}
     stages = {
         name: f"{float(entry.get('seconds', 0.0)):.2f} s"
         for name, entry in run.get("stages", {}).items()
@@ -168,7 +173,6 @@ def _provenance(given: ReportInput) -> dict[str, Any]:
     settings = recorded.settings if recorded is not None else {}
     return {
         "versions": {name: str(value) for name, value in versions.items() if value},
-        "version": str(run.get("version", "")),
         "stages": stages,
         "inputs": inputs or (dict(recorded.input_digests) if recorded is not None else {}),
         "settings": json.dumps(settings, indent=1, default=str) if settings else "",

@@ -21,6 +21,7 @@ _METADATA = re.compile(r"<metadata>.*?</metadata>", re.DOTALL)
 _STYLE = re.compile(r"<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
 _NAMESPACES = re.compile(r'\s+xmlns(:\w+)?="[^"]*"')
 _OUTER_SIZE = re.compile(r'(<svg[^>]*?)\s+width="[^"]*"|(<svg[^>]*?)\s+height="[^"]*"')
+_ID_OR_REFERENCE = re.compile(r'(\bid="|href="#|url\(#)([^")]*)(["\)])')
 _FONT = re.compile(r"'DejaVu Sans'(?:, '[^']*'|, [\w-]+)*")
 
 
@@ -64,7 +65,21 @@ def save_svg(figure: Figure, name: str) -> str:
             dpi=RASTER_DOTS_PER_INCH,
             metadata={"Date": None, "Creator": None, "Format": None, "Type": None},
         )
-    return _FONT.sub(SCREEN_FONTS, text.getvalue())
+    return _counted_ids(_FONT.sub(SCREEN_FONTS, text.getvalue()))
+
+
+def _counted_ids(document: str) -> str:
+    """Give the ids numbers in the order in which they stand.
+
+    The library's own ids are digests of coordinates, which differ in the last bit from run to run.
+    """
+    names = dict.fromkeys(re.findall(r'\bid="([^"]*)"', document))
+    number = {name: f"i{at}" for at, name in enumerate(names)}
+
+    def renamed(found: re.Match[str]) -> str:
+        return found.group(1) + number.get(found.group(2), found.group(2)) + found.group(3)
+
+    return _ID_OR_REFERENCE.sub(renamed, document)
 
 
 def save_png(figure: Figure, path: Path) -> None:

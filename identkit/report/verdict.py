@@ -6,6 +6,7 @@ from collections import Counter, defaultdict
 from dataclasses import dataclass
 
 import numpy as np
+import xarray as xr
 
 from identkit.figures.labels import natural_key, units_of
 from identkit.figures.radius import readable_names
@@ -61,44 +62,43 @@ def verdict(given: ReportInput) -> list[str]:
     given
         What the stages wrote; a stage that did not run adds no sentence.
     """
-    sentences = [_held(given), *_left_out(given), *_marked_but_kept(given), _modes(given)]
-    makers = (_odd_modes, _shifted, _weight, _between_grid, _setters, _limit_of_control)
-    sentences += [make(given) for make in (*makers, _audit, _coverage, _envelope)]
-    return [sentence for sentence in sentences if sentence]
+    measured = (_held, _rechecked, _modes, _odd_modes)
+    made = (_nominal, _weight, _setters, _limit_of_control)
+    makers = (*measured, *made, _marked_but_kept, _coverage, _envelope)
+    return [sentence for make in makers if (sentence := make(given))]
 
 
 def _held(given: ReportInput) -> str:
     read = sum(part.sizes["response"] for part in datasets(given.responses))
     if given.plant_set is None:
-        return f"{counted(read, 'response')} read; no set was made."
+        return f"{counted(read, 'response')} read{_skipped(given)}; no set was made."
     measured = given.plant_set.certificate.measured
-    left = len(measured.excluded)
-    rest = f"{read} read; {left} left out" if left else f"{read} read, none left out"
-    return f"Holds {measured.held} of {measured.of} measured responses used ({rest})."
+    return (
+        f"Holds {measured.held} of {measured.of} measured responses used "
+        f"({read} read{_skipped(given)}; {_left_out(given)})."
+    )
 
 
-def _left_out(given: ReportInput) -> list[str]:
-    sentences = []
-    if given.plant_set is not None:
-        by_reason: dict[str, list[str]] = defaultdict(list)
-        for excluded in given.plant_set.certificate.measured.excluded:
-            by_reason[excluded.reason].append(excluded.label)
-        owners = _owners(given)
-        for reason, names in by_reason.items():
-            units = sorted({owners.get(name, name) for name in names}, key=natural_key)
-            whose = f"unit {listed(units)}" if len(units) == 1 else f"units {listed(units)}"
-            sentences.append(
-                f"Left out of the bound: {counted(len(names), 'response')} of {whose} "
-                f"({reason}). Nothing is claimed about them."
-            )
-    skipped = skipped_files(given)
-    if skipped:
-        verb = "was" if len(skipped) == 1 else "were"
-        files = listed([name for name, _ in skipped], 3)
-        sentences.append(
-            f"{counted(len(skipped), 'file')} could not be used and {verb} skipped: {files}."
-        )
-    return sentences
+def _skipped(given: ReportInput) -> str:
+    count = len(skipped_files(given))
+    return f", {counted(count, 'file')} skipped as unusable" if count else ""
+
+
+def _left_out(given: ReportInput) -> str:
+    excluded = excluded_names(given.plant_set)
+    if not excluded:
+        return "none left out"
+    owners = _owners(given)
+    by_reason: dict[str, list[str]] = defaultdict(list)
+    for name, reason in excluded.items():
+        by_reason[reason].append(name)
+    parts = []
+    for reason, names in by_reason.items():
+        units = sorted({owners.get(name, name) for name in names}, key=natural_key)
+        named = len(units) == 1 and units[0] in reason
+        whose = "" if named else f" of {'unit' if len(units) == 1 else 'units'} {listed(units, 3)}"
+        parts.append(f"{len(names)} left out{whose}, {reason}")
+    return listed(parts, 3)
 
 
 def _owners(given: ReportInput) -> dict[str, str]:
@@ -123,9 +123,9 @@ def excluded_names(contents: PlantSetFields | None) -> dict[str, str]:
     return {each.label: each.reason for each in excluded}
 
 
-def _marked_but_kept(given: ReportInput) -> list[str]:
+def _marked_but_kept(given: ReportInput) -> str:
     if given.screening is None:
-        return []
+        return ""
     out = excluded_names(given.plant_set)
     counts: Counter[str] = Counter()
     kept = 0
@@ -136,12 +136,12 @@ def _marked_but_kept(given: ReportInput) -> list[str]:
                 kept += 1
                 counts.update(mark for mark, hit in zip(marks, row, strict=True) if hit)
     if not kept:
-        return []
+        return ""
     kinds = listed([f"{count} as {mark}" for mark, count in counts.most_common()])
-    return [
+    return (
         f"Screening marked {counted(kept, 'response')} that stayed in the bound ({kinds}): marks "
         f"never drop anything, so look at them before relying on the set."
-    ]
+    )
 
 
 def _modes(given: ReportInput) -> str:
@@ -180,34 +180,54 @@ def frequency_spread(given: ReportInput) -> FloatArray:
 def _odd_modes(given: ReportInput) -> str:
     if given.modes is None or "mode_in_population" not in given.modes:
         return ""
-    extra = given.modes.isel(mode=~given.modes["mode_in_population"].values.astype(bool))
-    units = units_of(given.modes)
-    found = []
+    extra, shifted = _extra_modes(given.modes), _shifted_modes(given.modes)
+    parts = []
+    for unit in sorted({*extra, *shifted}, key=natural_key):
+        found = []
+        if unit in extra:
+            verb = "is" if len(extra[unit]) == 1 else "are"
+            found.append(f"{listed(extra[unit], 3)} {verb} not in the population")
+        if unit in shifted:
+            verb = "stands" if len(shifted[unit]) == 1 else "stand"
+            found.append(f"{listed(shifted[unit], 4)} {verb} far from the population's place")
+        parts.append(f"{unit} ({'; '.join(found)})")
+    return f"Inspect {listed(parts, 3)}." if parts else ""
+
+
+def _extra_modes(modes: xr.Dataset) -> dict[str, list[str]]:
+    """Return, by unit, 'a mode near 7.15 kHz' for every mode outside the population."""
+    extra = modes.isel(mode=~modes["mode_in_population"].values.astype(bool))
+    units, found = units_of(modes), defaultdict(list)
     for at in range(extra.sizes["mode"]):
         frequency = extra["modal_frequency"].values[:, at]
-        owners = sorted(set(units[np.isfinite(frequency)].tolist()), key=natural_key)
-        if owners:
-            place = frequency_label(float(np.nanmedian(frequency)))
-            found.append(f"{extra['mode'].values[at]} near {place} ({listed(owners, 3)})")
-    if not found:
-        return ""
-    return f"Modes that the population does not have: {listed(found, 4)}; inspect these units."
+        for unit in sorted(set(units[np.isfinite(frequency)].tolist())):
+            place = frequency_label(float(np.nanmedian(frequency[units == unit])))
+            found[unit].append(f"a mode near {place}")
+    return dict(found)
 
 
-def _shifted(given: ReportInput) -> str:
-    if given.modes is None or "mode_outcome" not in given.modes:
-        return ""
-    hits = given.modes["mode_outcome"].values == Outcome.MODE_SHIFTED
-    units = units_of(given.modes)
-    by_unit: dict[str, list[str]] = {}
-    for at, name in enumerate(given.modes["mode"].values.astype(str)):
+def _shifted_modes(modes: xr.Dataset) -> dict[str, list[str]]:
+    """Return, by unit, the names of modes far from the population's."""
+    if "mode_outcome" not in modes:
+        return {}
+    hits = modes["mode_outcome"].values == Outcome.MODE_SHIFTED
+    units, found = units_of(modes), defaultdict(list)
+    for at, name in enumerate(modes["mode"].values.astype(str)):
         for unit in sorted(set(units[hits[:, at]].tolist())):
-            by_unit.setdefault(unit, []).append(str(name))
-    if not by_unit:
+            found[unit].append(str(name))
+    return dict(found)
+
+
+def _nominal(given: ReportInput) -> str:
+    if given.nominal is None or "floor_distance_mean_db" not in given.nominal:
         return ""
-    ordered = sorted(by_unit, key=natural_key)
-    shown = listed([f"{listed(by_unit[unit])} of {unit}" for unit in ordered], 4)
-    return f"Far from where the population has them stand {shown}: kept out of its spread; inspect."
+    mean = float(given.nominal["floor_distance_mean_db"].values)
+    peak = float(given.nominal["floor_distance_peak_db"].values)
+    return (
+        f"The nominal asks for {mean:.1f} dB more radius than the best conceivable one, on "
+        f"average over log frequency, and {peak:.1f} dB at worst (smallest enclosing disc of the "
+        f"plants at each frequency)."
+    )
 
 
 def _weight(given: ReportInput) -> str:
@@ -217,21 +237,27 @@ def _weight(given: ReportInput) -> str:
     return (
         f"Weight of order {best.order} is within {number(max(best.gap_db, 0.0), 2)} dB of the "
         f"best possible of that order: it exceeds the required radius times the allowed profile "
-        f"by at most {number(best.excess_db)} dB, and no weight of this order can do better than "
-        f"{number(best.floor_db)} dB at these frequencies (linear program, proved floor)."
+        f"by at most {best.excess_db:.2f} dB, against a proved floor of {best.floor_db:.2f} dB "
+        f"(linear programming)."
     )
 
 
-def _between_grid(given: ReportInput) -> str:
+def _rechecked(given: ReportInput) -> str:
     if given.plant_set is None:
         return ""
-    between = given.plant_set.certificate.between_grid
-    worst = f"1 + {number(between.worst - 1.0, 2)}" if 0 < between.worst - 1.0 < 1e-3 else ""
-    return (
-        f"Between the measured frequencies the largest reach found is "
-        f"{worst or number(between.worst, 6)} ({between.method}; tolerance "
-        f"{number(between.tolerance, 2)})."
+    between, audit = given.plant_set.certificate.between_grid, given.plant_set.certificate.audit
+    beyond = between.worst - 1.0
+    worst = f"1 + {number(beyond, 2)}" if 0.0 < beyond < 1e-3 else number(between.worst, 6)
+    found = (
+        f"between the measured frequencies the largest reach is {worst} ({between.method}; "
+        f"tolerance {number(between.tolerance, 2)})"
     )
+    if audit is None:
+        return f"Not audited yet; {found}."
+    if not audit.passed:
+        forced = " The set file was written all the same, as asked." * audit.forced
+        return f"The audit failed: {_ended('; '.join(audit.failed))}{forced}"
+    return f"The audit, which computes every reach again from the set file alone, agrees; {found}."
 
 
 def _setters(given: ReportInput) -> str:
@@ -244,7 +270,7 @@ def _setters(given: ReportInput) -> str:
         mode = f" ({entry.mode})" if entry.mode else ""
         name = names.get(entry.label, entry.label)
         shown.append(f"{name} near {frequency_label(entry.frequency)}{mode}")
-    return f"The bound is set by {listed(shown, 3)}: improving anything else gains nothing there."
+    return f"The bound is set by {listed(shown, 3)}; there these plants leave the weight no slack."
 
 
 def _limit_of_control(given: ReportInput) -> str:
@@ -262,19 +288,6 @@ def _limit_of_control(given: ReportInput) -> str:
         f"loop that rests on this set alone must keep its complementary sensitivity below 1 "
         f"there (|W T| < 1, Doyle and Stein 1981)."
     )
-
-
-def _audit(given: ReportInput) -> str:
-    if given.plant_set is None or given.plant_set.certificate.audit is None:
-        return ""
-    audit = given.plant_set.certificate.audit
-    if audit.passed:
-        return (
-            "The audit passed: reach of every plant was computed again from the set file alone, "
-            "by code that shares nothing with the code that made the set."
-        )
-    forced = " The set file was written all the same, because that was asked for." * audit.forced
-    return f"The audit failed: {_ended('; '.join(audit.failed))}{forced}"
 
 
 def _coverage(given: ReportInput) -> str:

@@ -5,11 +5,11 @@ from dataclasses import replace
 import numpy as np
 import xarray as xr
 
-from identkit.figures.fit_quality import plant_of
 from identkit.methods.magnitude_weight import fit_magnitude_weight
 from identkit.methods.modal_model import ModalParameters, modal_response
 from identkit.methods.state_space import frequency_response, modal_realisation
 from identkit.plant_set import fields
+from identkit.plants import plant_parameters
 from identkit.synthetic import InventedBench, invent_campaign, to_dataset
 
 
@@ -154,7 +154,7 @@ def plant_set_of(modes, *, order=6, points=240, excluded=()):
     """A set around the mean plant of the invented modes, with a weight that holds them all."""
     names = [str(name) for name in modes["response"].values if str(name) not in dict(excluded)]
     used = modes.sel(response=names)
-    plants = [plant_of(used, at) for at in range(len(names))]
+    plants = [plant_parameters(used, at) for at in range(len(names))]
     nominal = modal_realisation(_mean_plant(used), delay_order=2)
     frequency = np.geomspace(50.0, 22000.0, points)
     over = frequency_response(nominal, frequency).reshape(-1)
@@ -246,4 +246,34 @@ def _set(nominal, weight, frequency, radius, error, plants, excluded):
             fields.Attribution(p.response, p.reach_frequency, p.reach, "M5") for p in first
         ),
         provenance=fields.Provenance(versions={"identkit": "0.1.0"}, time="2026-05-01T10:00:00"),
+    )
+
+
+def audit_of(plant_set, modes):
+    """An audit of the set: used plants held, the plants left out judged too."""
+    used = {plant.response: plant for plant in plant_set.plants}
+    excluded = {each.label: each.reason for each in plant_set.certificate.measured.excluded}
+    names = [str(name) for name in modes["response"].values]
+    reach = np.array([used[n].reach if n in used else 3.2 for n in names])
+    frequency = np.array([used[n].reach_frequency if n in used else 6300.0 for n in names])
+    labels = {k: v for k, v in modes.coords.items() if v.dims == ("response",)}
+    held = np.where(reach <= 1.0, "held", "not held")
+    columns = {
+        "verdict": held,
+        "fit_verdict": held,
+        "fit_reach": reach,
+        "fit_reach_frequency": frequency,
+        "nearest_mode": np.full(len(names), "M4"),
+        "raw_verdict": np.where(reach <= 1.0, "cannot tell", "not held"),
+        "raw_reach": reach * 1.1,
+        "raw_reach_frequency": frequency,
+        "raw_reach_with_allowance": reach * 0.9,
+        "raw_reach_with_allowance_frequency": frequency,
+        "excluded": np.array([n in excluded for n in names]),
+        "reason": np.array([excluded.get(n, "") for n in names]),
+    }
+    return xr.Dataset(
+        {name: ("response", values) for name, values in columns.items()},
+        coords=labels,
+        attrs={"failed_checks": "[]"},
     )
