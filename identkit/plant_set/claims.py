@@ -228,23 +228,12 @@ def errors_at(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
 
 
 def excess_db(contents: PlantSetFields) -> float:
-    """Return the largest 20 log10 of weight over allowed radius, points outside included."""
+    """Return the largest 20 log10 of weight over radius times allowed excess, at the radii."""
     radii = contents.radii
     if not radii.frequency.size:
         return float("nan")
     allowed = radii.required_radius * radii.allowed_excess
-    ratios = _magnitude(contents, radii.frequency) / allowed
-    extension = radii.extension
-    if extension is not None and extension.frequency.size:
-        low = extension.frequency < radii.frequency[0]
-        ends = np.where(low, allowed[0], allowed[-1])
-        outside = _magnitude(contents, extension.frequency) / (ends * extension.factor)
-        ratios = np.append(ratios, outside)
-    if extension is not None and extension.at_infinity and contents.weights.left is not None:
-        ratios = np.append(
-            ratios, abs(contents.weights.left.D[0, 0]) / (allowed[-1] * extension.factor)
-        )
-    return float(20.0 * np.log10(ratios.max()))
+    return float(20.0 * np.log10((_magnitude(contents, radii.frequency) / allowed).max()))
 
 
 def _magnitude(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:

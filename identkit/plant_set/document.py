@@ -43,33 +43,33 @@ def to_document(contents: PlantSetFields) -> Document:
     return {
         "format": FORMAT,
         "form": contents.form,
-        "time": _plain(contents.time),
-        "inputs": [_plain(channel) for channel in contents.inputs],
-        "outputs": [_plain(channel) for channel in contents.outputs],
+        "time": plain(contents.time),
+        "inputs": [plain(channel) for channel in contents.inputs],
+        "outputs": [plain(channel) for channel in contents.outputs],
         "band": list(contents.band),
-        "nominal": _plain(contents.nominal),
-        "weights": _plain(contents.weights),
-        "parameters": [_plain(factor) for factor in contents.parameters],
-        "interconnection": _plain(contents.interconnection),
+        "nominal": plain(contents.nominal),
+        "weights": plain(contents.weights),
+        "parameters": [plain(factor) for factor in contents.parameters],
+        "interconnection": plain(contents.interconnection),
         "plants": [plant_to(plant) for plant in contents.plants],
-        "radii": _plain(contents.radii),
-        "certificate": _plain(contents.certificate),
-        "attribution": [_plain(line) for line in contents.attribution],
-        "provenance": _plain(contents.provenance),
+        "radii": plain(contents.radii),
+        "certificate": plain(contents.certificate),
+        "attribution": [plain(line) for line in contents.attribution],
+        "provenance": plain(contents.provenance),
     }
 
 
-def _plain(value: Any) -> Any:
-    """Turn dataclasses, arrays, tuples and mappings into JSON values; None fields are left out."""
+def plain(value: Any) -> Any:
+    """Return dataclasses, arrays, tuples and mappings as JSON values; None fields are left out."""
     if isinstance(value, np.ndarray | np.generic):
         return value.tolist()
     if hasattr(value, "__dataclass_fields__"):
         items = {item.name: getattr(value, item.name) for item in fields(value)}
-        return {name: _plain(content) for name, content in items.items() if content is not None}
+        return {name: plain(content) for name, content in items.items() if content is not None}
     if isinstance(value, Mapping):
-        return {str(name): _plain(content) for name, content in value.items()}
+        return {str(name): plain(content) for name, content in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(item) for item in value]
+        return [plain(item) for item in value]
     return value
 
 

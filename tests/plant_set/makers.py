@@ -6,7 +6,6 @@ from dataclasses import replace
 import numpy as np
 
 from identkit.methods.magnitude_weight import fit_magnitude_weight
-from identkit.methods.radius_problem import OUTSIDE_DECADES, OUTSIDE_POINTS
 from identkit.plant_set import fields as f
 from identkit.plant_set.claims import excess_db
 from identkit.plant_set.interconnection import output_multiplicative
@@ -15,6 +14,7 @@ from identkit.plant_set.reach import Surroundings, reach_of_plants
 from identkit.plant_set.response import plant_response
 from identkit.plant_set.sample import series, static
 from identkit.plant_set.schur import plant_matrices
+from identkit.stages.export import extension_of
 
 BAND = (50.0, 20_000.0)
 FLOOR = 0.02
@@ -167,14 +167,12 @@ def optimal_set(
         if reach.value.max() <= 1.0 + 1e-9:
             break
         grid = np.union1d(grid, reach.frequency[reach.value > 1.0 + 1e-9])
-    steps = np.geomspace(1.25, 10.0**OUTSIDE_DECADES, OUTSIDE_POINTS)
-    outside = np.concatenate([[0.0], (grid[0] / steps)[::-1], grid[-1] * steps])
     return _finished(
         contents,
         grid,
         profile,
         floor_db=fitted.floor_db,
-        extension=f.Extension(10.0, outside, True),
+        extension=extension_of(grid, radii.required_radius, profile, None),
     )
 
 

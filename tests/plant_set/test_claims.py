@@ -116,19 +116,6 @@ def test_a_ceiling_that_is_not_kept(bounded):
     assert "radii.ceiling" in claims(replace(bounded, radii=radii))
 
 
-def test_excess_counts_outside_and_at_infinity(bounded):
-    inside = replace(bounded, radii=replace(bounded.radii, extension=None))
-    assert excess_db(inside) <= excess_db(bounded)
-    tight = f.Extension(1e-3, np.array([0.0]), True)
-    outside = replace(bounded, radii=replace(bounded.radii, extension=tight))
-    assert excess_db(outside) > excess_db(bounded) + 20.0
-    infinite = f.Extension(1e-3, np.zeros(0), True)
-    at_infinity = replace(bounded, radii=replace(bounded.radii, extension=infinite))
-    allowed = bounded.radii.required_radius[-1] * bounded.radii.allowed_excess[-1]
-    expected = 20 * np.log10(abs(bounded.weights.left.D[0, 0]) / allowed / 1e-3)
-    assert excess_db(at_infinity) == pytest.approx(expected, abs=1e-9)
-
-
 def test_errors_are_reach_under_a_weight_of_one(bounded):
     grid = np.array([100.0, 1500.0, 9000.0])
     nominal = bounded.frequency_response(grid)[0, 0]
