@@ -163,9 +163,7 @@ def _with_decimal_points(rows: list[str], delimiter: str | None) -> list[str]:
 
 def _numbers(table: _TextTable, columns: FoundColumns) -> FloatArray:
     """Return the wanted columns, shape (columns, rows), in the file's own units."""
-    width = len(table.header)
-    even = all(len(_split(row, table.delimiter)) == width for row in table.rows)
-    if even:
+    if _is_even(table):
         try:
             return np.loadtxt(
                 table.rows,
@@ -178,6 +176,14 @@ def _numbers(table: _TextTable, columns: FoundColumns) -> FloatArray:
         except ValueError:
             pass
     return _numbers_by_line(table, columns)
+
+
+def _is_even(table: _TextTable) -> bool:
+    """Whether every row has as many values as the header has names."""
+    width, mark = len(table.header), table.delimiter
+    if mark is None:
+        return all(len(_split(row, None)) == width for row in table.rows)
+    return all(row.count(mark) == width - 1 for row in table.rows)
 
 
 def _numbers_by_line(table: _TextTable, columns: FoundColumns) -> FloatArray:
