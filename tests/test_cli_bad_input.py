@@ -323,7 +323,6 @@ def test_netcdf_without_responses(study, capsys):
         ('name = "spoiled"', 'name = "spoiled"\nresults = "../elsewhere"', ("elsewhere",)),
         ('name = "spoiled"', 'name = "spoiled"\nresults = "/elsewhere"', ("elsewhere",)),
         ("order = 4", "order = 4\nexclude = [{ unit = 'U99', reason = 'x' }]", ("U99",)),
-        ("order = 4", "order = 4\ncap = [[100, 1e-9]]", ("cap",)),
         ("modes = 3", "modes = 3\nbase = 'hinge'", ("hinge", "pivot")),
         ("bench/{unit}", "bench/{unit", ("bench",)),
         ("bench/{unit}", "bench/{unit}_{unit}", ("unit",)),
@@ -332,6 +331,15 @@ def test_netcdf_without_responses(study, capsys):
 def test_wrong_setting_is_named(study, capsys, old, new, fragments):
     set_in_study(study, old, new)
     assert_refused(study, capsys, *fragments)
+
+
+def test_cap_that_no_weight_can_keep_is_named_with_its_place(study, capsys):
+    set_in_study(study, "order = 4", "order = 4\ncap = [[100, 1e-9]]")
+    code, _, error = run(["run", study / "study.toml", "--quiet", "--jobs", "1"], capsys)
+    assert code == 2
+    assert len(error.splitlines()) == 1
+    assert "cap" in error
+    assert "Hz" in error
 
 
 def test_missing_study_file(study, capsys):
