@@ -20,6 +20,7 @@ in its `Stage.parts_folder` stays for the next run as long as the key is the sam
 import hashlib
 import json
 import logging
+import os
 import platform
 import shutil
 import time
@@ -346,10 +347,7 @@ def _known_or_read(path: Path, known: dict[str, Any] | None) -> dict[str, Any]:
 
 
 def _relative(path: Path, folder: Path) -> str:
-    resolved = path.resolve()
-    if resolved.is_relative_to(folder):
-        return resolved.relative_to(folder).as_posix()
-    return resolved.as_posix()
+    return Path(os.path.relpath(path, folder)).as_posix()
 
 
 def _same_file(path: Path, size: int | None) -> bool:

@@ -21,6 +21,7 @@ from identkit.readers.path_pattern import (
     LabelledFile,
     PathPattern,
     relative_to,
+    without_suffix,
 )
 from identkit.readers.path_pattern import CampaignFiles as CampaignFiles
 from identkit.readers.text import read_text
@@ -134,7 +135,7 @@ def find_files(
     above = Path(os.path.commonpath([path.parent for path in resolved]))
     return CampaignFiles(
         tuple(
-            LabelledFile(path, whole.relative_to(above).with_suffix("").as_posix(), label(path))
+            LabelledFile(path, without_suffix(whole.relative_to(above).as_posix()), label(path))
             for path, whole in zip(paths, resolved, strict=True)
         )
     )

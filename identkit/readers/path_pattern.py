@@ -274,11 +274,12 @@ def _what_is_in(folder: Path) -> str:
 
 def _identities(paths: list[str], pattern: str) -> list[str]:
     """Drop the suffix of every path, unless that makes two of them the same."""
-    short = [_without_suffix(path, pattern) for path in paths]
+    short = [without_suffix(path, pattern) for path in paths]
     return short if len(set(short)) == len(short) else paths
 
 
-def _without_suffix(path: str, pattern: str) -> str:
+def without_suffix(path: str, pattern: str = "") -> str:
+    """Drop a suffix that is one of a data file or that the pattern ends with; keep 25.5 whole."""
     suffix = Path(path).suffix
     known = suffix.lower() in _SUFFIXES or (suffix and pattern.endswith(suffix))
     return path.removesuffix(suffix) if known else path

@@ -132,6 +132,13 @@ def test_files_by_hand_are_named_below_the_folder_they_share(campaign):
     assert "unit" not in plain.coords
 
 
+def test_a_point_in_the_name_of_a_file_by_hand_is_no_suffix(tmp_path):
+    write(tmp_path / "H0_25.5")
+    write(tmp_path / "H0_30.5.csv")
+    data = read_responses([tmp_path / "H0_25.5", tmp_path / "H0_30.5.csv"], folder=tmp_path)
+    assert data["response"].values.tolist() == ["H0_25.5", "H0_30.5"]
+
+
 def test_the_same_file_twice_by_hand_is_refused(campaign):
     file = campaign / "bench/U1/H0_25C.csv"
     with pytest.raises(InputError, match="the name more than once"):

@@ -114,6 +114,14 @@ def test_plain_hdf5_without_named_dimensions(tmp_path):
     )
 
 
+def test_plain_hdf5_of_another_shape_is_refused(tmp_path):
+    with h5py.File(tmp_path / "r.h5", "w") as file:
+        file["frequency_response"] = np.ones((2, 3), complex)
+        file["frequency"] = np.arange(1.0, 4.0)
+    with pytest.raises(InputError, match="without names of its 2 dimensions; expected the dim"):
+        read_responses("r.h5", folder=tmp_path)
+
+
 @pytest.mark.parametrize(
     ("change", "options", "sentence"),
     [
@@ -124,6 +132,16 @@ def test_plain_hdf5_without_named_dimensions(tmp_path):
             "expected also the variable frequency_response",
         ),
         (lambda d: d.rename(frequency="f"), {}, "expected also the variable frequency"),
+        (
+            lambda d: d.assign_coords(frequency=d["frequency"].assign_attrs(units="furlong")),
+            {},
+            'found frequency in "furlong"; expected one of Hz',
+        ),
+        (
+            lambda d: d.drop_vars("frequency").assign(frequency=("response", [1.0, 2.0])),
+            {},
+            "found frequency_response along ('response', 'output', 'input', 'frequency')",
+        ),
         (lambda d: d.map(np.real), {}, "frequency_response of type float64; expected complex"),
         (
             lambda d: xr.concat([d, d.assign_coords(output=["z"])], "output"),
