@@ -194,10 +194,11 @@ def check_counts(contents: PlantSetFields) -> list[FailedCheck]:
     if len(setting) != measured.setting:
         name = "certificate.measured.setting"
         failed.append(FailedCheck(name, str(measured.setting), f"{len(setting)} in radii.set_by"))
-    total = measured.held + len(measured.excluded)
-    if total > measured.of:
-        name = "certificate.measured.of"
-        failed.append(FailedCheck(name, str(measured.of), f"at least {total}"))
+    listed = {plant.response for plant in contents.plants} - _excluded(contents)
+    least = max(measured.setting, len(listed))
+    if not least <= measured.held <= measured.of:
+        name = "certificate.measured.held"
+        failed.append(FailedCheck(name, str(measured.held), f"from {least} to {measured.of}"))
     return failed
 
 

@@ -221,7 +221,10 @@ class Excluded:
 
 @dataclass(frozen=True)
 class Measured:
-    """How many measured plants the set holds; `setting` of them set the radius somewhere."""
+    """How many of the responses that count are held; `setting` of them set the radius somewhere.
+
+    The excluded are not among `of`.
+    """
 
     held: int
     of: int

@@ -266,7 +266,7 @@ def _certificate(bound: xr.Dataset, modes: xr.Dataset) -> f.Certificate:
     return f.Certificate(
         measured=f.Measured(
             held=int(held.sum()),
-            of=int(used.size),
+            of=int(used.sum()),
             setting=len({str(name) for name in bound["radius_setter"].values} - {""}),
             excluded=tuple(
                 f.Excluded(str(name), str(reason))

@@ -81,7 +81,7 @@ def test_an_edited_optimality(bounded, field, change):
 
 def test_counts_that_do_not_add_up(bounded):
     measured = replace(bounded.certificate.measured, of=3)
-    assert "certificate.measured.of" in claims(with_certificate(bounded, measured=measured))
+    assert "certificate.measured.held" in claims(with_certificate(bounded, measured=measured))
     measured = replace(bounded.certificate.measured, setting=1)
     assert "certificate.measured.setting" in claims(with_certificate(bounded, measured=measured))
 
@@ -93,9 +93,7 @@ def test_a_plant_beyond_the_set_has_to_be_excluded(bounded, make_family):
     assert odd.reach > 1.0
     wide = replace(bounded, plants=(*bounded.plants, odd))
     assert "plants, odd, reach" in claims(wide)
-    measured = replace(
-        bounded.certificate.measured, of=25, excluded=(f.Excluded("odd", "cracked"),)
-    )
+    measured = replace(bounded.certificate.measured, excluded=(f.Excluded("odd", "cracked"),))
     assert check_claims(with_certificate(wide, measured=measured)) == []
 
 

@@ -176,9 +176,7 @@ def test_an_excluded_response_is_judged_but_does_not_count(bounded, makers):
     far = replace(
         plants[2], response="odd", modal_frequency=plants[2].modal_frequency * [1, 1, 1.1, 1]
     )
-    measured = replace(
-        bounded.certificate.measured, of=25, excluded=(f.Excluded("odd", "cracked arm"),)
-    )
+    measured = replace(bounded.certificate.measured, excluded=(f.Excluded("odd", "cracked arm"),))
     contents = replace(bounded, certificate=replace(bounded.certificate, measured=measured))
     table = audit(contents, modes_of([*plants, far]))
     row = table.sel(response="odd")
