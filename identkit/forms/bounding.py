@@ -31,9 +31,9 @@ from identkit.methods.weight_order import choose_order
 NEARLY = 3e-4
 FIT_TOLERANCE_DB = 0.015
 MOST_ROUNDS = 8
-# A trial weight may miss points by 0.04 dB; its stated excess counts what that costs.
-TRIAL_LEVEL = 1.005
-MOST_CHOICES = 4
+# A trial weight may miss points by 0.1 dB; its stated excess counts what that costs.
+TRIAL_LEVEL = 1.012
+MOST_COMPLETIONS = 4
 
 S = TypeVar("S")
 T = TypeVar("T")
@@ -204,20 +204,27 @@ class _Bounding:
     def _first_weight(self) -> tuple[MagnitudeWeight, tuple[OrderTrial, ...], str]:
         if self.order_given is not None:
             return self._fit(self.order_given), (), f"order {self.order_given}: asked for"
-        for _ in range(MOST_CHOICES):
-            points, radius, profile, cap = self._fit_points()
-            choice = choose_order(
-                points, radius, profile=profile, cap=cap, tolerance_db=FIT_TOLERANCE_DB
-            )
-            missed = [self.curve.missed(weight, TRIAL_LEVEL) for weight in choice.weights]
-            if not any(places.size for places in missed):
-                break
-            self.fitted = np.append(self.fitted, self.curve.frequency[np.concatenate(missed)])
+        points, radius, profile, cap = self._fit_points()
+        choice = choose_order(
+            points, radius, profile=profile, cap=cap, tolerance_db=FIT_TOLERANCE_DB
+        )
+        weights = self._completed({weight.order: weight for weight in choice.weights})
         trials = []
-        for weight in choice.weights:
+        for weight in weights.values():
             full = self._scaled(weight, max(self.curve.shortfall(weight), 1.0), refuse=False)
             trials.append(OrderTrial(full.order, full.excess_db, full.floor_db))
-        return choice.chosen, tuple(trials), choice.rule
+        return weights[choice.chosen.order], tuple(trials), choice.rule
+
+    def _completed(self, weights: dict[int, MagnitudeWeight]) -> dict[int, MagnitudeWeight]:
+        """Fit those trial weights again that miss points of the curve they were not fitted to."""
+        for _ in range(MOST_COMPLETIONS):
+            missed = {n: self._missed(weight, TRIAL_LEVEL) for n, weight in weights.items()}
+            self.fitted = np.concatenate([self.fitted, *missed.values()])
+            stale = [n for n, frequency in missed.items() if frequency.size]
+            if not stale:
+                break
+            weights = weights | {n: self._refitted(weights[n]) for n in stale}
+        return weights
 
     def _fit(self, order: int, start: MagnitudeWeight | None = None) -> MagnitudeWeight:
         points, radius, profile, cap = self._fit_points()
@@ -251,20 +258,32 @@ class _Bounding:
         return points, radius * (1.0 + NEARLY), profile, interpolated(self.options.cap, points)
 
     def _look_between(self, weight: MagnitudeWeight) -> float:
-        """Add the points the weight missed to the curve and to the fit; return the worst ratio."""
-        missed = self.curve.missed(weight, 1.0 + LEVEL_TOLERANCE)
+        """Add what the weight missed to the curve and to the fit.
+
+        Returns the worst of the ratios of the plants to the weight, and of its excess over the
+        whole curve to the excess it was fitted for.
+        """
+        missed = self._missed(weight, 1.0 + LEVEL_TOLERANCE)
+        over = self.curve.excess_db(weight, self._profile()) - weight.excess_db
         bound = WeightedNominal(weight, self.common)
         found = self.each(
             lambda comparison: peaks_above(comparison, bound, 1.0 + LEVEL_TOLERANCE),
             self.comparisons,
         )
         peaks = [peak for several in found for peak in several]
-        worst = max([self.curve.shortfall(weight), *(peak.ratio for peak in peaks)])
+        ratios = [peak.ratio for peak in peaks]
+        worst = max([self.curve.shortfall(weight), float(10.0 ** (over / 20.0)), *ratios])
         added = np.unique([peak.frequency for peak in peaks])
-        self.fitted = np.concatenate([self.fitted, self.curve.frequency[missed], added])
+        self.fitted = np.concatenate([self.fitted, missed, added])
         if added.size:
             self.curve = self.curve.joined(self._curve_at(added))
         return worst
+
+    def _missed(self, weight: MagnitudeWeight, level: float) -> FloatArray:
+        return self.curve.frequency[self.curve.missed(weight, self._profile(), level)]
+
+    def _profile(self) -> FloatArray:
+        return interpolated(self.options.profile, self.curve.frequency)
 
     def _best_points(self, weight: MagnitudeWeight) -> FloatArray:
         """Return the best grid point of every plant, Hz."""
@@ -291,7 +310,7 @@ class _Bounding:
                     "times the cap",
                     float(frequency[worst]),
                 )
-        excess = self.curve.excess_db(scaled, interpolated(self.options.profile, frequency))
+        excess = self.curve.excess_db(scaled, self._profile())
         return replace(scaled, excess_db=excess, gap_db=excess - weight.floor_db)
 
     def _tolerance(self, weight: MagnitudeWeight) -> float:

@@ -72,17 +72,26 @@ class RadiusCurve:
         """Return the factor by which the weight has to grow to hold every point."""
         return float(np.max(self.required / weight.magnitude(self.frequency)))
 
-    def missed(self, weight: MagnitudeWeight, level: float) -> IntArray:
-        """Return the points where required / |W| peaks above `level`."""
-        ratio = self.required / weight.magnitude(self.frequency)
-        padded = np.concatenate([[-np.inf], ratio, [-np.inf]])
-        peak = (ratio >= padded[:-2]) & (ratio > padded[2:]) & (ratio > level)
-        return np.flatnonzero(peak)
+    def missed(self, weight: MagnitudeWeight, profile: FloatArray, level: float) -> IntArray:
+        """Return points where a weight fitted to some of them is not what it states.
+
+        Those are the peaks above `level` of required / |W|, and of |W| / (required profile) over
+        the weight's own excess.
+        """
+        ratio = weight.magnitude(self.frequency) / self.required
+        allowed = profile * 10.0 ** (weight.excess_db / 20.0)
+        return np.union1d(_peaks(1.0 / ratio, level), _peaks(ratio / allowed, level))
 
     def excess_db(self, weight: MagnitudeWeight, profile: FloatArray) -> float:
         """Return the largest |W| / (required profile) over the points, dB."""
         ratio = weight.magnitude(self.frequency) / (self.required * profile)
         return float(np.max(decibels(ratio)))
+
+
+def _peaks(ratio: FloatArray, level: float) -> IntArray:
+    """Return the local maxima above `level`."""
+    padded = np.concatenate([[-np.inf], ratio, [-np.inf]])
+    return np.flatnonzero((ratio >= padded[:-2]) & (ratio > padded[2:]) & (ratio > level))
 
 
 def interpolated(curve: Sequence[tuple[float, float]], frequency: FloatArray) -> FloatArray:
