@@ -13,9 +13,14 @@ import xarray as xr
 from identkit.atomic import write_text
 from identkit.grids import Gridded, load, save
 from identkit.not_yet import refuse_unavailable
+from identkit.plant_set.files import load_set
+from identkit.plant_set.model import PlantSet
 from identkit.progress import Progress, silent
 from identkit.readers.campaign import CampaignFiles
+from identkit.report.contents import ReportInput
+from identkit.report.verdict import verdict
 from identkit.settings import Settings, load_settings
+from identkit.stages.export import SetOrigin, build_set
 from identkit.stages.read import READ_SETTINGS, find_measurements, read
 from identkit.stages.selection import left_out
 from identkit.study import Stage, StudyFolder
@@ -71,6 +76,11 @@ class Work:
         data = self.gridded(name)
         assert isinstance(data, xr.Dataset)
         return data
+
+    def json(self, name: str) -> dict[str, Any]:
+        """Return the contents of a JSON results file."""
+        contents: dict[str, Any] = json.loads(self.study.path(name).read_text(encoding="utf-8"))
+        return contents
 
     def save(self, data: Gridded, name: str) -> None:
         """Write labelled data to a results file and keep it for the steps that follow."""
@@ -142,9 +152,9 @@ def run_study(
                 files=step.files,
                 settings=step.settings,
                 after=step.after,
-                inputs=[file.path for file in found.files] if step.name == "read" else [],
+                inputs=found.paths if step.name == "read" else [],
             )
-            if not stage.current:
+            if not stage.current or not _set_files_stand(folder, step.name):
                 with stage.work():
                     cores = jobs or os.cpu_count() or 1
                     step.work(Work(folder, stage, found, cores, progress(step.name), kept))
@@ -156,6 +166,14 @@ def _steps_until(until: str | None) -> tuple[Step, ...]:
     # time records come with a later version; until then there is nothing to estimate
     last = {"estimate": "read"}.get(until or "", until)
     return STEPS[: names.index(last) + 1] if last is not None else STEPS
+
+
+def _set_files_stand(folder: StudyFolder, name: str) -> bool:
+    """Tell whether the set files that the certificate names are there; how many depends on it."""
+    if name != "export":
+        return True
+    certificate = json.loads(folder.path("certificate.json").read_text(encoding="utf-8"))
+    return all(folder.path(file).is_file() for file in certificate["set_files"])
 
 
 def _read(work: Work) -> None:
@@ -247,6 +265,20 @@ def _bound(work: Work) -> None:
         jobs=work.jobs,
     )
     work.save(bound, "bound.nc")
+    draft = build_set(
+        work.dataset("nominal.nc"), bound, work.dataset("modes.nc"), _origin(work.study)
+    )
+    draft.save(work.stage.path("draft.h5"))
+
+
+def _origin(study: StudyFolder) -> SetOrigin:
+    settings = study.settings
+    return SetOrigin(
+        radius_floor=settings.bound.radius_floor,
+        cap=settings.bound.cap,
+        settings=settings.model_dump(mode="json"),
+        input_digests={name: entry["sha256"] for name, entry in study.record["inputs"].items()},
+    )
 
 
 def _coverage(work: Work) -> None:
@@ -259,11 +291,42 @@ def _coverage(work: Work) -> None:
     write_text(work.stage.path("coverage.json"), json.dumps(coverage, indent=1))
 
 
-def _report(work: Work) -> None:
-    from identkit.report.contents import ReportInput
-    from identkit.report.page import write_report
+def _audit(work: Work) -> None:
+    from identkit.stages.audit import audit, audit_table
+    from identkit.stages.tables import write_table
 
-    given = ReportInput(
+    audited = audit(
+        load_set(work.study.path("draft.h5")),
+        work.dataset("modes.nc"),
+        work.gridded("responses.nc"),
+        work.gridded("screening.nc"),
+    )
+    work.save(audited, "audit.nc")
+    write_table(audit_table(audited), work.stage.path("audit.csv"))
+
+
+def _export(work: Work) -> None:
+    from identkit.stages.export import finished_set, write_certificate, write_set_files
+
+    coverage = work.json("coverage.json")
+    draft = load_set(work.study.path("draft.h5"))
+    final = finished_set(draft, work.dataset("audit.nc"), coverage)
+    written = write_set_files(final, work.study.folder, work.settings.export.formats)
+    sentences = verdict(_report_input(work, final))
+    write_certificate(final, work.stage.path("certificate.json"), sentences, written)
+
+
+def _report(work: Work) -> None:
+    from identkit.report.page import write_report
+    from identkit.stages.export import finished_set
+
+    draft = load_set(work.study.path("draft.h5"))
+    final = finished_set(draft, work.dataset("audit.nc"), work.json("coverage.json"))
+    write_report(_report_input(work, final), work.study.folder)
+
+
+def _report_input(work: Work, plant_set: PlantSet) -> ReportInput:
+    return ReportInput(
         study_name=work.settings.study.name,
         responses=work.gridded("responses.nc"),
         screening=work.gridded("screening.nc"),
@@ -272,10 +335,11 @@ def _report(work: Work) -> None:
         population=work.dataset("population.nc"),
         nominal=work.dataset("nominal.nc"),
         bound=work.dataset("bound.nc"),
-        coverage=json.loads(work.study.path("coverage.json").read_text(encoding="utf-8")),
+        audit=work.dataset("audit.nc"),
+        plant_set=plant_set,
+        coverage=work.json("coverage.json"),
         run=work.study.record,
     )
-    write_report(given, work.study.folder)
 
 
 STEPS = (
@@ -303,7 +367,7 @@ STEPS = (
         ("read", "pair", "population"),
         ("nominal", "responses.band", "bound.radius_floor"),
     ),
-    Step("bound", _bound, ("bound.nc",), ("pair", "nominal"), ("bound",)),
+    Step("bound", _bound, ("bound.nc", "draft.h5"), ("pair", "nominal"), ("bound",)),
     Step(
         "coverage",
         _coverage,
@@ -311,7 +375,9 @@ STEPS = (
         ("bound",),
         ("bound.content", "bound.confidence", "bound.exchangeable"),
     ),
-    Step("report", _report, ("report.html",), ("bound", "coverage"), ("study.name",)),
+    Step("audit", _audit, ("audit.nc", "audit.csv"), ("read", "screen", "pair", "bound")),
+    Step("export", _export, ("certificate.json",), ("coverage", "audit"), ("export",)),
+    Step("report", _report, ("report.html",), ("export",), ("study.name",)),
 )
 
 
