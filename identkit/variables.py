@@ -305,6 +305,7 @@ BOUND = (
         ("excess_db", "number", "dB", "Largest excess of the weight over the radius profile."),
         ("floor_db", "number", "dB", "Proved lower bound of that at this order."),
         ("gap_db", "number", "dB", "Their difference."),
+        ("damping_cost_db", "number", "dB", "Part of it spent on the damping of poles and zeros."),
         ("between_grid_worst", "number", "1", "Largest exact reach between the points."),
         ("between_grid_tolerance", "number", "1", "Tolerance of that norm."),
         ("nominal_unstable_poles", "whole", "", "Unstable poles of the nominal."),
