@@ -40,7 +40,7 @@ def shrunk_correlation(samples: FloatArray) -> tuple[FloatArray, float]:
     sample = scaled.T @ scaled / units
     spread = (scaled**2).T @ (scaled**2) / units - sample**2
     others = ~np.eye(len(sample), dtype=bool)
-    noise = float((spread[others] * units / (units - 1) ** 2).sum())
+    noise = float(spread[others].sum() / (units - 1))
     intensity = float(np.clip(noise / max(float((sample[others] ** 2).sum()), 1e-300), 0.0, 1.0))
     result = np.eye(quantities)
     result[np.ix_(varies, varies)] = np.where(others, (1.0 - intensity) * sample, 1.0)

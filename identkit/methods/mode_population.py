@@ -11,32 +11,40 @@ with medians for means and at most one mode of each response per centre.
 import numpy as np
 
 from identkit.methods.arrays import FloatArray, IntArray
-from identkit.methods.mode_assignment import UNPAIRED, assign_modes, pairing_cost
+from identkit.methods.mode_assignment import UNPAIRED
 from identkit.methods.mode_density import density_centres
 from identkit.methods.mode_template import (
     ModeTable,
     ModeTemplate,
+    at_temperature,
     blank_template,
     join_templates,
     select_modes,
     sort_modes,
 )
+from identkit.methods.population_starts import BANDWIDTH, starts
+from identkit.methods.template_assignment import assign_all, misfit
 from identkit.methods.template_estimate import estimate_template
 
-FARTHEST = 0.15  # in log frequency; nothing farther is ever the same mode
 _MOST_ROUNDS = 20
-_LEVEL = 5.0  # K, responses closer than this share a temperature level
-_BANDWIDTH = 0.004
+_MOST_RESPONSES = 2000
+_CLEAR = 4.0  # spreads between neighbouring modes that no start can mix up
 
 
 def find_population_modes(
-    table: ModeTable, *, share: float, unpaired_cost: float
+    table: ModeTable,
+    *,
+    share: float,
+    unpaired_cost: float,
+    reference_temperature: float | None = None,
 ) -> tuple[ModeTemplate, IntArray]:
     """Find the population's modes and name every fitted mode after one of them, or none.
 
     Starts at the commonest temperature and takes in the others from there outward, so that a
     mode is followed rather than split; afterwards modes found in too few responses are dropped
-    and modes that were overlooked are added, until nothing changes.
+    and modes that were overlooked are added, until nothing changes. Where neighbouring modes
+    overlap somewhere in the campaign, the search is repeated from other starts
+    (population_starts.py) and the likeliest end is kept.
 
     Parameters
     ----------
@@ -46,6 +54,9 @@ def find_population_modes(
         Smallest share of the responses of its best-seen head that shows a population mode.
     unpaired_cost
         Cost of leaving a mode unpaired, see `assign_modes`.
+    reference_temperature
+        degC at which the template holds and the modes are put in order of frequency; the
+        responses' median when None.
 
     Returns
     -------
@@ -57,60 +68,22 @@ def find_population_modes(
     Needs a majority of responses in which most modes were found; a mode seen by one lot only is
     not one of the population.
     """
-    level = _levels(table.temperature)
-    anchor = level == 0
-    template = _initial(table.rows(anchor), share, table)
-    for reach in sorted(set(level.tolist())):
-        template = _settle(table.rows(level <= reach), template, unpaired_cost)[0]
-    for _ in range(3):
-        template, assigned = _settle(table, template, unpaired_cost)
-        changed = _revise(table, template, assigned, share)
-        if changed is None:
+    if reference_temperature is None:
+        reference_temperature = float(np.median(table.temperature))
+    some = _sample(table)
+    best: tuple[float, ModeTemplate] | None = None
+    for start, steps in starts(some, share):
+        template, assigned = _search(some, start, steps, share, unpaired_cost)
+        score = misfit(some, template, assigned, unpaired_cost)
+        if best is None or score < best[0]:
+            best = (score, template)
+        if not _overlaps(some, template):
             break
-        template = changed
-    template, assigned = _settle(table, template, unpaired_cost)
-    keep = found_share(table, assigned, len(template.log_frequency)) >= share
-    template = sort_modes(select_modes(template, keep))
+    assert best is not None  # there is always a first start
+    template = sort_modes(at_temperature(best[1], reference_temperature))
+    if len(some.head) < len(table.head):
+        template = _settle(table, template, unpaired_cost)[0]
     return template, assign_all(table, template, unpaired_cost)
-
-
-def assign_all(table: ModeTable, template: ModeTemplate, unpaired_cost: float) -> IntArray:
-    """Return (responses, fitted) index of each fitted mode's population mode, or -1."""
-    cost = pair_costs(table, template)
-    assigned = np.full(table.log_frequency.shape, UNPAIRED, dtype=np.int64)
-    for i, known in enumerate(np.isfinite(table.log_frequency)):
-        assigned[i, known] = assign_modes(cost[i, known], unpaired_cost)
-    return assigned
-
-
-def expected_log_frequency(table: ModeTable, template: ModeTemplate) -> FloatArray:
-    """Return (responses, modes) log frequency the template expects of each response."""
-    step = table.temperature - template.temperature
-    return np.asarray(
-        template.log_frequency
-        + step[:, None] * template.frequency_slope
-        + template.lot_offset[table.lot],
-        dtype=float,
-    )
-
-
-def pair_costs(table: ModeTable, template: ModeTemplate) -> FloatArray:
-    """Return (responses, fitted, modes) cost of every pair; infinite where ruled out."""
-    expected = expected_log_frequency(table, template)
-    apart = table.log_frequency[:, :, None] - expected[:, None, :]
-    parts = [
-        _scaled(apart, template.frequency_spread, table.log_frequency_error[:, :, None]),
-        _scaled(
-            table.log_damping[:, :, None] - template.log_damping,
-            template.damping_spread,
-            table.log_damping_error[:, :, None],
-        ),
-        _residue_distance(table, template),
-    ]
-    distance = np.stack([part[0] for part in parts], axis=-1)
-    widening = np.stack([part[1] for part in parts], axis=-1)
-    cost = pairing_cost(distance, widening)
-    return np.where(np.abs(apart) <= FARTHEST, cost, np.inf)
 
 
 def found_share(table: ModeTable, assigned: IntArray, modes: int) -> FloatArray:
@@ -124,23 +97,49 @@ def found_share(table: ModeTable, assigned: IntArray, modes: int) -> FloatArray:
     return best
 
 
-def _levels(temperature: FloatArray) -> IntArray:
-    """Return temperature levels counted outward from the commonest, in at most five steps."""
-    level = np.round((temperature - np.median(temperature)) / _LEVEL).astype(np.int64)
-    names, counts = np.unique(level, return_counts=True)
-    away = np.abs(level - names[np.argmax(counts)])
-    ranks = np.searchsorted(np.unique(away), away)
-    most = max(int(ranks.max()), 1)
-    return np.asarray(np.ceil(ranks * min(5, most) / most), dtype=np.int64)
+def _search(
+    table: ModeTable, start: ModeTemplate, steps: IntArray, share: float, unpaired_cost: float
+) -> tuple[ModeTemplate, IntArray]:
+    """Follow one start outward over temperature to an end where nothing changes."""
+    template = start
+    for reach in np.unique(steps):
+        template = _settle(table.rows(steps <= reach), template, unpaired_cost)[0]
+    for _ in range(3):
+        template, assigned = _settle(table, template, unpaired_cost)
+        changed = _revise(table, template, assigned, share)
+        if changed is None:
+            break
+        template = changed
+    template, assigned = _settle(table, template, unpaired_cost)
+    keep = found_share(table, assigned, len(template.log_frequency)) >= share
+    template = select_modes(template, keep)
+    return template, assign_all(table, template, unpaired_cost)
 
 
-def _initial(anchor: ModeTable, share: float, table: ModeTable) -> ModeTemplate:
-    known = np.isfinite(anchor.log_frequency)
-    owner = np.broadcast_to(np.arange(len(known))[:, None], known.shape)[known]
-    centres = density_centres(
-        anchor.log_frequency[known], owner, len(known), _BANDWIDTH, 0.5 * share
-    )
-    return blank_template(table, centres, float(np.median(anchor.temperature)))
+def _sample(table: ModeTable) -> ModeTable:
+    """Return at most 2000 responses: enough for medians, drawn once with a fixed seed."""
+    count = len(table.head)
+    if count <= _MOST_RESPONSES:
+        return table
+    chosen = np.zeros(count, dtype=bool)
+    chosen[np.random.default_rng(0).permutation(count)[:_MOST_RESPONSES]] = True
+    return table.rows(chosen)
+
+
+def _overlaps(table: ModeTable, template: ModeTemplate) -> bool:
+    """Whether two neighbouring modes come near each other at any temperature of the campaign."""
+    if len(template.log_frequency) < 2:
+        return False
+    for temperature in np.unique(table.temperature[[*_extremes(table.temperature)]]):
+        there = sort_modes(at_temperature(template, float(temperature)))
+        reach = np.hypot(there.frequency_spread[1:], there.frequency_spread[:-1])
+        if (np.diff(there.log_frequency) < _CLEAR * reach).any():
+            return True
+    return False
+
+
+def _extremes(temperature: FloatArray) -> tuple[int, int]:
+    return int(np.argmin(temperature)), int(np.argmax(temperature))
 
 
 def _settle(
@@ -165,30 +164,11 @@ def _revise(
     keep = found_share(table, assigned, modes) >= share
     left = np.isfinite(table.log_frequency) & (assigned == UNPAIRED)
     owner = np.broadcast_to(np.arange(len(left))[:, None], left.shape)[left]
-    head_share = 1.0 / (int(table.head.max()) + 1)
+    head_share = 1.0 / table.heads
     added = density_centres(
-        table.log_frequency[left], owner, len(left), _BANDWIDTH, share * head_share
+        table.log_frequency[left], owner, len(left), BANDWIDTH, share * head_share
     )
     if keep.all() and added.size == 0:
         return None
     fresh = blank_template(table, added, template.temperature)
     return sort_modes(join_templates(select_modes(template, keep), fresh))
-
-
-def _scaled(
-    apart: FloatArray, spread: FloatArray, error: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    wide = np.sqrt(spread**2 + error**2)
-    return apart / wide, np.broadcast_to(wide / spread, apart.shape)
-
-
-def _residue_distance(table: ModeTable, template: ModeTemplate) -> tuple[FloatArray, FloatArray]:
-    """Root mean square over channels of the scaled residue difference: one quantity."""
-    typical = template.residue[table.head]  # (responses, modes, channels)
-    distance, widening = _scaled(
-        table.residue[:, :, None, :] - typical[:, None, :, :],
-        template.residue_spread,
-        table.residue_error[:, :, None, :],
-    )
-    log_wide = np.log(widening).mean(axis=-1)
-    return np.sqrt((distance**2).mean(axis=-1)), np.exp(log_wide)

@@ -4,6 +4,7 @@ The template is what mode_population.py estimates and mode_assignment.py names m
 """
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -30,6 +31,8 @@ class ModeTable:
         (responses,) degC, all equal where not known.
     head, lot
         (responses,) group indices from 0; all 0 where not labelled.
+    heads, lots
+        Number of groups in the whole campaign.
     """
 
     log_frequency: FloatArray
@@ -41,10 +44,15 @@ class ModeTable:
     temperature: FloatArray
     head: IntArray
     lot: IntArray
+    heads: int
+    lots: int
 
-    def rows(self, chosen: BoolArray) -> "ModeTable":
-        """Return the table of some responses."""
-        return ModeTable(**{name: value[chosen] for name, value in vars(self).items()})
+    def rows(self, chosen: BoolArray | slice) -> "ModeTable":
+        """Return the table of some responses; heads and lots keep their numbers."""
+        arrays: dict[str, Any] = {
+            n: v[chosen] for n, v in vars(self).items() if isinstance(v, np.ndarray)
+        }
+        return replace(self, **arrays)
 
 
 @dataclass(frozen=True)
@@ -62,8 +70,8 @@ class ModeTemplate:
     log_damping, damping_spread
         (modes,); NaN before the first estimate.
     residue, residue_spread
-        (heads, modes, channels) typical residue of each head, and (modes, channels) its standard
-        deviation beside fit error; NaN before the first estimate.
+        (heads, modes, channels) typical residue of each head and its standard deviation beside
+        fit error; NaN before the first estimate.
     """
 
     temperature: float
@@ -79,18 +87,41 @@ class ModeTemplate:
 
 def blank_template(table: ModeTable, centres: FloatArray, temperature: float) -> ModeTemplate:
     """Return a template that knows only where its modes are, in log frequency."""
-    heads, lots = int(table.head.max()) + 1, int(table.lot.max()) + 1
     modes, channels = len(centres), table.residue.shape[2]
     return ModeTemplate(
         temperature,
         centres,
         np.zeros(modes),
         np.full(modes, 2.0 * LEAST_FREQUENCY_SPREAD),
-        np.zeros((lots, modes)),
+        np.zeros((table.lots, modes)),
         np.full(modes, np.nan),
         np.full(modes, np.nan),
-        np.full((heads, modes, channels), np.nan),
-        np.full((modes, channels), np.nan),
+        np.full((table.heads, modes, channels), np.nan),
+        np.full((table.heads, modes, channels), np.nan),
+    )
+
+
+def template_from(
+    blank: ModeTemplate,
+    head: int,
+    log_damping: FloatArray,
+    damping_spread: float,
+    residue: FloatArray,
+    residue_spread: float,
+) -> ModeTemplate:
+    """Return a template that knows damping, and the residues of one head, from one response.
+
+    `residue_spread` is relative to each residue; other heads stay unknown.
+    """
+    residues, spreads = blank.residue.copy(), blank.residue_spread.copy()
+    residues[head] = residue
+    spreads[head] = np.maximum(residue_spread * np.abs(residue), np.finfo(float).tiny)
+    return replace(
+        blank,
+        log_damping=log_damping,
+        damping_spread=np.full(len(log_damping), damping_spread),
+        residue=residues,
+        residue_spread=spreads,
     )
 
 
@@ -105,13 +136,20 @@ def select_modes(template: ModeTemplate, chosen: BoolArray | IntArray) -> ModeTe
         log_damping=template.log_damping[chosen],
         damping_spread=template.damping_spread[chosen],
         residue=template.residue[:, chosen],
-        residue_spread=template.residue_spread[chosen],
+        residue_spread=template.residue_spread[:, chosen],
     )
 
 
 def sort_modes(template: ModeTemplate) -> ModeTemplate:
     """Return the template with its modes in ascending frequency."""
     return select_modes(template, np.argsort(template.log_frequency, kind="stable"))
+
+
+def at_temperature(template: ModeTemplate, temperature: float) -> ModeTemplate:
+    """Return the template with its centres at another temperature, degC."""
+    step = temperature - template.temperature
+    moved = template.log_frequency + step * template.frequency_slope
+    return replace(template, temperature=temperature, log_frequency=moved)
 
 
 def join_templates(first: ModeTemplate, second: ModeTemplate) -> ModeTemplate:
@@ -125,5 +163,5 @@ def join_templates(first: ModeTemplate, second: ModeTemplate) -> ModeTemplate:
         np.concatenate([first.log_damping, second.log_damping]),
         np.concatenate([first.damping_spread, second.damping_spread]),
         np.concatenate([first.residue, second.residue], axis=1),
-        np.concatenate([first.residue_spread, second.residue_spread]),
+        np.concatenate([first.residue_spread, second.residue_spread], axis=1),
     )

@@ -16,6 +16,7 @@ import numpy as np
 from identkit.methods.arrays import FloatArray
 
 MAD_TO_SIGMA = 1.4826022185056018  # 1 / Phi^-1(3/4)
+_LEAST_SCALE = 0.1  # of log magnitude, rms over places
 
 
 def median_and_scale(value: FloatArray, axis: int = 0) -> tuple[FloatArray, FloatArray]:
@@ -80,55 +81,77 @@ def dilate(value: FloatArray, cells: int) -> FloatArray:
     return np.where(np.isneginf(widest), np.nan, widest)
 
 
-def distance_from_peers(
-    curves: FloatArray,
-    peers: FloatArray,
-    error: FloatArray,
-    *,
-    sideways: int,
-    usual: float = 3.0,
-    least_scale: float = 1e-3,
+def rise_above_peers(
+    curves: FloatArray, error: FloatArray, *, sideways: int, own: int, usual: float = 3.0
 ) -> FloatArray:
-    """Return how far each curve runs outside what its peers show.
+    """Return how far each log-magnitude curve rises above what several of its peers reach.
 
-    The usual range at each place is median +- `usual` scaled median absolute deviations of the
-    peers (Hampel 1974), dilated sideways so that a feature may stand a little to the left or
-    right (Serra 1982). The distance is the root mean square, over places, of the excess over
-    that range and over `usual` errors of the curve itself, in units of the scale averaged over
-    places.
+    At each place the peers' reach is the k-th highest of the curves dilated sideways (Serra
+    1982), with k beyond the curves of one unit, so that neither a unit itself nor a few odd
+    peers set it. The rise is the root mean square, over places, of what stands above it and
+    above `usual` errors of the curve. It is divided by 0.3 s^2, s being the root mean square of
+    the peers' scaled median absolute deviations (Hampel 1974): sound units of a wide population
+    rise above one another more than in proportion. The factor and the square are ours, from
+    invented populations of 8 and 24 units with unit spreads of 0.2 to 1.2 % in frequency: sound
+    units stayed below 6, units with a cracked arm above in all but the widest.
+
+    Only rises count: resonances stand where the poles are, while the depth and place of
+    antiresonances answer to small differences of residues.
 
     Parameters
     ----------
     curves
-        (curves, places) values to judge; NaN where unknown.
-    peers
-        (peers, places) values of the peers.
+        (curves, places) natural logarithm of magnitude; NaN where unknown.
     error
         (curves, places) standard deviation of the curves' own error.
     sideways
         Places a feature may be off to either side.
+    own
+        Most curves that one unit has among these.
     usual
-        Half width of the usual range in scales.
-    least_scale
-        Smallest scale, in the unit of the curves.
+        Errors of the curve itself that are not counted.
 
     Returns
     -------
     FloatArray
-        (curves,) distance, 0 when inside everywhere; NaN for a curve without values.
+        (curves,) 0 when above its peers nowhere; NaN for a curve without values.
 
     Notes
     -----
-    Needs five or more peers to mean anything; up to half of them may be odd themselves.
+    Needs curves of five or more units to mean anything.
     """
-    centre, scale = median_and_scale(peers)
-    scale = np.maximum(scale, least_scale)
-    upper = dilate(centre + usual * scale, sideways)
-    lower = -dilate(usual * scale - centre, sideways)
-    excess = np.maximum(np.maximum(curves - upper, lower - curves) - usual * error, 0.0)
-    typical = float(np.sqrt(np.nanmean(scale**2)))
-    known = np.isfinite(excess)
-    square = np.where(known, excess, 0.0) ** 2
-    count = known.sum(axis=1)
-    mean = square.sum(axis=1) / np.maximum(count, 1)
-    return np.where(count > 0, np.sqrt(mean) / typical, np.nan)
+    count = len(curves)
+    order = min(own + max(1, int(np.ceil(0.05 * count))), count)
+    reach = np.sort(np.where(np.isnan(curves), -np.inf, dilate(curves, sideways)), axis=0)[-order]
+    with np.errstate(invalid="ignore"):
+        rise = np.maximum(curves - reach - usual * np.nan_to_num(error), 0.0)
+    # Where too few peers are known, nothing can rise above them.
+    rise = np.where(np.isneginf(reach) & np.isfinite(curves), 0.0, rise)
+    known = np.isfinite(rise)
+    mean = (np.where(known, rise, 0.0) ** 2).sum(axis=1) / np.maximum(known.sum(axis=1), 1)
+    scale = median_and_scale(curves)[1]
+    square = float(np.mean(scale[np.isfinite(scale)] ** 2)) if np.isfinite(scale).any() else 0.0
+    return np.where(known.any(axis=1), np.sqrt(mean) / (0.3 * max(square, _LEAST_SCALE**2)), np.nan)
+
+
+def standardised(value: FloatArray, units: int, least: float) -> FloatArray:
+    """Return distances from the median in scaled median absolute deviations (Hampel 1974).
+
+    Parameters
+    ----------
+    value
+        (samples,) NaN where unknown.
+    units
+        Independent units behind the samples; few of them know their own scale badly, so the
+        scale is widened by ``1 + 4 / units``.
+    least
+        Smallest scale, in the unit of the value.
+
+    Returns
+    -------
+    FloatArray
+        (samples,) absolute, in robust standard deviations.
+    """
+    centre, scale = median_and_scale(value)
+    wide = max(float(np.nan_to_num(scale)), least) * (1.0 + 4.0 / max(units, 1))
+    return np.asarray(np.abs(value - centre) / wide, dtype=float)

@@ -11,8 +11,8 @@ import numpy as np
 
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.methods.mode_assignment import UNPAIRED, assign_modes
-from identkit.methods.mode_population import expected_log_frequency
 from identkit.methods.mode_template import ModeTable, ModeTemplate
+from identkit.methods.template_assignment import expected_log_frequency
 
 MOST_SHIFT = 0.12
 _RESIDUE_FACTOR = 3.0

@@ -44,7 +44,7 @@ def estimate_template(table: ModeTable, template: ModeTemplate, assigned: IntArr
     ]
     stacked = [np.stack([column[k] for column in columns], axis=-1) for k in range(6)]
     residue = np.stack([column[6] for column in columns], axis=1)
-    residue_spread = np.stack([column[7] for column in columns], axis=0)
+    residue_spread = np.stack([column[7] for column in columns], axis=1)
     return ModeTemplate(
         template.temperature,
         stacked[0],
@@ -71,7 +71,7 @@ def _estimate_mode(
             template.log_damping[m],
             template.damping_spread[m],
             template.residue[:, m],
-            template.residue_spread[m],
+            template.residue_spread[:, m],
         )
     frequency = table.log_frequency[mine]
     step = table.temperature[found] - template.temperature
@@ -120,14 +120,19 @@ def _beside_error(residual: FloatArray, error: FloatArray, least: float) -> Floa
 def _head_residues(
     residue: FloatArray, error: FloatArray, head: IntArray, heads: int
 ) -> tuple[FloatArray, FloatArray]:
-    """Return (heads, channels) medians and (channels,) spread beside fit error."""
+    """Return (heads, channels) medians and their spread beside fit error.
+
+    The spread is taken relative to the head's own size, for a head near a node spreads less; no
+    head counts as smaller than a quarter of the root mean square over heads.
+    """
     everyone = np.median(residue, axis=0)
     centre = np.tile(everyone, (heads, 1))
     for h in range(heads):
         if (head == h).sum() >= 3:
             centre[h] = np.median(residue[head == h], axis=0)
-    scale = median_and_scale(residue - centre[head])[1]
-    size = np.sqrt((centre**2).mean(axis=0))
-    left = np.maximum(scale**2 - np.nanmedian(error, axis=0) ** 2, 0.0)
-    least = np.maximum(LEAST_RESIDUE_SPREAD * size, np.finfo(float).tiny)
-    return centre, np.maximum(np.sqrt(left), least)
+    overall = np.sqrt((centre**2).mean(axis=0))
+    size = np.maximum(np.maximum(np.abs(centre), 0.25 * overall), np.finfo(float).tiny)
+    scale = median_and_scale((residue - centre[head]) / size[head])[1]
+    noise = np.nanmedian(error / size[head], axis=0)
+    left = np.sqrt(np.maximum(scale**2 - noise**2, 0.0))
+    return centre, np.maximum(left, LEAST_RESIDUE_SPREAD) * size

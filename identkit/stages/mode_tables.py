@@ -31,9 +31,7 @@ def mode_table(fits: xr.Dataset, groups: ModeTable | None = None) -> ModeTable:
         _known(errors["modal_frequency"]) / np.where(usable, frequency, 1.0),
         _known(errors["damping_ratio"]) / np.where(usable, positive, 1.0),
         _known(errors["residue"].reshape(channels.shape)),
-        known_temperature(fits) if groups is None else groups.temperature,
-        group_index(fits, "head") if groups is None else groups.head,
-        group_index(fits, "lot") if groups is None else groups.lot,
+        *(_groups(fits) if groups is None else _same_groups(groups)),
     )
 
 
@@ -93,6 +91,16 @@ def group_index(data: xr.Dataset, label: str) -> IntArray:
     if label not in data.coords:
         return np.zeros(data.sizes["response"], dtype=np.int64)
     return np.asarray(np.unique(data[label].values.astype(str), return_inverse=True)[1])
+
+
+def _groups(fits: xr.Dataset) -> tuple[FloatArray, IntArray, IntArray, int, int]:
+    head, lot = group_index(fits, "head"), group_index(fits, "lot")
+    heads, lots = int(head.max(initial=0)) + 1, int(lot.max(initial=0)) + 1
+    return known_temperature(fits), head, lot, heads, lots
+
+
+def _same_groups(groups: ModeTable) -> tuple[FloatArray, IntArray, IntArray, int, int]:
+    return groups.temperature, groups.head, groups.lot, groups.heads, groups.lots
 
 
 def _residue_errors(

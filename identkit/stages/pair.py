@@ -12,14 +12,10 @@ from identkit.errors import InputError, Problem
 from identkit.grids import Gridded
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.methods.mode_assignment import UNPAIRED, crossing_modes
-from identkit.methods.mode_population import (
-    assign_all,
-    expected_log_frequency,
-    find_population_modes,
-    found_share,
-)
+from identkit.methods.mode_population import find_population_modes, found_share
 from identkit.methods.mode_template import ModeTable, ModeTemplate
 from identkit.methods.shifted_modes import pair_shifted_modes
+from identkit.methods.template_assignment import assign_all, expected_log_frequency
 from identkit.outcomes import Outcome
 from identkit.stages.mode_tables import CHANNEL_DIMS, mode_errors, mode_table
 from identkit.stages.warm_refit import WarmRefit, find_missing_modes
@@ -35,6 +31,7 @@ def pair_modes(
     *,
     share: float = 0.5,
     unpaired_cost: float = 10.0,
+    reference_temperature: float | None = None,
     delay: bool = True,
     jobs: int = 1,
     progress: Progress | None = None,
@@ -59,6 +56,8 @@ def pair_modes(
     unpaired_cost
         Cost of one unpaired mode; a pair costing more than twice this is not made. Six spreads
         off in one quantity cost 11.5.
+    reference_temperature
+        degC at which the order of the names M1, M2 ... is taken; the responses' median when None.
     delay, jobs, progress
         As in `fit_modes`, for the warm refit.
 
@@ -81,7 +80,12 @@ def pair_modes(
     but the only candidate), MODE_CROSSING, MODE_BELOW_SIGNIFICANCE, MODE_OUT_OF_BAND.
     """
     table = _checked_table(fits)
-    template, assigned = find_population_modes(table, share=share, unpaired_cost=unpaired_cost)
+    template, assigned = find_population_modes(
+        table,
+        share=share,
+        unpaired_cost=unpaired_cost,
+        reference_temperature=reference_temperature,
+    )
     named = pair_shifted_modes(table, template, assigned)[0]
     gained = np.zeros((len(assigned), len(template.log_frequency)), dtype=bool)
     if responses is not None:

@@ -1,7 +1,7 @@
 """Peers: compares each response with those it should look like.
 
 Responses on any grids are brought to coarse common cells of log frequency; each is held against
-the responses of the same head where at least five others exist, against all otherwise.
+the responses of the same head where every head has at least six, against all otherwise.
 """
 
 from collections.abc import Sequence
@@ -10,14 +10,14 @@ import numpy as np
 import xarray as xr
 
 from identkit.methods.arrays import BoolArray, ComplexArray, FloatArray, IntArray
-from identkit.methods.robust_distance import distance_from_peers, median_and_scale
+from identkit.methods.robust_distance import median_and_scale, rise_above_peers, standardised
 
 CELL = 0.01  # width of a cell in log frequency
-SIDEWAYS = 4  # cells: a resonance may stand 4 % to either side of its peers'
+SIDEWAYS = 3  # cells: a resonance may stand 3 % to either side of its peers'
 FEWEST_PEERS = 6
-_LEAST_LOG_SCALE = 0.02  # 2 % of magnitude: bench gain repeats no better
-_LEAST_SPREAD = 0.05  # of the distances, in scales
+_LEAST_GAIN_SPREAD = 0.02  # 2 %: no bench's gain repeats better
 _LEAST_PHASE_SPREAD = 0.15  # rad
+_UNKNOWN = complex(np.nan, np.nan)
 
 
 def odd_responses(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> list[FloatArray]:
@@ -33,15 +33,17 @@ def odd_responses(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -
     Returns
     -------
     list of FloatArray
-        One (response,) array per part: the larger of the distances in log magnitude and in
-        phase, worst channel; NaN with fewer than five peers.
+        One (response,) array per part: the largest of the distances in broad gain, in broad
+        phase and in resonances (rise above the peers' reach), worst channel; NaN with responses
+        of fewer than six units.
     """
     edges = _cell_edges(parts, usable)
     curves, error = _gather_cells(parts, usable, edges)
     groups = peer_groups(parts)
     worst = np.full(curves.shape[0], np.nan)
+    unit = _units(parts)
     for channel in range(curves.shape[1]):
-        odd = _channel_oddness(curves[:, channel], error[:, channel], groups)
+        odd = _channel_oddness(curves[:, channel], error[:, channel], groups, unit)
         worst = np.fmax(worst, odd)
     return list(np.split(worst, np.cumsum([part.sizes["response"] for part in parts])[:-1]))
 
@@ -128,11 +130,11 @@ def cell_means(
     mean = np.add.reduceat(kept, starts, axis=-1) / np.maximum(weight, 1.0)
     noise = np.add.reduceat(np.where(kept != 0.0, variance, 0.0), starts, axis=-1)
     shape = (*measured.shape[:2], cells)
-    curve = np.full(shape, np.nan + 0j)
+    curve = np.full(shape, _UNKNOWN)
     error = np.full(shape, np.nan)
     known = (weight > 0.0) & (np.abs(mean) > 0.0)
     size = np.abs(np.where(known, mean, 1.0))
-    logged = np.where(known, np.log(size) + 1j * np.angle(mean), np.nan)
+    logged = np.where(known, np.log(size) + 1j * np.angle(mean), _UNKNOWN)
     relative = np.where(known, np.sqrt(noise / 2.0) / np.maximum(weight, 1.0) / size, np.nan)
     curve[..., cell[starts]] = logged
     error[..., cell[starts]] = relative
@@ -146,25 +148,41 @@ def _bridge(curve: ComplexArray | FloatArray) -> ComplexArray:
     last = np.maximum.accumulate(np.where(known, places, -1), axis=-1)
     ahead = np.flip(np.maximum.accumulate(np.flip(known, -1), axis=-1), -1)
     filled = np.take_along_axis(curve, np.maximum(last, 0), axis=-1)
-    return np.asarray(np.where((last >= 0) & ahead, filled, np.nan), dtype=complex)
+    return np.asarray(np.where((last >= 0) & ahead, filled, _UNKNOWN), dtype=complex)
 
 
 def _channel_oddness(
-    curves: ComplexArray, error: FloatArray, groups: Sequence[IntArray]
+    curves: ComplexArray, error: FloatArray, groups: Sequence[IntArray], unit: IntArray
 ) -> FloatArray:
-    magnitude = np.full(len(curves), np.nan)
-    phase = np.full(len(curves), np.nan)
+    worst, rise = np.full((2, len(curves)), np.nan)
     for group in groups:
-        if len(group) < FEWEST_PEERS:
+        own = np.bincount(unit[group])
+        units = int((own > 0).sum())
+        if len(group) < FEWEST_PEERS or units < FEWEST_PEERS:
             continue
-        own = curves[group]
-        magnitude[group] = distance_from_peers(
-            own.real, own.real, error[group], sideways=SIDEWAYS, least_scale=_LEAST_LOG_SCALE
+        magnitude = curves[group].real
+        gain = median_and_scale(magnitude - median_and_scale(magnitude)[0], axis=1)[0]
+        rise[group] = rise_above_peers(
+            magnitude - gain[:, None], error[group], sideways=SIDEWAYS, own=int(own.max())
         )
-        phase[group] = _phase_offset(own)
-    return np.fmax(
-        _standardised(magnitude, _LEAST_SPREAD), _standardised(phase, _LEAST_PHASE_SPREAD)
-    )
+        worst[group] = np.fmax(
+            standardised(gain, units, _LEAST_GAIN_SPREAD),
+            standardised(_phase_offset(curves[group]), units, _LEAST_PHASE_SPREAD),
+        )
+    return np.asarray(np.fmax(worst, _shared_by_unit(rise, unit)), dtype=float)
+
+
+def _shared_by_unit(rise: FloatArray, unit: IntArray) -> FloatArray:
+    """Weigh a rise by whether the other responses of the unit show it.
+
+    A defect of the arm shows at most heads and temperatures: a response counts as its unit's
+    median where it rises at least half as much itself. One that stands alone counts by 0.6.
+    """
+    typical = np.full(int(unit.max()) + 1, np.nan)
+    for u in np.unique(unit):
+        typical[u] = median_and_scale(rise[unit == u])[0]
+    alone = np.where(np.bincount(unit)[unit] > 1, 0.6, 1.0) * rise
+    return np.asarray(np.fmax(alone, np.minimum(typical[unit], 2.0 * rise)), dtype=float)
 
 
 def _phase_offset(curves: ComplexArray) -> FloatArray:
@@ -174,6 +192,10 @@ def _phase_offset(curves: ComplexArray) -> FloatArray:
     return median_and_scale(np.abs(np.angle(direction * middle.conj())), axis=1)[0]
 
 
-def _standardised(distance: FloatArray, least: float) -> FloatArray:
-    centre, scale = median_and_scale(distance)
-    return np.asarray((distance - centre) / np.maximum(scale, least), dtype=float)
+def _units(parts: Sequence[xr.Dataset]) -> IntArray:
+    """Return the unit of every response, each its own where there is no label."""
+    count = sum(part.sizes["response"] for part in parts)
+    if not all("unit" in part.coords for part in parts):
+        return np.arange(count)
+    names = np.concatenate([part["unit"].values.astype(str) for part in parts])
+    return np.asarray(np.unique(names, return_inverse=True)[1], dtype=np.int64)

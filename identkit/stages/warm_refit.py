@@ -15,8 +15,8 @@ from identkit.grids import Gridded
 from identkit.methods.arrays import BoolArray, IntArray
 from identkit.methods.modal_model import ModalParameters
 from identkit.methods.mode_assignment import UNPAIRED
-from identkit.methods.mode_population import assign_all, expected_log_frequency
 from identkit.methods.mode_template import ModeTable, ModeTemplate
+from identkit.methods.template_assignment import assign_all, expected_log_frequency
 from identkit.outcomes import Outcome
 from identkit.stages.fit import refit_modes
 from identkit.stages.mode_tables import mode_table

@@ -1,0 +1,182 @@
+"""Pairing of labelled fits: names, outcomes, extras, and the warm refit for missing modes."""
+
+import numpy as np
+import pytest
+
+from identkit.errors import InputError
+from identkit.outcomes import Outcome
+from identkit.stages.fit import fit_modes
+from identkit.stages.pair import pair_modes
+from identkit.synthetic import InventedBench, Story, invent_campaign, to_dataset
+from tests.stages.invented_fits import FitErrors, invented_fits
+
+SOUND = Story(odd_lot="none", cracked_unit="none")
+
+
+@pytest.fixture(scope="module")
+def campaign():
+    return invent_campaign(seed=1)
+
+
+@pytest.fixture(scope="module")
+def fits(campaign):
+    return invented_fits(campaign, FitErrors(missing=0.03, extra=0.3))
+
+
+@pytest.fixture(scope="module")
+def paired(fits):
+    return pair_modes(fits)
+
+
+def test_every_mode_has_its_true_name(campaign, paired):
+    frequency = paired["modal_frequency"].values[:, :8]
+    truth = np.array([r.plant.modal_frequency[:8] for r in campaign.responses])
+    found = np.isfinite(frequency)
+    assert np.abs(frequency / truth - 1.0)[found].max() < 2e-3  # fit errors are 0.03 % at most
+    assert paired["mode"].values[:8].tolist() == [f"M{k}" for k in range(1, 9)]
+    assert paired["mode_in_population"].values.sum() == 8
+
+
+def test_missing_and_extra_modes_are_reported_not_forced(fits, paired):
+    outcome = paired["mode_outcome"].values
+    frequency = paired["modal_frequency"].values
+    inside = paired["mode_in_population"].values
+    assert np.array_equal(
+        outcome[:, inside] == Outcome.MODE_MISSING, np.isnan(frequency[:, inside])
+    )
+    extra = outcome == Outcome.MODE_EXTRA
+    assert not extra[:, inside].any()
+    assert np.array_equal(extra[:, ~inside], np.isfinite(frequency[:, ~inside]))
+    # nothing is lost: every fitted mode stands somewhere
+    assert np.isfinite(frequency).sum() == np.isfinite(fits["modal_frequency"].values).sum()
+    assert 40 < (outcome[:, inside] == Outcome.MODE_MISSING).sum() < 110  # 69 expected
+
+
+def test_the_cracked_unit_keeps_its_names_as_shifted_modes(paired):
+    of_unit = paired.sel(response=paired["unit"] == "U13")
+    for mode in ("M2", "M4"):
+        outcome = of_unit["mode_outcome"].sel(mode=mode).values
+        assert set(outcome) <= {Outcome.MODE_SHIFTED, Outcome.MODE_MISSING}
+        assert (outcome == Outcome.MODE_SHIFTED).sum() >= 9
+    others = paired.sel(response=paired["unit"] != "U13")
+    assert not (others["mode_outcome"] == Outcome.MODE_SHIFTED).any()
+    # its additional resonance shares one column
+    extra = of_unit["modal_frequency"].values[:, ~paired["mode_in_population"].values]
+    assert (np.abs(extra / 7150.0 - 1.0) < 0.01).sum(axis=0).max() >= 11
+
+
+def test_positions_and_standard_errors_point_into_the_fit(fits, paired):
+    position = paired["mode_position"].values
+    rows, columns = np.nonzero(position >= 0)
+    places = position[rows, columns]
+    for name in ("modal_frequency", "damping_ratio"):
+        assert np.array_equal(paired[name].values[rows, columns], fits[name].values[rows, places])
+    covariance = fits["parameter_covariance"].values
+    names = fits["parameter"].values.tolist()
+    for row, column, place in list(zip(rows, columns, places, strict=True))[::97]:
+        at = names.index(f"residue_{place + 1}")
+        expected = np.sqrt(covariance[row, at, at])
+        assert paired["residue_standard_error"].values[row, column, 0, 0] == expected
+
+
+def test_inputs_are_left_as_they_were(fits):
+    before = fits.copy(deep=True)
+    pair_modes(fits)
+    assert fits.identical(before)
+
+
+def test_fits_without_head_lot_or_temperature_are_paired_too(campaign):
+    fits = invented_fits(invent_campaign(seed=2, heads=1, story=SOUND), FitErrors())
+    bare = fits.drop_vars(["head", "lot", "temperature", "unit", "measured_at"])
+    paired = pair_modes(bare)
+    assert paired.sizes["mode"] == 8
+    assert (paired["mode_outcome"] == Outcome.DONE).all()
+
+
+def test_modes_below_significance_say_so():
+    fits = invented_fits(invent_campaign(seed=3, units=6, story=SOUND), FitErrors())
+    fits["mode_outcome"][4, 2] = Outcome.MODE_BELOW_SIGNIFICANCE
+    paired = pair_modes(fits)
+    assert paired["mode_outcome"].values[4, 2] == Outcome.MODE_BELOW_SIGNIFICANCE
+
+
+def test_crossings_are_reported():
+    fits = invented_fits(invent_campaign(seed=4, units=8, story=SOUND), FitErrors())
+    swapped = fits.copy(deep=True)
+    # one response in which the fifth mode stands above the sixth: 8260 and 10650 are too far
+    # apart to cross, so bring the whole population's sixth down to 2 % above the fifth
+    swapped["modal_frequency"][:, 5] = swapped["modal_frequency"][:, 4] * 1.02
+    fifth = float(swapped["modal_frequency"][0, 4])
+    for name in ("damping_ratio", "residue"):
+        one, two = (swapped[name].values[0, k].copy() for k in (4, 5))
+        swapped[name].values[0, 4], swapped[name].values[0, 5] = two, one
+    paired = pair_modes(swapped)
+    assert paired["mode_outcome"].values[0, 4:6].tolist() == [Outcome.MODE_CROSSING] * 2
+    assert paired["mode_crossing_mask"].values.sum() == 2
+    assert paired["modal_frequency"].values[0, 5] == fifth
+
+
+def test_nothing_to_pair_is_refused_in_one_sentence(fits):
+    with pytest.raises(InputError, match="no response"):
+        pair_modes(fits.isel(response=slice(0, 0)))
+    empty = fits.copy(deep=True)
+    empty["modal_frequency"][:] = np.nan
+    with pytest.raises(InputError, match="no mode in any of 288 responses"):
+        pair_modes(empty)
+
+
+def test_a_mode_lost_by_the_first_fit_is_found_again():
+    campaign = invent_campaign(
+        seed=5, units=6, heads=2, story=SOUND, bench=InventedBench(points=500)
+    )
+    responses = to_dataset(campaign)
+    fits = fit_modes(responses)
+    lost = fits.copy(deep=True)
+    for row, place in ((0, 3), (5, 0), (11, 6)):
+        _forget(lost, row, place)
+    assert (pair_modes(lost)["mode_outcome"] == Outcome.MODE_MISSING).sum() == 3
+    found = pair_modes(lost, responses)
+    assert (found["mode_outcome"] == Outcome.DONE).all()
+    assert found["mode_found_warm_mask"].values.sum() == 3
+    whole = pair_modes(fits, responses)
+    frequency = found["modal_frequency"].values[:, :8]
+    assert frequency == pytest.approx(whole["modal_frequency"].values[:, :8], rel=1e-4)
+    assert np.isfinite(found["modal_frequency_standard_error"].values[:, :8]).all()
+
+
+def test_a_mode_that_is_not_there_stays_missing():
+    campaign = invent_campaign(
+        seed=6, units=6, heads=2, story=SOUND, bench=InventedBench(points=500)
+    )
+    responses = to_dataset(campaign)
+    fits = fit_modes(responses)
+    # the same plant without its second mode, measured without noise
+    plant = campaign.responses[3].plant
+    s = 2j * np.pi * campaign.frequency
+    natural = 2.0 * np.pi * plant.modal_frequency[1]
+    term = plant.residue[1] / (s**2 + 2.0 * plant.damping_ratio[1] * natural * s + natural**2)
+    responses["frequency_response"][3, 0, 0] -= term * np.exp(-s * plant.delay)
+    refitted = fit_modes(responses.isel(response=[3]))
+    for name in ("modal_frequency", "damping_ratio", "mode_significance"):
+        fits[name][3] = np.nan
+        fits[name][3, : refitted.sizes["mode"]] = refitted[name].values[0]
+    for name in ("residue", "residue_rate"):
+        fits[name][3] = np.nan
+        fits[name][3, : refitted.sizes["mode"]] = refitted[name].values[0]
+    paired = pair_modes(fits, responses)
+    assert paired["mode_outcome"].sel(mode="M2").values[3] == Outcome.MODE_MISSING
+    assert (paired["mode_outcome"] == Outcome.MODE_MISSING).sum() == 1
+
+
+def _forget(fits, row, place):
+    """Take one mode out of a fit, as if it had been overlooked."""
+    for name in (
+        "modal_frequency",
+        "damping_ratio",
+        "mode_significance",
+        "residue",
+        "residue_rate",
+    ):
+        values = fits[name].values
+        values[row, place:-1] = values[row, place + 1 :].copy()
+        values[row, -1] = np.nan
