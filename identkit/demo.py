@@ -4,7 +4,8 @@ from importlib.resources import files
 from pathlib import Path
 
 from identkit.errors import InputError, Problem
-from identkit.synthetic import invent_campaign, write_campaign
+from identkit.synthetic import invent_campaign
+from identkit.synthetic_files import write_campaign
 
 
 def write_demo(folder: Path) -> Path:

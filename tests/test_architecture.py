@@ -32,6 +32,7 @@ LEVELS = {
     "progress": 1,
     "not_yet": 3,
     "demo": 3,
+    "synthetic_files": 2,
     "plants": 2,
     "not_yet": 3,
     "show": 7,

@@ -7,7 +7,8 @@ import xarray as xr
 from identkit.errors import InputError, MissingStageError
 from identkit.grids import datasets, load
 from identkit.pipeline import run_study
-from identkit.synthetic import InventedBench, invent_campaign, write_campaign
+from identkit.synthetic import InventedBench, invent_campaign
+from identkit.synthetic_files import write_campaign
 from identkit.variables import FILES, LABELS, VARIABLES, check, file_format_page
 
 
