@@ -38,3 +38,12 @@ def bounded_set_file(tmp_path_factory):
     path = tmp_path_factory.mktemp("bounded") / "set.json"
     subprocess.run([sys.executable, str(MAKERS), str(path)], check=True)
     return path
+
+
+@pytest.fixture(scope="session")
+def small_results(tmp_path_factory):
+    """The results folder of a small invented campaign, run by another process."""
+    folder = tmp_path_factory.mktemp("campaign")
+    script = MAKERS.with_name("small_study.py")
+    subprocess.run([sys.executable, str(script), str(folder)], check=True)
+    return folder / "results"

@@ -298,9 +298,14 @@ def arnoldi(x, scale, degree):
     return np.column_stack(basis) * np.sqrt(x.size)
 
 
-@pytest.fixture(scope="module")
-def document(bounded_set_file):
-    return json.loads(bounded_set_file.read_text(encoding="utf-8"))
+@pytest.fixture(scope="module", params=["plain arrays", "campaign"])
+def document(request):
+    """A set made from plain arrays, and one made by all stages from measured files."""
+    if request.param == "campaign":
+        path = request.getfixturevalue("small_results") / "set.json"
+    else:
+        path = request.getfixturevalue("bounded_set_file")
+    return json.loads(path.read_text(encoding="utf-8"))
 
 
 def failures(document):

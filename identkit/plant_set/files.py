@@ -3,7 +3,6 @@
 from pathlib import Path
 
 from identkit.plant_set.model import PlantSet
-from identkit.plant_set.store import read_document
 
 
 def load_set(path: str | Path) -> PlantSet:
@@ -19,7 +18,7 @@ def load_set(path: str | Path) -> PlantSet:
     InputError
         If the file is not there, cut short, or breaks the format; the message names the field.
     """
-    return PlantSet.from_document(read_document(path), str(path))
+    return PlantSet.load(path)
 
 
 def save_set(plant_set: PlantSet, path: str | Path, format: str | None = None) -> None:

@@ -14,30 +14,30 @@ import numpy as np
 
 from identkit.atomic import replacing
 from identkit.errors import InputError, Problem
-from identkit.plant_set.plant_columns import Columns, plants_from_columns, plants_to_columns
+from identkit.plant_set.plant_columns import Columns
 
 _NOT_HDF5 = "an HDF5 file of format identkit-plant-set/1"
 
 
-def write_hdf5(document: dict[str, Any], path: Path) -> None:
-    """Replace `path` by the document."""
+def write_hdf5(document: dict[str, Any], columns: Columns, path: Path) -> None:
+    """Replace `path` by the document, its plants given as columns."""
     library = import_module("h5py")
     with replacing(path) as temporary, library.File(temporary, "w") as file:
         for name, value in document.items():
             if name != "plants":
                 _write(file, name, value)
         plants = file.create_group("plants")
-        for name, column in plants_to_columns(document["plants"]).items():
-            plants.create_dataset(name, data=_storable(column, library))
+        for name, column in columns.items():
+            plants.create_dataset(name, data=_storable(column))
 
 
-def read_hdf5(path: Path) -> Any:
-    """Return the document.
+def read_hdf5(path: Path) -> tuple[dict[str, Any], Columns]:
+    """Return the document without its plants, and those as columns.
 
     Raises
     ------
     InputError
-        If the file is not there, is not HDF5, is cut short, or its plants do not add up.
+        If the file is not there, is not HDF5, is cut short, or holds numbers that are not finite.
     """
     library = import_module("h5py")
     if not path.is_file():
@@ -45,12 +45,10 @@ def read_hdf5(path: Path) -> Any:
     try:
         with library.File(path, "r") as file:
             document = {name: _read(file[name], path) for name in file if name != "plants"}
-            columns = _read_columns(file["plants"]) if "plants" in file else None
-    except (OSError, RuntimeError) as error:
+            columns = _read_columns(file["plants"]) if "plants" in file else {}
+    except (OSError, RuntimeError, AttributeError, TypeError, UnicodeError) as error:
         raise InputError(Problem(str(path), f"unreadable data ({error})", _NOT_HDF5)) from error
-    if columns is not None:
-        document["plants"] = plants_from_columns(columns, str(path))
-    return document
+    return document, columns
 
 
 def _write(parent: Any, name: str, value: Any) -> None:
@@ -104,7 +102,7 @@ def _parsed(text: str, item: Any, path: Path) -> Any:
         raise InputError(Problem(f"{path}, field {field}", "broken text", "JSON text")) from error
 
 
-def _storable(column: Any, library: Any) -> Any:
+def _storable(column: Any) -> Any:
     if column.dtype.kind == "U":
         return np.asarray(column, dtype=object) if column.size else np.zeros(0, dtype="S1")
     return column

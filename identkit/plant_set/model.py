@@ -7,7 +7,6 @@ from typing import TYPE_CHECKING, Any
 
 from identkit.errors import InputError, Problem
 from identkit.plant_set import response, sample, store
-from identkit.plant_set.document import from_document
 from identkit.plant_set.fields import (
     ComplexArray,
     FittedPlant,
@@ -114,6 +113,6 @@ class PlantSet(PlantSetFields):
         }
 
     @classmethod
-    def from_document(cls, document: Any, place: str) -> "PlantSet":
-        """Read a set from JSON values (see `document.from_document`)."""
-        return cls(**vars(from_document(document, place)))
+    def load(cls, path: str | Path) -> "PlantSet":
+        """Read a set file; see `files.load_set`."""
+        return cls(**vars(store.read_fields(path)))

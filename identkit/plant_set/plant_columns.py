@@ -1,100 +1,93 @@
 """Many plants as columns: what differs in length between plants stands end to end.
 
-`mode_count` and `parameter_count` say how many entries of the flat columns belong to each plant.
-Labels are columns `label_<name>` with `has_label_<name>`: a missing label is missing.
+`mode_count`, `delta_count` and `parameter_count` say how many entries of the flat columns belong to
+each plant. Labels are columns `label_<name>` with `has_label_<name>`: a missing label is missing.
 """
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from identkit.errors import InputError, Problem
+from identkit.plant_set.fields import Covariance, FittedPlant
+from identkit.plant_set.plant_document import BASES
 
 Columns = dict[str, NDArray[Any]]
 
 _BY_MODE = ("modal_frequency", "damping_ratio", "residue", "residue_rate")
 _MATRICES = ("base_gain", "base_residue", "feedthrough")
-_NUMBERS = ("base_frequency", "base_damping_ratio")
+_NUMBERS = ("delay", "base_frequency", "base_damping_ratio", "reach", "reach_frequency")
+_TEXTS = ("response", "base")
+_COUNTS = ("mode_count", "delta_count", "parameter_count")
 
 
-def plants_to_columns(plants: list[dict[str, Any]]) -> Columns:
-    """Return the columns of plants given as JSON values (`plant_document.plant_to`)."""
-    modal = [plant["modal_parameters"] for plant in plants]
+def plants_to_columns(plants: Sequence[FittedPlant], shape: tuple[int, int]) -> Columns:
+    """Return plants as columns; `shape` is (outputs, inputs)."""
     columns: Columns = {
-        "response": _texts([plant["response"] for plant in plants]),
-        "delay": np.array([plant["delay"] for plant in plants], dtype=float),
-        "reach": np.array([plant["reach"]["value"] for plant in plants], dtype=float),
-        "reach_frequency": np.array([p["reach"]["frequency"] for p in plants], dtype=float),
-        "base": _texts([item["base"] for item in modal]),
-        "mode_count": np.array([len(item["modal_frequency"]) for item in modal], dtype=int),
-        "delta_count": np.array([len(plant["delta"]) for plant in plants], dtype=int),
-        "delta": _end_to_end([plant["delta"] for plant in plants]),
+        name: np.array([getattr(plant, name) for plant in plants], dtype=str) for name in _TEXTS
     }
-    for name in _BY_MODE:
-        columns[name] = _end_to_end([item[name] for item in modal])
-    for name in _MATRICES:
-        columns[name] = np.array([item.get(name, _zeros_like(item)) for item in modal], dtype=float)
     for name in _NUMBERS:
-        columns[name] = np.array([item.get(name, 0.0) for item in modal], dtype=float)
+        columns[name] = np.array([getattr(plant, name) for plant in plants], dtype=float)
+    for name in _MATRICES:
+        matrices = [getattr(plant, name) for plant in plants]
+        columns[name] = np.array(matrices, dtype=float).reshape(len(plants), *shape)
+    columns["mode_count"] = np.array([plant.modal_frequency.size for plant in plants], dtype=int)
+    columns["delta_count"] = np.array([plant.delta.size for plant in plants], dtype=int)
+    for name in (*_BY_MODE, "delta"):
+        tail = shape if name.startswith("residue") else ()
+        columns[name] = _end_to_end([getattr(plant, name) for plant in plants], tail)
     return columns | _label_columns(plants) | _covariance_columns(plants)
 
 
-def _zeros_like(modal: dict[str, Any]) -> list[list[float]]:
-    return [[0.0 for _ in row] for row in modal["feedthrough"]]
+def _end_to_end(pieces: Sequence[NDArray[Any]], tail: tuple[int, ...] = ()) -> NDArray[Any]:
+    filled = [piece for piece in pieces if piece.size]
+    return np.concatenate(filled).astype(float) if filled else np.zeros((0, *tail))
 
 
-def _texts(values: list[str]) -> NDArray[Any]:
-    return np.array(values, dtype=str)
-
-
-def _end_to_end(pieces: list[Any]) -> NDArray[Any]:
-    filled = [np.asarray(piece, dtype=float) for piece in pieces if len(piece)]
-    return np.concatenate(filled) if filled else np.zeros(0)
-
-
-def _label_columns(plants: list[dict[str, Any]]) -> Columns:
-    names = sorted({name for plant in plants for name in plant["labels"]})
+def _label_columns(plants: Sequence[FittedPlant]) -> Columns:
+    names = sorted({name for plant in plants for name in plant.labels})
     columns: Columns = {}
     for name in names:
-        values = [plant["labels"].get(name) for plant in plants]
+        values = [plant.labels.get(name) for plant in plants]
         numeric = all(value is None or not isinstance(value, str) for value in values)
         blank: Any = 0.0 if numeric else ""
-        kind: Any = float if numeric else str
-        columns[f"has_label_{name}"] = np.array([value is not None for value in values])
         filled = [blank if value is None else value for value in values]
-        columns[f"label_{name}"] = np.array(filled, dtype=kind)
+        columns[f"has_label_{name}"] = np.array([value is not None for value in values])
+        columns[f"label_{name}"] = np.array(filled, dtype=float if numeric else str)
     return columns
 
 
-def _covariance_columns(plants: list[dict[str, Any]]) -> Columns:
-    found = [plant.get("covariance") for plant in plants]
-    names = [item["parameters"] if item else [] for item in found]
-    matrices = [np.ravel(item["matrix"]).tolist() if item else [] for item in found]
+def _covariance_columns(plants: Sequence[FittedPlant]) -> Columns:
+    found = [plant.covariance for plant in plants]
+    names = [item.parameters if item is not None else () for item in found]
     return {
         "parameter_count": np.array([len(item) for item in names], dtype=int),
-        "parameter": _texts([name for item in names for name in item]),
-        "covariance": _end_to_end(matrices),
+        "parameter": np.array([name for item in names for name in item], dtype=str),
+        "covariance": _end_to_end([item.matrix.ravel() for item in found if item is not None]),
     }
 
 
-def plants_from_columns(columns: Columns, place: str) -> list[dict[str, Any]]:
-    """Return plants as JSON values.
+def plants_from_columns(
+    columns: Columns, place: str, shape: tuple[int, int]
+) -> tuple[FittedPlant, ...]:
+    """Return the plants; `shape` is (outputs, inputs).
 
     Raises
     ------
     InputError
-        Where a column is missing, not finite, or its length does not fit the counts.
+        Where a column is missing, not finite, or its shape does not fit the counts.
     """
-    _check(columns, place)
+    _check(columns, place, shape)
     modes = _edges(columns["mode_count"])
     factors = _edges(columns["delta_count"])
     names = _edges(columns["parameter_count"])
     squares = _edges(columns["parameter_count"] ** 2)
-    return [
+    return tuple(
         _plant(columns, index, modes[index], factors[index], names[index], squares[index])
         for index in range(columns["response"].size)
-    ]
+    )
 
 
 def _edges(counts: NDArray[Any]) -> list[slice]:
@@ -104,39 +97,22 @@ def _edges(counts: NDArray[Any]) -> list[slice]:
 
 def _plant(
     columns: Columns, index: int, modes: slice, factors: slice, names: slice, square: slice
-) -> dict[str, Any]:
-    plant: dict[str, Any] = {
-        "response": str(columns["response"][index]),
-        "labels": _labels(columns, index),
-        "modal_parameters": _modal(columns, index, modes),
-        "delay": float(columns["delay"][index]),
-    }
+) -> FittedPlant:
     size = names.stop - names.start
+    covariance = None
     if size:
-        plant["covariance"] = {
-            "parameters": columns["parameter"][names].tolist(),
-            "matrix": columns["covariance"][square].reshape(size, size).tolist(),
-        }
-    plant["delta"] = columns["delta"][factors].tolist()
-    plant["reach"] = {
-        "value": float(columns["reach"][index]),
-        "frequency": float(columns["reach_frequency"][index]),
-    }
-    return plant
-
-
-def _modal(columns: Columns, index: int, modes: slice) -> dict[str, Any]:
-    base = str(columns["base"][index])
-    modal: dict[str, Any] = {name: columns[name][modes].tolist() for name in _BY_MODE}
-    modal["base"] = base
-    if base == "free":
-        modal["base_gain"] = columns["base_gain"][index].tolist()
-    if base == "pivot":
-        modal["base_frequency"] = float(columns["base_frequency"][index])
-        modal["base_damping_ratio"] = float(columns["base_damping_ratio"][index])
-        modal["base_residue"] = columns["base_residue"][index].tolist()
-    modal["feedthrough"] = columns["feedthrough"][index].tolist()
-    return modal
+        matrix = columns["covariance"][square].reshape(size, size)
+        covariance = Covariance(tuple(columns["parameter"][names].tolist()), matrix)
+    values: dict[str, Any] = {name: str(columns[name][index]) for name in _TEXTS}
+    values |= {name: float(columns[name][index]) for name in _NUMBERS}
+    values |= {name: columns[name][index] for name in _MATRICES}
+    values |= {name: columns[name][modes] for name in _BY_MODE}
+    return FittedPlant(
+        **values,
+        labels=_labels(columns, index),
+        covariance=covariance,
+        delta=columns["delta"][factors],
+    )
 
 
 def _labels(columns: Columns, index: int) -> dict[str, Any]:
@@ -149,25 +125,40 @@ def _labels(columns: Columns, index: int) -> dict[str, Any]:
     }
 
 
-def _check(columns: Columns, place: str) -> None:
-    single = ("response", "delay", "reach", "reach_frequency", "base", *_MATRICES, *_NUMBERS)
-    counts = ("mode_count", "delta_count", "parameter_count")
-    for name in (*single, *counts, *_BY_MODE, "delta", "parameter", "covariance"):
+def _check(columns: Columns, place: str, shape: tuple[int, int]) -> None:
+    flat = (*_BY_MODE, "delta", "parameter", "covariance")
+    for name in (*_TEXTS, *_NUMBERS, *_MATRICES, *_COUNTS, *flat):
         if name not in columns:
             raise InputError(Problem(f"{place}, field plants.{name}", "nothing", "this column"))
-    plants = columns["response"].shape[0]
-    sizes: dict[str, int] = dict.fromkeys((*single, *counts), int(plants))
-    sizes |= dict.fromkeys(_BY_MODE, int(columns["mode_count"].sum()))
-    sizes["delta"] = int(columns["delta_count"].sum())
-    sizes["parameter"] = int(columns["parameter_count"].sum())
-    sizes["covariance"] = int((columns["parameter_count"] ** 2).sum())
-    sizes |= {name: plants for name in columns if name.startswith(("label_", "has_label_"))}
-    for name, size in sizes.items():
+    for name in _COUNTS:
+        if columns[name].dtype.kind not in "iu" or (columns[name] < 0).any():
+            place_of = f"{place}, field plants.{name}"
+            raise InputError(Problem(place_of, "other values", "whole numbers, 0 or more"))
+    for name, size in _shapes(columns, shape).items():
         _check_column(columns[name], size, f"{place}, field plants.{name}")
+    for name in set(columns["base"].tolist()) - set(BASES):
+        expected = f"one of {', '.join(BASES)}"
+        raise InputError(Problem(f"{place}, field plants.base", repr(name), expected))
 
 
-def _check_column(column: NDArray[Any], size: int, place: str) -> None:
-    if column.shape[0] != size:
-        raise InputError(Problem(place, f"{column.shape[0]} entries", f"{size} entries"))
+def _shapes(columns: Columns, shape: tuple[int, int]) -> dict[str, tuple[int, ...]]:
+    """Return the shape every column must have."""
+    plants = int(columns["response"].size)
+    modes, factors, parameters = (int(columns[name].sum()) for name in _COUNTS)
+    named = [name for name in columns if name.startswith(("label_", "has_label_"))]
+    sizes: dict[str, tuple[int, ...]] = dict.fromkeys(
+        (*_TEXTS, *_NUMBERS, *_COUNTS, *named), (plants,)
+    )
+    sizes |= dict.fromkeys(_MATRICES, (plants, *shape))
+    sizes |= dict.fromkeys(("modal_frequency", "damping_ratio"), (modes,))
+    sizes |= dict.fromkeys(("residue", "residue_rate"), (modes, *shape))
+    sizes["delta"], sizes["parameter"] = (factors,), (parameters,)
+    sizes["covariance"] = (int((columns["parameter_count"] ** 2).sum()),)
+    return sizes
+
+
+def _check_column(column: NDArray[Any], shape: tuple[int, ...], place: str) -> None:
+    if column.shape != shape:
+        raise InputError(Problem(place, f"numbers of shape {column.shape}", f"shape {shape}"))
     if column.dtype.kind == "f" and not np.isfinite(column).all():
         raise InputError(Problem(place, "a number that is not finite", "finite numbers"))

@@ -28,6 +28,7 @@ from identkit.plant_set.schur import SchurResponse, plant_matrices, plant_poles,
 from identkit.plant_set.stacked import StackedPlants, stack
 
 PLANTS_AT_ONCE = 24
+LOWEST_SHARE = 1e-9
 _ON_AXIS = 1e-6
 
 
@@ -87,7 +88,9 @@ class Surroundings:
 
     def __init__(self, contents: PlantSetFields) -> None:
         self.form = contents.form
-        self.band = contents.band
+        # At rest a free base is infinite and only its limit counts.
+        low, high = contents.band
+        self.band = (max(low, LOWEST_SHARE * high), high)
         self._delay = contents.nominal.delay
         self._nominal = SchurResponse(contents.nominal)
         outputs, inputs = contents.nominal.D.shape

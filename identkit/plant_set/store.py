@@ -9,6 +9,8 @@ from identkit.plant_set.document import from_document, to_document
 from identkit.plant_set.fields import LISTED_AT_MOST, FittedPlant, PlantSetFields
 from identkit.plant_set.hdf5_file import read_hdf5, write_hdf5
 from identkit.plant_set.json_file import read_json, write_json
+from identkit.plant_set.plant_columns import plants_from_columns, plants_to_columns
+from identkit.plant_set.plant_document import plant_to
 from identkit.plant_set.schema import check_schema
 
 _FORMAT_OF_SUFFIX = {".json": "json", ".h5": "hdf5", ".hdf5": "hdf5"}
@@ -39,25 +41,31 @@ def write_fields(contents: PlantSetFields, path: str | Path, format: str | None 
     """
     target = Path(path)
     if format_of(target, format) == "json":
-        document = to_document(replace(contents, plants=plants_that_set_the_bound(contents)))
-        _check(document, str(target))
-        write_json(document, target)
-    else:
-        document = to_document(contents)
-        _check(document, str(target))
-        write_hdf5(document, target)
+        listed = replace(contents, plants=plants_that_set_the_bound(contents))
+        write_json(_checked(listed, str(target)), target)
+        return
+    document = _checked(replace(contents, plants=contents.plants[:LISTED_AT_MOST]), str(target))
+    shape = (len(contents.outputs), len(contents.inputs))
+    columns = plants_to_columns(contents.plants, shape)
+    plants_from_columns(columns, str(target), shape)
+    write_hdf5(document, columns, target)
 
 
-def read_document(path: str | Path) -> Any:
-    """Read a set file as JSON values, checked against the schema."""
+def read_fields(path: str | Path) -> PlantSetFields:
+    """Return the fields of a set file, checked against the schema and for shapes."""
     target = Path(path)
     if format_of(target) == "json":
         document = read_json(target)
         check_schema(document, str(target))
-        return document
-    document = read_hdf5(target)
-    check_schema(_without_most_plants(document), str(target))
-    return document
+        return from_document(document, str(target))
+    document, columns = read_hdf5(target)
+    place = str(target)
+    check_schema({**document, "plants": []}, place)
+    contents = from_document({**document, "plants": []}, place)
+    shape = (len(contents.outputs), len(contents.inputs))
+    plants = plants_from_columns(columns, place, shape)
+    check_schema({**document, "plants": [plant_to(p) for p in plants[:LISTED_AT_MOST]]}, place)
+    return replace(contents, plants=plants)
 
 
 def plants_that_set_the_bound(contents: PlantSetFields) -> tuple[FittedPlant, ...]:
@@ -80,14 +88,9 @@ def plants_that_set_the_bound(contents: PlantSetFields) -> tuple[FittedPlant, ..
     return tuple(plant for plant in setting if plant.response in kept)
 
 
-def _check(document: dict[str, Any], place: str) -> None:
-    """Check with the schema and with the reader, which also knows about shapes."""
-    check_schema(_without_most_plants(document), place)
+def _checked(contents: PlantSetFields, place: str) -> dict[str, Any]:
+    """Return the document, checked with the schema and with the reader, which knows of shapes."""
+    document = to_document(contents)
+    check_schema(document, place)
     from_document(document, place)
-
-
-def _without_most_plants(document: Any) -> Any:
-    """Leave plants enough for the schema; the reader's own checks see all of them."""
-    if not isinstance(document, dict) or not isinstance(document.get("plants"), list):
-        return document
-    return {**document, "plants": document["plants"][:LISTED_AT_MOST]}
+    return document

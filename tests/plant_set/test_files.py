@@ -207,9 +207,17 @@ def test_a_truncated_hdf5_file_is_refused(hdf5_path):
 @pytest.mark.parametrize(
     ("column", "value", "message"),
     [
-        ("damping_ratio", np.ones(3), "3 entries; expected 32 entries"),
+        (
+            "damping_ratio",
+            np.ones(3),
+            r"damping_ratio: found numbers of shape \(3,\); expected shape \(32,\)",
+        ),
         ("delay", np.full(8, np.nan), "not finite"),
         ("mode_count", np.full(8, 3), "modal_frequency"),
+        ("mode_count", np.full(8, 4.0), "mode_count: found other values; expected whole numbers"),
+        ("delta_count", np.full(8, -1), "delta_count: found other values"),
+        ("label_unit", np.zeros((8, 2)), "label_unit"),
+        ("base", np.array([b"spring"] * 8), "base: found 'spring'; expected one of free"),
     ],
 )
 def test_hdf5_columns_that_do_not_add_up_are_named(hdf5_path, column, value, message):
@@ -217,6 +225,18 @@ def test_hdf5_columns_that_do_not_add_up_are_named(hdf5_path, column, value, mes
         del file["plants"][column]
         file["plants"][column] = value
     with pytest.raises(InputError, match=message):
+        load_set(hdf5_path)
+
+
+def test_an_hdf5_group_where_a_column_should_be_is_refused(hdf5_path):
+    with h5py.File(hdf5_path, "a") as file:
+        del file["plants/delay"]
+        file.create_group("plants/delay")
+    with pytest.raises(InputError, match=r"set\.h5: found unreadable data"):
+        load_set(hdf5_path)
+    with h5py.File(hdf5_path, "a") as file:
+        del file["plants"]
+    with pytest.raises(InputError, match=r"plants\.response: found nothing"):
         load_set(hdf5_path)
 
 
