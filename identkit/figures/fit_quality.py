@@ -8,6 +8,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
+from identkit.figures.frequency_axis import log_frequency_axis, ratio_axis
 from identkit.figures.labels import Groups, groups_of, natural_key, short_names, units_of
 from identkit.figures.style import (
     ALARM,
@@ -20,9 +21,7 @@ from identkit.figures.style import (
     clipped,
     group_style,
     in_house_style,
-    log_frequency_axis,
     new_figure,
-    ratio_axis,
 )
 from identkit.grids import Gridded, datasets
 from identkit.methods.arrays import ComplexArray, FloatArray, IntArray

@@ -62,8 +62,9 @@ def draw_order_tradeoff(picked: OrderTradeoff, layout: Layout = WIDE) -> Figure:
         axes.annotate(
             f"chosen: order {picked.chosen}, {picked.excess[at[0]]:.2f} dB",
             (picked.chosen, picked.excess[at[0]]),
-            xytext=(6, 14),
+            xytext=(0, 13),
             textcoords="offset points",
+            ha="right" if picked.chosen > picked.order.mean() else "left",
             fontweight="bold",
         )
     axes.set_xlabel("order of the weight")

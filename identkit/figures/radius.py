@@ -8,6 +8,12 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 
+from identkit.figures.frequency_axis import (
+    log_edges,
+    log_frequency_axis,
+    mark_modes,
+    ratio_axis,
+)
 from identkit.figures.labels import short_names, units_of
 from identkit.figures.set_plants import labelled
 from identkit.figures.style import (
@@ -16,7 +22,6 @@ from identkit.figures.style import (
     INK,
     NOMINAL,
     PAPER,
-    RULE,
     SOFT_INK,
     WEIGHT,
     WIDE,
@@ -24,9 +29,7 @@ from identkit.figures.style import (
     clipped,
     group_style,
     in_house_style,
-    log_frequency_axis,
     new_figure,
-    ratio_axis,
 )
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.plant_set.fields import PlantSetFields
@@ -106,7 +109,8 @@ def pick_radius(
     set_by = [owners.get(name, name) for name in radii.set_by]
     setters = _by_share(set_by)
     place = {name: at for at, name in enumerate(setters)}
-    touches = sorted(contents.attribution, key=lambda each: -each.reach)[:ROWS]
+    nearest = max((each.reach for each in contents.attribution), default=0.0)
+    touches = [each for each in contents.attribution if each.reach >= 0.995 * nearest]
     nominal = nominal_response(contents, frequency)[0, 0]
     blank = np.full(frequency.shape, np.nan)
     known = floor is not None and floor_frequency is not None and np.isfinite(floor).any()
@@ -185,53 +189,6 @@ def _nominal(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     axes.set_ylabel("nominal, dB")
     axes.yaxis.set_major_locator(MaxNLocator(4))
     mark_modes(axes, picked.mode_names, picked.mode_frequency, picked.band, layout)
-
-
-def mark_modes(
-    axes: Axes,
-    names: tuple[str, ...],
-    frequency: FloatArray,
-    band: tuple[float, float],
-    layout: Layout,
-    *,
-    in_logarithms: bool = False,
-) -> None:
-    """Write the names of the modes along the upper edge, crowded ones one line higher.
-
-    Parameters
-    ----------
-    axes
-        A logarithmic axis, or one that carries logarithms to base 10.
-    names, frequency
-        (modes,) names and Hz, ascending.
-    band
-        Hz, ends of the axis.
-    layout
-        Decides how near is crowded.
-    in_logarithms
-        Whether the axis carries logarithms.
-    """
-    closest = (0.085 if layout.is_narrow else 0.035) * np.log10(band[1] / band[0])
-    raised, before = False, -np.inf
-    for name, hertz in zip(names, frequency, strict=True):
-        if not band[0] <= hertz <= band[1]:
-            continue
-        at = float(np.log10(hertz))
-        raised = at - before < closest and not raised
-        before = at
-        x = at if in_logarithms else hertz
-        axes.axvline(x, color=RULE, lw=0.8, zorder=0)
-        axes.annotate(
-            name,
-            (x, 1.0),
-            xycoords=("data", "axes fraction"),
-            xytext=(0, 10 if raised else 1.5),
-            textcoords="offset points",
-            ha="center",
-            va="bottom",
-            color=SOFT_INK,
-            size="small",
-        )
 
 
 def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
@@ -317,13 +274,3 @@ def _segments(axes: Axes, picked: RadiusWeight, chosen: BoolArray, row: int, col
     ends = np.flatnonzero(~padded[1:] & padded[:-1])
     spans = [(edges[a], edges[b] - edges[a]) for a, b in zip(starts, ends, strict=True)]
     axes.broken_barh(spans, (row - 0.32, 0.64), color=colour, lw=0)
-
-
-def log_edges(frequency: FloatArray) -> FloatArray:
-    """Return the (points + 1) edges half-way, in log frequency, between neighbouring points."""
-    logs = np.log(frequency)
-    if logs.size == 1:
-        return np.asarray(np.exp([logs[0] - 0.01, logs[0] + 0.01]), dtype=float)
-    middle = 0.5 * (logs[1:] + logs[:-1])
-    first, last = 2 * logs[0] - middle[0], 2 * logs[-1] - middle[-1]
-    return np.asarray(np.exp(np.concatenate([[first], middle, [last]])), dtype=float)

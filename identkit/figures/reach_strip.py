@@ -8,8 +8,8 @@ from matplotlib.colors import Normalize
 from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator
 
+from identkit.figures.frequency_axis import frequency_ticks, mark_modes
 from identkit.figures.labels import reading_order, units_of
-from identkit.figures.radius import mark_modes
 from identkit.figures.set_plants import labelled, reach_along
 from identkit.figures.style import (
     INK,
@@ -19,7 +19,6 @@ from identkit.figures.style import (
     WIDE,
     Layout,
     clipped,
-    frequency_ticks,
     in_house_style,
     new_figure,
 )

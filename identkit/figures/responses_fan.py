@@ -11,6 +11,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator, MultipleLocator
 
 from identkit.figures import labels
+from identkit.figures.frequency_axis import log_frequency_axis
 from identkit.figures.style import (
     ALARM,
     BANDS,
@@ -20,7 +21,6 @@ from identkit.figures.style import (
     Layout,
     clipped,
     in_house_style,
-    log_frequency_axis,
     new_figure,
 )
 from identkit.grids import Gridded, datasets

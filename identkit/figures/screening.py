@@ -8,8 +8,8 @@ from matplotlib.colors import ListedColormap
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 
+from identkit.figures.frequency_axis import log_edges, log_frequency_axis
 from identkit.figures.labels import TextArray, condition_of, natural_key, units_of
-from identkit.figures.radius import log_edges
 from identkit.figures.style import (
     BANDS,
     INK,
@@ -20,7 +20,6 @@ from identkit.figures.style import (
     clipped,
     group_style,
     in_house_style,
-    log_frequency_axis,
     new_figure,
 )
 from identkit.grids import Gridded, datasets

@@ -1,18 +1,14 @@
 """House style: palette, page widths, frequency axes; what every picture shares."""
 
 import functools
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, ParamSpec, TypeVar
 
 import matplotlib
 import numpy as np
-from matplotlib.axes import Axes
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
-from matplotlib.ticker import FixedLocator, NullLocator
-
-from identkit.methods.arrays import FloatArray
 
 PAPER = "#fbfcfa"
 INK = "#1c2b33"
@@ -151,44 +147,6 @@ def frequency_label(frequency: float) -> str:
     if frequency >= 1000.0:
         return f"{float(f'{frequency / 1000.0:.3g}'):g} kHz"
     return f"{float(f'{frequency:.3g}'):g} Hz"
-
-
-def frequency_ticks(low: float, high: float, *, steps: Sequence[float] = (1, 2, 5)) -> FloatArray:
-    """Return the 1-2-5 frequencies within [low, high], Hz."""
-    decades = range(int(np.floor(np.log10(low))), int(np.ceil(np.log10(high))) + 1)
-    ticks = np.array([step * 10.0**decade for decade in decades for step in steps])
-    return ticks[(ticks >= low * 0.999) & (ticks <= high * 1.001)]
-
-
-def _tick_text(tick: float) -> str:
-    return f"{tick / 1000:g}k" if tick >= 1000 else f"{tick:g}"
-
-
-def log_frequency_axis(
-    axes: Axes, low: float, high: float, layout: Layout, *, label: bool = True
-) -> None:
-    """Give `axes` a logarithmic frequency axis labelled 100, 200, 500, 1k ... in Hz."""
-    steps = (1, 3) if layout.is_narrow and np.log10(high / low) > 1.5 else (1, 2, 5)
-    ticks = frequency_ticks(low, high, steps=steps)
-    axes.set_xscale("log")
-    axes.set_xlim(low, high)
-    axes.xaxis.set_major_locator(FixedLocator(ticks.tolist()))
-    axes.xaxis.set_minor_locator(NullLocator())
-    axes.set_xticklabels([_tick_text(tick) for tick in ticks] if label else [])
-    if label:
-        axes.set_xlabel("frequency, Hz")
-
-
-def ratio_axis(axes: Axes, low: float, high: float) -> None:
-    """Give `axes` a logarithmic ratio axis whose ticks read 0.1, 1, 10 rather than powers."""
-    axes.set_yscale("log")
-    axes.set_ylim(low, high)
-    steps = (1, 2, 5) if high / low < 300 else (1, 3) if high / low < 3000 else (1,)
-    decades = range(int(np.floor(np.log10(low))), int(np.ceil(np.log10(high))) + 1)
-    ticks = [s * 10.0**d for d in decades for s in steps if low <= s * 10.0**d <= high]
-    axes.yaxis.set_major_locator(FixedLocator(ticks))
-    axes.yaxis.set_minor_locator(NullLocator())
-    axes.set_yticklabels([f"{tick:.4g}" for tick in ticks])
 
 
 def group_style(index: int) -> tuple[str, str]:

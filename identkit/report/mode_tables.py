@@ -6,9 +6,9 @@ import xarray as xr
 from identkit.figures.labels import natural_key, short_names, units_of
 from identkit.outcomes import ADVICE, Outcome, slug
 from identkit.report.contents import ReportInput
+from identkit.report.mode_findings import frequency_spread
 from identkit.report.numbers import number, percent, with_interval
 from identkit.report.table import Table, table_of
-from identkit.report.verdict import frequency_spread
 
 
 def population_table(given: ReportInput) -> Table | None:
@@ -98,11 +98,15 @@ def head_table(given: ReportInput) -> Table | None:
     relative = frequency["head_value"].transpose("mode", "head").values
     relative = 100.0 * (relative / frequency["population_value"].values[:, None] - 1.0)
     rows = [
-        (str(name), *(f"{number(value, 2)} %" if np.isfinite(value) else "–" for value in row))
+        (str(name), *(_signed(value) for value in row))
         for name, row in zip(population["mode"].values, relative, strict=True)
     ]
     columns = [("mode", "text"), *((f"head {head}", "number") for head in heads)]
     return table_of("Mean frequency of each head, relative to the population", columns, rows)
+
+
+def _signed(value: float) -> str:
+    return f"{value:+.3f} %".replace("-", "−") if np.isfinite(value) else "–"
 
 
 def fit_outcome_table(given: ReportInput) -> Table | None:

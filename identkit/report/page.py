@@ -15,9 +15,10 @@ from identkit.grids import datasets
 from identkit.report import measurement_tables, mode_tables, set_tables
 from identkit.report.contents import ReportInput
 from identkit.report.gallery import Exhibit, hang, population_modes
+from identkit.report.mode_findings import mode_near
 from identkit.report.numbers import number
 from identkit.report.table import Table
-from identkit.report.verdict import headline, verdict
+from identkit.report.verdict import headline, touching, verdict
 
 __all__ = ["ReportInput", "build_report", "write_report"]
 
@@ -134,9 +135,10 @@ def _tiles(given: ReportInput) -> list[Tile]:
         span = f"{frequency_label(frequency.min())} to {frequency_label(frequency.max())}"
         tiles.append(Tile("Modes", str(len(names)), span))
     if contents is not None and contents.attribution:
-        top = max(contents.attribution, key=lambda each: each.reach)
+        top = touching(contents)[0]
         unit = readable_names(contents).get(top.label, top.label)
-        place = " · ".join(part for part in (frequency_label(top.frequency), top.mode) if part)
+        mode = mode_near(given, top.frequency, top.mode)
+        place = " · ".join(part for part in (frequency_label(top.frequency), mode) if part)
         tiles.append(Tile("Set by", unit, f"near {place}"))
     return tiles
 
@@ -144,6 +146,7 @@ def _tiles(given: ReportInput) -> list[Tile]:
 def _all_tables(given: ReportInput) -> dict[str, Table]:
     names, frequency = population_modes(given)
     found = {
+        "claims": set_tables.claims_table(given),
         "attribution": set_tables.attribution_table(given),
         "worst": set_tables.worst_table(given, names, frequency),
         "population": mode_tables.population_table(given),

@@ -14,8 +14,34 @@ from identkit.figures.style import frequency_label
 from identkit.methods.arrays import FloatArray
 from identkit.report.bound_curves import order_tradeoff
 from identkit.report.contents import ReportInput
+from identkit.report.mode_findings import mode_near
 from identkit.report.numbers import counted, listed, number, percent
 from identkit.report.table import Table, table_of
+
+HALF_WAY = 0.5
+"""Attributions below this reach are left to the set file."""
+
+
+def claims_table(given: ReportInput) -> Table | None:
+    """Return what the certificate claims, each with its method."""
+    if given.plant_set is None:
+        return None
+    certificate = given.plant_set.certificate
+    between, best = certificate.between_grid, certificate.optimality
+    audit = certificate.audit
+    judged = "not audited" if audit is None else "passed" if audit.passed else "failed"
+    rule = str(given.bound.attrs.get("order_rule", "")) if given.bound is not None else ""
+    rows = [
+        ("held", f"{certificate.measured.held} of {certificate.measured.of}", "reach at most 1"),
+        ("between measured frequencies", number(between.worst, 8), between.method),
+        ("tolerance there", number(between.tolerance, 2), "stated by that method"),
+        ("order of the weight", str(best.order), rule),
+        ("excess", f"{best.excess_db:.4f} dB", "weight over required radius times profile"),
+        ("proved floor", f"{best.floor_db:.4f} dB", "no weight of this order does better"),
+        ("audit", judged, "from the set file alone"),
+    ]
+    columns = (("claim", "text"), ("value", "number"), ("basis", "text"))
+    return table_of("What the certificate claims", columns, rows)
 
 
 def attribution_table(given: ReportInput) -> Table | None:
@@ -30,10 +56,11 @@ def attribution_table(given: ReportInput) -> Table | None:
             names.get(entry.label, entry.label),
             number(entry.reach, 6),
             frequency_label(entry.frequency),
-            entry.mode or "–",
+            mode_near(given, entry.frequency, entry.mode) or "–",
             percent(contents.radii.set_by.count(entry.label) / total),
         )
         for entry in sorted(contents.attribution, key=lambda each: -each.reach)
+        if entry.reach >= HALF_WAY
     ]
     columns = (
         ("response", "text"),
@@ -43,7 +70,7 @@ def attribution_table(given: ReportInput) -> Table | None:
         ("sets the radius at", "number"),
     )
     note = "Last column: share of the frequencies at which this response needs the largest radius."
-    return table_of("Who sets the bound", columns, rows, note, 20)
+    return table_of("Who sets the bound", columns, rows, note, 16)
 
 
 def worst_table(

@@ -6,16 +6,14 @@ from collections import Counter, defaultdict
 from dataclasses import dataclass
 
 import numpy as np
-import xarray as xr
 
 from identkit.figures.labels import natural_key, units_of
 from identkit.figures.radius import readable_names
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
-from identkit.methods.arrays import FloatArray
-from identkit.outcomes import Outcome
-from identkit.plant_set.fields import Excluded, PlantSetFields
+from identkit.plant_set.fields import Attribution, Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
+from identkit.report.mode_findings import mode_near, modes_sentence, odd_modes_sentence
 from identkit.report.numbers import counted, listed, number, percent
 
 HELD, NOT_HELD, NO_SET = "held", "not held", "no set"
@@ -62,7 +60,7 @@ def verdict(given: ReportInput) -> list[str]:
     given
         What the stages wrote; a stage that did not run adds no sentence.
     """
-    measured = (_held, _rechecked, _modes, _odd_modes)
+    measured = (_held, _rechecked, modes_sentence, odd_modes_sentence)
     made = (_nominal, _weight, _setters, _limit_of_control)
     makers = (*measured, *made, _marked_but_kept, _coverage, _envelope)
     return [sentence for make in makers if (sentence := make(given))]
@@ -144,80 +142,6 @@ def _marked_but_kept(given: ReportInput) -> str:
     )
 
 
-def _modes(given: ReportInput) -> str:
-    if given.population is None:
-        return ""
-    spread = frequency_spread(given)
-    value = given.population["population_value"].sel(quantity="modal_frequency").values
-    names = given.population["mode"].values.astype(str)
-    if not names.size:
-        return "No mode is common to the responses."
-    span = f"from {frequency_label(value.min())} to {frequency_label(value.max())}"
-    sentence = f"{counted(len(names), 'mode')} describe{'s' * (len(names) == 1)} the population, "
-    sentence += span if len(names) > 1 else f"at {frequency_label(value[0])}"
-    if not np.isfinite(spread).any():
-        return sentence + "."
-    widest = int(np.nanargmax(spread))
-    return (
-        f"{sentence}; between plants at one temperature their frequencies spread by "
-        f"{percent(np.nanmin(spread))} to {percent(np.nanmax(spread))} (one sigma, error of the "
-        f"fits taken out), most for {names[widest]} at {frequency_label(value[widest])}."
-    )
-
-
-def frequency_spread(given: ReportInput) -> FloatArray:
-    """Return each population mode's relative frequency spread between plants, one sigma."""
-    if given.population is None:
-        return np.zeros(0)
-    chosen = given.population.sel(quantity="modal_frequency")
-    parts = [
-        chosen[name].values for name in ("unit_deviation", "head_deviation", "residual_deviation")
-    ]
-    known = np.isfinite(parts).any(axis=0)
-    return np.where(known, np.sqrt(np.nansum(np.square(parts), axis=0)), np.nan)
-
-
-def _odd_modes(given: ReportInput) -> str:
-    if given.modes is None or "mode_in_population" not in given.modes:
-        return ""
-    extra, shifted = _extra_modes(given.modes), _shifted_modes(given.modes)
-    parts = []
-    for unit in sorted({*extra, *shifted}, key=natural_key):
-        found = []
-        if unit in extra:
-            verb = "is" if len(extra[unit]) == 1 else "are"
-            found.append(f"{listed(extra[unit], 3)} {verb} not in the population")
-        if unit in shifted:
-            verb = "stands" if len(shifted[unit]) == 1 else "stand"
-            found.append(f"{listed(shifted[unit], 4)} {verb} far from the population's place")
-        parts.append(f"{unit} ({'; '.join(found)})")
-    return f"Inspect {listed(parts, 3)}." if parts else ""
-
-
-def _extra_modes(modes: xr.Dataset) -> dict[str, list[str]]:
-    """Return, by unit, 'a mode near 7.15 kHz' for every mode outside the population."""
-    extra = modes.isel(mode=~modes["mode_in_population"].values.astype(bool))
-    units, found = units_of(modes), defaultdict(list)
-    for at in range(extra.sizes["mode"]):
-        frequency = extra["modal_frequency"].values[:, at]
-        for unit in sorted(set(units[np.isfinite(frequency)].tolist())):
-            place = frequency_label(float(np.nanmedian(frequency[units == unit])))
-            found[unit].append(f"a mode near {place}")
-    return dict(found)
-
-
-def _shifted_modes(modes: xr.Dataset) -> dict[str, list[str]]:
-    """Return, by unit, the names of modes far from the population's."""
-    if "mode_outcome" not in modes:
-        return {}
-    hits = modes["mode_outcome"].values == Outcome.MODE_SHIFTED
-    units, found = units_of(modes), defaultdict(list)
-    for at, name in enumerate(modes["mode"].values.astype(str)):
-        for unit in sorted(set(units[hits[:, at]].tolist())):
-            found[unit].append(str(name))
-    return dict(found)
-
-
 def _nominal(given: ReportInput) -> str:
     if given.nominal is None or "floor_distance_mean_db" not in given.nominal:
         return ""
@@ -249,7 +173,7 @@ def _rechecked(given: ReportInput) -> str:
     beyond = between.worst - 1.0
     worst = f"1 + {number(beyond, 2)}" if 0.0 < beyond < 1e-3 else number(between.worst, 6)
     found = (
-        f"between the measured frequencies the largest reach is {worst} ({between.method}; "
+        f"between the measured frequencies the largest reach is {worst} ({_short(between.method)}; "
         f"tolerance {number(between.tolerance, 2)})"
     )
     if audit is None:
@@ -266,11 +190,21 @@ def _setters(given: ReportInput) -> str:
         return ""
     names = readable_names(contents)
     shown = []
-    for entry in sorted(contents.attribution, key=lambda each: -each.reach):
-        mode = f" ({entry.mode})" if entry.mode else ""
+    for entry in touching(contents):
+        mode = mode_near(given, entry.frequency, entry.mode)
+        mode = f" ({mode})" if mode else ""
         name = names.get(entry.label, entry.label)
         shown.append(f"{name} near {frequency_label(entry.frequency)}{mode}")
-    return f"The bound is set by {listed(shown, 3)}; there these plants leave the weight no slack."
+    if not shown:
+        return ""
+    verb = "leaves" if len(shown) == 1 else "leave"
+    return f"The bound is set by {listed(shown, 3)}, which {verb} the weight no slack there."
+
+
+def touching(contents: PlantSetFields) -> list[Attribution]:
+    """Return who comes within half a percent of the largest reach, closest first."""
+    entries = sorted(contents.attribution, key=lambda each: -each.reach)
+    return [entry for entry in entries if entry.reach >= 0.995 * entries[0].reach]
 
 
 def _limit_of_control(given: ReportInput) -> str:
@@ -315,6 +249,11 @@ def _envelope(given: ReportInput) -> str:
     if temperature is not None:
         text += f" and at the temperatures measured ({temperature[0]:g} to {temperature[1]:g} °C)"
     return text + "; outside, nothing is."
+
+
+def _short(method: str) -> str:
+    """Return a method without its citations and conditions, which stand in the tables."""
+    return re.split(r"[(;]", method)[0].strip()
 
 
 def _ended(sentence: str) -> str:

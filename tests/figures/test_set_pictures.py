@@ -6,8 +6,9 @@ import numpy as np
 import pytest
 from numpy.testing import assert_allclose
 
+from identkit.figures.frequency_axis import log_edges
 from identkit.figures.order_tradeoff import OrderTradeoff, draw_order_tradeoff
-from identkit.figures.radius import draw_radius, log_edges, pick_radius
+from identkit.figures.radius import draw_radius, pick_radius
 from identkit.figures.reach_strip import (
     binned_maximum,
     draw_reach_strip,

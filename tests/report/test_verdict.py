@@ -79,8 +79,8 @@ def test_odd_modes_name_their_unit(given):
     modes["mode_outcome"].values[8:12, 1] = Outcome.MODE_SHIFTED
     modes["mode_outcome"].values[8:12, 3] = Outcome.MODE_SHIFTED
     assert sentence(replace(given, modes=modes), "Inspect") == (
-        "Inspect U03 (a mode near 7.15 kHz is not in the population; M2 and M4 stand far from "
-        "the population's place)."
+        "Inspect U03 (a mode near 7.15 kHz, in 4 of 4 responses, is not in the population; M2 and "
+        "M4 stand far from the population's place)."
     )
 
 
@@ -98,7 +98,7 @@ def test_setters_are_named_by_unit_head_and_temperature(given):
     entry = fields.Attribution(first.response, 8263.0, 1.0, "M5")
     changed = replace(given, plant_set=replace(given.plant_set, attribution=(entry,)))
     assert sentence(changed, "The bound is set by").startswith(
-        "The bound is set by U01, head 0, 10 °C near 8.26 kHz (M5);"
+        "The bound is set by U01, head 0, 10 °C near 8.26 kHz (M5), which leaves"
     )
 
 
