@@ -1,6 +1,5 @@
 """The command line: thin commands in the order of the work."""
 
-import logging
 import sys
 import traceback
 from collections.abc import Callable
@@ -175,7 +174,6 @@ def _exit_code(command: Callable[[], object]) -> int:
 def _write_fault() -> Path:
     import tempfile
 
-    logging.getLogger("identkit").exception("internal fault")
     with tempfile.NamedTemporaryFile(
         "w", prefix="identkit-fault-", suffix=".log", delete=False, encoding="utf-8"
     ) as log:
