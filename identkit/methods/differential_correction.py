@@ -22,6 +22,7 @@ from identkit.methods.infeasibility_certificate import proves_infeasible
 MAX_PROGRAMS = 150
 CEILING_SLACK = 1e-9
 LARGEST = 1e3
+MOMENTUM = 1.0
 NEARLY_COMMON = 0.5
 
 
@@ -179,6 +180,7 @@ def lower_ratio(
     initial: Ratio | None = None,
     stop_level: float = 0.0,
     hard: HardRows | None = None,
+    most_programs: int = MAX_PROGRAMS,
 ) -> Search:
     """Lower the level of a ratio of polynomials by differential correction until it is proven best.
 
@@ -199,6 +201,8 @@ def lower_ratio(
         End as soon as a pair at or below this level is found.
     hard
         Further conditions; the floor then refers to the problem with them.
+    most_programs
+        Number of linear programs after which the search gives up.
 
     Returns
     -------
@@ -207,7 +211,7 @@ def lower_ratio(
 
     """
     descent = _Descent(bounds, order, start, initial, hard or HardRows())
-    return descent.run(tolerance, stop_level)
+    return descent.run(tolerance, stop_level, most_programs)
 
 
 class _Descent:
@@ -225,11 +229,11 @@ class _Descent:
         self.lower_rows = self.upper_rows = _first_rows(bounds, order)
         self.target = _level_without_ceiling(bounds, start[0] / start[1])
         self.scaled = _scale(bounds, order, *start)
-        self.floor, self.deciding = bounds.least_level, -1
+        self.floor, self.deciding, self.reach = bounds.least_level, -1, 0.0
 
-    def run(self, tolerance: float, stop_level: float) -> Search:
+    def run(self, tolerance: float, stop_level: float, most_programs: int) -> Search:
         stalled = 0
-        for count in range(MAX_PROGRAMS):
+        for count in range(most_programs):
             if self.best and self.best.level <= max(stop_level, self.floor * (1.0 + tolerance)):
                 return Search(self.best, self.floor, True, self.deciding, count)
             if self.floor > stop_level > 0.0 or stalled > 3:
@@ -240,7 +244,10 @@ class _Descent:
     def _step(self, tolerance: float) -> bool:
         """Solve one program and take what it brings; false if it brought nothing."""
         level = self.best.level if self.best else self.target
-        probe = max(level / (1.0 + 0.8 * tolerance), self.bounds.least_level)
+        lowest = max(self.bounds.least_level, (level * self.floor) ** 0.5)
+        probe = max(level / (1.0 + max(0.8 * tolerance, self.reach)), lowest)
+        if level / probe < 1.0 + 0.8 * tolerance:
+            probe = max(level / (1.0 + 0.8 * tolerance), self.bounds.least_level)
         solution = self._solve(probe)
         if solution is None:
             return False
@@ -248,9 +255,18 @@ class _Descent:
         if raised:
             self.floor, self.deciding = probe, solution.deciding
         accepted = self._accept(solution)
+        self._set_reach(level, solution)
         if solution.proven and self.best is None:
             self.target *= 1.0 + 10.0 * tolerance
         return self._add_violated(solution, probe) or accepted or raised
+
+    def _set_reach(self, level: float, solution: _Solution) -> None:
+        """Reach as far below the best as the last gain, less after a program without solution."""
+        gain = level / self.best.level - 1.0 if self.best else 0.0
+        if solution.margin > 0.0:
+            self.reach = min(0.25 * self.reach, gain)
+        elif gain > 0.0:
+            self.reach = MOMENTUM * gain
 
     def _solve(self, level: float) -> _Solution | None:
         numerator, denominator = self.scaled.values
@@ -314,11 +330,13 @@ def _level_without_ceiling(bounds: RatioBounds, ratio: FloatArray) -> float:
 
 
 def _first_rows(bounds: RatioBounds, order: int) -> IntArray:
-    """Points spread evenly under the measure, and all points that only constrain."""
+    """Points spread evenly under the measure and among those that only constrain, and the ends."""
+    count = 6 * order + 8
     share = np.cumsum(bounds.measure)
-    spread = np.searchsorted(share, np.linspace(0.0, share[-1], 6 * order + 8))
+    spread = np.searchsorted(share, np.linspace(0.0, share[-1], count))
     constraining = np.flatnonzero(bounds.measure == 0.0)
-    return np.union1d(np.minimum(spread, share.size - 1), constraining)
+    few = constraining[:: max(1, constraining.size // count)]
+    return np.union1d(np.minimum(spread, share.size - 1), np.append(few, [0, share.size - 1]))
 
 
 def _scale(

@@ -30,7 +30,10 @@ def proves_infeasible(
     from scipy.optimize import nnls
 
     support = multipliers > 0.0
-    y = nnls(rows[support].T, normal)[0]
+    try:
+        y = nnls(rows[support].T, normal)[0]
+    except RuntimeError:  # its iterations ran out: nothing is proven
+        return False
     remainder = np.abs(rows[support].T @ y - normal)
     rounding = 4.0 * np.finfo(float).eps * (np.abs(rows[support]).T @ y) * y.size**0.5
     return bool(float((remainder + rounding) @ largest) < 1.0)

@@ -37,7 +37,9 @@ DAMPING_FLOOR = 0.002
 TOLERANCE_DB = 0.02
 LADDER = (1, 2, 3, 4, 6, 8, 10, 12, 16, 20, 24)
 LADDER_TOLERANCE_DB = 0.2
-DAMPING_ROUNDS = 12
+DAMPING_ROUNDS = 8
+DAMPING_PROGRAMS = 60
+RESTARTS = ((0.01, 1.0), (0.03, 1.0), (0.01, 4.0), (0.03, 16.0), (0.03, 64.0))
 FAR = 1e6
 TWO_PI = 2.0 * np.pi
 
@@ -124,8 +126,9 @@ def fit_magnitude_weight(
     tolerance_db
         Gap to the proven optimum at which the search may end, damping cost apart.
     outside_factor
-        Below and above the points |W| stays within this factor of what is asked and allowed at the
-        nearest end (the excess counts there too); inf asks nothing but a finite, non-zero weight.
+        Below and above the points, and in gaps wider than a tenth, |W| stays within this factor of
+        what is asked and allowed at the neighbours (the excess counts there too), so that no weight
+        gains by a dip or a peak where nothing is asked; inf turns this off.
     ceiling
         (frequencies in Hz, values) further absolute ceilings on |W|, where no radius is given.
     start
@@ -206,8 +209,8 @@ class WeightClimb:
             If no weight of this order stays below the ceilings.
         """
         self.programs = 0
-        found = self.search(order, 0.5 * self.tolerance_db)
-        if found.best is None or self.best is None:
+        found = self._settled(order, self.search(order, 0.5 * self.tolerance_db))
+        if found.best is None:
             raise self.problem.infeasible(order, found.deciding)
         poles, zeros = self._damped(order, found.best)
         gain, excess_db = self.problem.settled_gain(poles, zeros)
@@ -223,6 +226,27 @@ class WeightClimb:
             gain=gain,
             programs=self.programs,
         )
+
+    def _settled(self, order: int, found: Search) -> Search:
+        """Search again with well-damped weights where the floor is not proven, then less tightly.
+
+        A pair with roots on the axis is a poor weight for the next one.
+        """
+        for damping, relaxed in RESTARTS:
+            if found.settled or found.best is None:
+                break
+            zeros, poles = _factors(found.best, self.problem)
+            again = lower_ratio(
+                self.problem.bounds,
+                order,
+                self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping)),
+                tolerance=_relative(0.5 * relaxed * self.tolerance_db),
+                initial=found.best,
+                most_programs=DAMPING_PROGRAMS,
+            )
+            self._keep(again)
+            found = replace(again, floor=max(again.floor, found.floor))
+        return found
 
     def _keep(self, found: Search) -> None:
         self.programs += found.programs
@@ -260,9 +284,16 @@ class WeightClimb:
                 hard = hard.joined(
                     rows_around(bad[k], damping, self.problem.centre, on_numerator=k == 0)
                 )
-            start = (pair.numerator, pair.denominator)
+            start = self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping))
             tolerance = _relative(0.25 * self.tolerance_db)
-            found = lower_ratio(self.problem.bounds, order, start, tolerance=tolerance, hard=hard)
+            found = lower_ratio(
+                self.problem.bounds,
+                order,
+                start,
+                tolerance=tolerance,
+                hard=hard,
+                most_programs=DAMPING_PROGRAMS,
+            )
             self.programs += found.programs
             if found.best is None:
                 break

@@ -11,8 +11,8 @@ from identkit.methods.differential_correction import RatioBounds
 from identkit.methods.spectral_factor import factor_magnitude
 
 TWO_PI = 2.0 * np.pi
-OUTSIDE_DECADES = 3.0
-OUTSIDE_POINTS = 16
+OUTSIDE_DECADES = 2.0
+WIDEST_GAP = 1.1
 NO_CEILING_FACTOR = 1e3
 HEADROOM = 1e-11
 
@@ -123,12 +123,12 @@ def _gathered(
     asked: _Asked, extra_omega: FloatArray, extra_value: FloatArray, outside_factor: float
 ) -> RadiusProblem:
     positive = asked.omega[asked.omega > 0.0]
-    outside = _outside(asked, positive, outside_factor)
+    unasked = _unasked(asked, positive, outside_factor)
     zeros, free = np.zeros(extra_omega.size), np.full(extra_omega.size, np.inf)
-    omega = np.concatenate([asked.omega, outside.omega, extra_omega])
-    lower = np.concatenate([asked.lower, outside.lower, zeros])
-    upper = np.concatenate([asked.upper, outside.upper, free])
-    cap = np.concatenate([asked.cap, outside.cap, np.asarray(extra_value, dtype=float)])
+    omega = np.concatenate([asked.omega, unasked.omega, extra_omega])
+    lower = np.concatenate([asked.lower, unasked.lower, zeros])
+    upper = np.concatenate([asked.upper, unasked.upper, free])
+    cap = np.concatenate([asked.cap, unasked.cap, np.asarray(extra_value, dtype=float)])
     measure = np.zeros(omega.size)
     measure[: asked.omega.size] = _measure(asked.omega, positive)
     centre = float(np.sqrt(positive[0] * positive[-1]))
@@ -143,17 +143,27 @@ def _gathered(
     return RadiusProblem(omega[order], centre, bounds)
 
 
-def _outside(asked: _Asked, positive: FloatArray, factor: float) -> _Asked:
-    """Points below the first and above the last one, 0 and inf included."""
-    reach = np.geomspace(1.25, 10.0**OUTSIDE_DECADES, OUTSIDE_POINTS)
+def _unasked(asked: _Asked, positive: FloatArray, factor: float) -> _Asked:
+    """Points below, above and in wide gaps between those asked for, 0 and inf included.
+
+    Each keeps the looser of its two neighbours' demands, relaxed by the factor.
+    """
+    count = int(np.ceil(OUTSIDE_DECADES / np.log10(WIDEST_GAP)))
+    reach = np.geomspace(WIDEST_GAP, 10.0**OUTSIDE_DECADES, count)
     below = np.append(positive[0] / reach, 0.0) if asked.omega[0] > 0.0 else np.zeros(0)
-    above = np.append(positive[-1] * reach, np.inf)
-    end = np.repeat([0, -1], [below.size, above.size])
+    gaps = [
+        np.geomspace(low, high, int(np.ceil(np.log(high / low) / np.log(WIDEST_GAP))) + 1)[1:-1]
+        for low, high in zip(positive[:-1], positive[1:], strict=True)
+        if high > WIDEST_GAP * low
+    ]
+    omega = np.concatenate([below, *gaps, positive[-1] * reach, [np.inf]])
+    right = np.searchsorted(asked.omega, omega)
+    left, right = np.maximum(right - 1, 0), np.minimum(right, asked.omega.size - 1)
     return _Asked(
-        np.concatenate([below, above]),
-        asked.lower[end] / factor,
-        asked.upper[end] * factor,
-        asked.cap[end],
+        omega,
+        np.minimum(asked.lower[left], asked.lower[right]) / factor,
+        np.maximum(asked.upper[left], asked.upper[right]) * factor,
+        np.maximum(asked.cap[left], asked.cap[right]),
     )
 
 
