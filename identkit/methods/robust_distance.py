@@ -10,6 +10,7 @@ Association 63 (1968) 1379-1389 (slope); J. Serra, *Image Analysis and Mathemati
 """
 
 import warnings
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -81,16 +82,63 @@ def dilate(value: FloatArray, cells: int) -> FloatArray:
     return np.where(np.isneginf(widest), np.nan, widest)
 
 
+@dataclass(frozen=True)
+class PeerReach:
+    """What several peers reach at each place.
+
+    Attributes
+    ----------
+    height
+        (places,) log magnitude that several peers reach nearby; -inf where too few are known.
+    scale
+        Root mean square over places of the peers' scaled median absolute deviation.
+    """
+
+    height: FloatArray
+    scale: float
+
+
+def reach_of_peers(curves: FloatArray, *, sideways: int, own: int) -> PeerReach:
+    """Return the height that several curves reach, whichever stand out.
+
+    At each place the k-th highest of the curves dilated sideways (Serra 1982), with k beyond the
+    curves of one unit, so that neither a unit itself nor a few odd peers set it.
+
+    Parameters
+    ----------
+    curves
+        (curves, places) natural logarithm of magnitude; NaN where unknown.
+    sideways
+        Places a feature may be off to either side.
+    own
+        Most curves that one unit has among these.
+
+    Returns
+    -------
+    PeerReach
+        Height and scale (Hampel 1974).
+
+    Notes
+    -----
+    Needs curves of five or more units to mean anything.
+    """
+    count = len(curves)
+    order = min(own + max(1, int(np.ceil(0.05 * count))), count)
+    lifted = np.where(np.isnan(curves), -np.inf, dilate(curves, sideways))
+    height = np.partition(lifted, count - order, axis=0)[count - order]
+    scale = median_and_scale(curves)[1]
+    known = np.isfinite(scale)
+    square = float(np.mean(scale[known] ** 2)) if known.any() else 0.0
+    return PeerReach(height, float(np.sqrt(square)))
+
+
 def rise_above_peers(
-    curves: FloatArray, error: FloatArray, *, sideways: int, own: int, usual: float = 3.0
+    curves: FloatArray, error: FloatArray, peers: PeerReach, usual: float = 3.0
 ) -> FloatArray:
     """Return how far each log-magnitude curve rises above what several of its peers reach.
 
-    At each place the peers' reach is the k-th highest of the curves dilated sideways (Serra
-    1982), with k beyond the curves of one unit, so that neither a unit itself nor a few odd
-    peers set it. The rise is the root mean square, over places, of what stands above it and
-    above `usual` errors of the curve. It is divided by 0.3 s^2, s being the root mean square of
-    the peers' scaled median absolute deviations (Hampel 1974): sound units of a wide population
+    The root mean square, over places, of what stands above their reach and above `usual` errors
+    of the curve, divided by 0.3 s^2 with s the peers' scale: sound units of a wide population
     rise above one another more than in proportion. The factor and the square are ours, from
     invented populations of 8 and 24 units with unit spreads of 0.2 to 1.2 % in frequency: sound
     units stayed below 6, units with a cracked arm above in all but the widest.
@@ -104,10 +152,8 @@ def rise_above_peers(
         (curves, places) natural logarithm of magnitude; NaN where unknown.
     error
         (curves, places) standard deviation of the curves' own error.
-    sideways
-        Places a feature may be off to either side.
-    own
-        Most curves that one unit has among these.
+    peers
+        What the peers reach.
     usual
         Errors of the curve itself that are not counted.
 
@@ -115,23 +161,13 @@ def rise_above_peers(
     -------
     FloatArray
         (curves,) 0 when above its peers nowhere; NaN for a curve without values.
-
-    Notes
-    -----
-    Needs curves of five or more units to mean anything.
     """
-    count = len(curves)
-    order = min(own + max(1, int(np.ceil(0.05 * count))), count)
-    reach = np.sort(np.where(np.isnan(curves), -np.inf, dilate(curves, sideways)), axis=0)[-order]
-    with np.errstate(invalid="ignore"):
-        rise = np.maximum(curves - reach - usual * np.nan_to_num(error), 0.0)
-    # Where too few peers are known, nothing can rise above them.
-    rise = np.where(np.isneginf(reach) & np.isfinite(curves), 0.0, rise)
-    known = np.isfinite(rise)
+    above = np.where(np.isneginf(peers.height), 0.0, curves - peers.height)
+    rise = np.maximum(above - usual * np.nan_to_num(error), 0.0)
+    known = np.isfinite(curves)
     mean = (np.where(known, rise, 0.0) ** 2).sum(axis=1) / np.maximum(known.sum(axis=1), 1)
-    scale = median_and_scale(curves)[1]
-    square = float(np.mean(scale[np.isfinite(scale)] ** 2)) if np.isfinite(scale).any() else 0.0
-    return np.where(known.any(axis=1), np.sqrt(mean) / (0.3 * max(square, _LEAST_SCALE**2)), np.nan)
+    unit = 0.3 * max(peers.scale, _LEAST_SCALE) ** 2
+    return np.where(known.any(axis=1), np.sqrt(mean) / unit, np.nan)
 
 
 def standardised(value: FloatArray, units: int, least: float) -> FloatArray:

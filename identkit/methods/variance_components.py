@@ -60,6 +60,9 @@ class _Design:
     head_of: IntArray  # (n,) head-within-unit group of each observation
     unit_of: IntArray  # (n,) unit of each observation
     unit_of_head: IntArray  # (groups,)
+    head_starts: IntArray  # (groups,) first observation of each head-within-unit group
+    unit_starts: IntArray  # (units,) first observation of each unit
+    unit_starts_in_heads: IntArray  # (units,) first group of each unit
 
 
 @dataclass(frozen=True)
@@ -153,24 +156,27 @@ def _arrange(
     data = np.column_stack([fixed, value])[order].astype(float)
     known = np.asarray(known_variance, dtype=float)[order]
     head_index = np.asarray(head_of, dtype=np.int64).reshape(-1)
-    return _Design(data, known, head_index, unit_of, unit_of_head), int(unit_of.max()) + 1
+    starts = [_starts(group) for group in (head_index, unit_of, unit_of_head)]
+    design = _Design(data, known, head_index, unit_of, unit_of_head, *starts)
+    return design, int(unit_of.max()) + 1
 
 
-def _group_sum(rows: FloatArray, group: IntArray, groups: int) -> FloatArray:
-    """Sum rows by group; groups come in ascending order and none is empty."""
-    starts = np.searchsorted(group, np.arange(groups))
+def _starts(group: IntArray) -> IntArray:
+    """Return where each group starts; groups come in ascending order and none is empty."""
+    return np.searchsorted(group, np.arange(int(group[-1]) + 1))
+
+
+def _group_sum(rows: FloatArray, starts: IntArray) -> FloatArray:
     return np.asarray(np.add.reduceat(rows, starts, axis=0), dtype=float)
 
 
 def _invert(design: _Design, variance: FloatArray) -> _Inverse:
-    heads = len(design.unit_of_head)
-    units = int(design.unit_of_head[-1]) + 1
     diagonal = variance[2] + design.known
     weight = 1.0 / diagonal
-    plain = _group_sum(weight, design.head_of, heads)
+    plain = _group_sum(weight, design.head_starts)
     head_scale = 1.0 / (1.0 + variance[1] * plain)
     head_sum = plain * head_scale
-    unit_sum = _group_sum(head_sum, design.unit_of_head, units)
+    unit_sum = _group_sum(head_sum, design.unit_starts_in_heads)
     unit_scale = 1.0 / (1.0 + variance[0] * unit_sum)
     log_determinant = np.log(diagonal).sum() - np.log(head_scale).sum() - np.log(unit_scale).sum()
     return _Inverse(
@@ -186,21 +192,20 @@ def _invert(design: _Design, variance: FloatArray) -> _Inverse:
 
 def _apply(design: _Design, inverse: _Inverse, columns: FloatArray) -> FloatArray:
     """Return V^-1 columns."""
-    heads, units = len(inverse.head_sum), len(inverse.unit_sum)
     scaled = inverse.weight[:, None] * columns
-    by_head = _group_sum(scaled, design.head_of, heads)
+    by_head = _group_sum(scaled, design.head_starts)
     part = (
         scaled - inverse.weight[:, None] * (inverse.head_shrink[:, None] * by_head)[design.head_of]
     )
-    by_unit = _group_sum(part, design.unit_of, units)
+    by_unit = _group_sum(part, design.unit_starts)
     back = (inverse.weight * inverse.head_scale[design.head_of])[:, None]
     return part - back * (inverse.unit_shrink[:, None] * by_unit)[design.unit_of]
 
 
 def _sums(design: _Design, columns: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Sum columns over units, over heads within units and over single observations."""
-    by_head = _group_sum(columns, design.head_of, len(design.unit_of_head))
-    by_unit = _group_sum(by_head, design.unit_of_head, int(design.unit_of_head[-1]) + 1)
+    by_head = _group_sum(columns, design.head_starts)
+    by_unit = _group_sum(by_head, design.unit_starts_in_heads)
     return by_unit, by_head, columns
 
 
@@ -242,7 +247,7 @@ def _evaluate(design: _Design, variance: FloatArray) -> _Evaluation:
     gradient = _traces(design, inverse)
     fixed_sums = _sums(design, solved[:, :count])
     for j, residual in enumerate(_sums(design, projected[:, None])):
-        correction = np.einsum("ni,ij,nj->", fixed_sums[j], covariance, fixed_sums[j])
+        correction = ((fixed_sums[j] @ covariance) * fixed_sums[j]).sum()
         gradient[j] -= correction + (residual**2).sum()
     return _Evaluation(
         inverse.log_determinant + log_information + quadratic,

@@ -1,23 +1,56 @@
 """Peers: compares each response with those it should look like.
 
 Responses on any grids are brought to coarse common cells of log frequency; each is held against
-the responses of the same head where every head has at least six, against all otherwise.
+the responses of the same head where every head has at least six, against all otherwise. What
+is usual is learnt from at most a few hundred peers, and responses are judged in chunks, so that
+memory does not grow with the campaign.
 """
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
 
 from identkit.methods.arrays import BoolArray, ComplexArray, FloatArray, IntArray
-from identkit.methods.robust_distance import median_and_scale, rise_above_peers, standardised
+from identkit.methods.log_cells import cell_means
+from identkit.methods.robust_distance import (
+    PeerReach,
+    median_and_scale,
+    reach_of_peers,
+    rise_above_peers,
+    standardised,
+)
 
 CELL = 0.01  # width of a cell in log frequency
 SIDEWAYS = 3  # cells: a resonance may stand 3 % to either side of its peers'
 FEWEST_PEERS = 6
+MOST_PEERS = 400
+_CHUNK = 500
 _LEAST_GAIN_SPREAD = 0.02  # 2 %: no bench's gain repeats better
 _LEAST_PHASE_SPREAD = 0.15  # rad
-_UNKNOWN = complex(np.nan, np.nan)
+_DIMS = ("response", "output", "input", "frequency")
+
+
+@dataclass(frozen=True)
+class _Campaign:
+    """All responses in one numbering, whatever grid they are on."""
+
+    parts: Sequence[xr.Dataset]
+    usable: Sequence[BoolArray]
+    first: IntArray  # (parts,) number of each part's first response
+    edges: FloatArray
+    unit: IntArray
+    group: IntArray
+
+
+@dataclass(frozen=True)
+class _Usual:
+    """What is usual for one channel of one group of peers."""
+
+    log_magnitude: FloatArray
+    direction: ComplexArray
+    reach: PeerReach
 
 
 def odd_responses(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> list[FloatArray]:
@@ -37,28 +70,48 @@ def odd_responses(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -
         phase and in resonances (rise above the peers' reach), worst channel; NaN with responses
         of fewer than six units.
     """
-    edges = _cell_edges(parts, usable)
-    curves, error = _gather_cells(parts, usable, edges)
-    groups = peer_groups(parts)
-    worst = np.full(curves.shape[0], np.nan)
-    unit = _units(parts)
-    for channel in range(curves.shape[1]):
-        odd = _channel_oddness(curves[:, channel], error[:, channel], groups, unit)
-        worst = np.fmax(worst, odd)
-    return list(np.split(worst, np.cumsum([part.sizes["response"] for part in parts])[:-1]))
+    campaign = _campaign(parts, usable)
+    usual = {g: _learn(campaign, g) for g in np.unique(campaign.group).tolist()}
+    channels = parts[0].sizes["output"] * parts[0].sizes["input"]
+    measures = np.full((3, len(campaign.unit), channels), np.nan)
+    for rows, curves, error in _chunks(campaign, None):
+        for g, peers in usual.items():
+            mine = campaign.group[rows] == g
+            if peers is not None and mine.any():
+                measures[:, rows[mine]] = _measure(curves[mine], error[mine], peers)
+    worst = np.full(len(campaign.unit), np.nan)
+    for channel in range(channels):
+        worst = np.fmax(worst, _oddness(measures[:, :, channel], campaign))
+    return list(np.split(worst, campaign.first[1:]))
 
 
-def peer_groups(parts: Sequence[xr.Dataset]) -> list[IntArray]:
-    """Return index groups of peers: same head where the group is large enough, else everyone."""
+def peer_groups(parts: Sequence[xr.Dataset]) -> IntArray:
+    """Return the group of each response: its head where every head has six, else one group."""
     count = sum(part.sizes["response"] for part in parts)
-    everyone = np.arange(count)
-    if not all("head" in part.coords for part in parts):
-        return [everyone]
-    head = np.concatenate([part["head"].values.astype(str) for part in parts])
-    groups = [np.flatnonzero(head == h) for h in np.unique(head)]
-    if any(len(group) < FEWEST_PEERS for group in groups):
-        return [everyone]
-    return groups
+    head = _labels(parts, "head")
+    if head is None or np.bincount(head).min() < FEWEST_PEERS:
+        return np.zeros(count, dtype=np.int64)
+    return head
+
+
+def _campaign(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> _Campaign:
+    sizes = [part.sizes["response"] for part in parts]
+    unit = _labels(parts, "unit")
+    return _Campaign(
+        parts,
+        [mask.transpose(*_DIMS).values for mask in usable],
+        np.concatenate([[0], np.cumsum(sizes)[:-1]]).astype(np.int64),
+        _cell_edges(parts, usable),
+        np.arange(sum(sizes)) if unit is None else unit,
+        peer_groups(parts),
+    )
+
+
+def _labels(parts: Sequence[xr.Dataset], label: str) -> IntArray | None:
+    if not all(label in part.coords for part in parts):
+        return None
+    names = np.concatenate([part[label].values.astype(str) for part in parts])
+    return np.asarray(np.unique(names, return_inverse=True)[1], dtype=np.int64)
 
 
 def _cell_edges(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> FloatArray:
@@ -72,104 +125,88 @@ def _cell_edges(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> 
     return np.arange(joined.min(), joined.max() + CELL, CELL) - 0.5 * CELL
 
 
-def _gather_cells(
-    parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray], edges: FloatArray
-) -> tuple[ComplexArray, FloatArray]:
-    """Return log response (real part log magnitude, imaginary part phase) and its error."""
-    curves, errors = [], []
-    for part, mask in zip(parts, usable, strict=True):
-        dims = ("response", "output", "input", "frequency")
-        measured = part["frequency_response"].transpose(*dims).values
-        variance = (
-            part["frequency_response_variance"].transpose(*dims).values
-            if "frequency_response_variance" in part
-            else np.zeros(measured.shape)
+def _chunks(
+    campaign: _Campaign, chosen: IntArray | None
+) -> Iterator[tuple[IntArray, ComplexArray, FloatArray]]:
+    """Yield (numbers, curves, errors) of some responses, or of all, a few hundred at a time."""
+    for part, usable, first in zip(campaign.parts, campaign.usable, campaign.first, strict=True):
+        count = part.sizes["response"]
+        local = np.arange(count)
+        if chosen is not None:
+            local = chosen[(chosen >= first) & (chosen < first + count)] - first
+        for start in range(0, len(local), _CHUNK):
+            rows = local[start : start + _CHUNK]
+            some = part.isel(response=rows)
+            measured = some["frequency_response"].transpose(*_DIMS).values
+            variance = (
+                some["frequency_response_variance"].transpose(*_DIMS).values
+                if "frequency_response_variance" in some
+                else np.zeros(measured.shape)
+            )
+            shape = (len(rows), -1, measured.shape[-1])
+            curves, error = cell_means(
+                some["frequency"].values,
+                measured.reshape(shape),
+                variance.reshape(shape),
+                usable[rows].reshape(shape),
+                campaign.edges,
+            )
+            yield rows + first, curves, error
+
+
+def _learn(campaign: _Campaign, group: int) -> list[_Usual] | None:
+    """Return what is usual per channel; None with responses of fewer than six units."""
+    members = np.flatnonzero(campaign.group == group)
+    units = np.random.default_rng(0).permutation(np.unique(campaign.unit[members]))
+    if len(units) < FEWEST_PEERS:
+        return None
+    counts = np.bincount(campaign.unit[members])
+    enough = int(np.searchsorted(np.cumsum(counts[units]), MOST_PEERS)) + 1
+    kept = units[: max(enough, FEWEST_PEERS)]
+    sample = members[np.isin(campaign.unit[members], kept)]
+    curves = np.concatenate([part for _, part, _ in _chunks(campaign, sample)])
+    return [_usual(curves[:, k], int(counts[kept].max())) for k in range(curves.shape[1])]
+
+
+def _usual(curves: ComplexArray, own: int) -> _Usual:
+    magnitude = median_and_scale(curves.real)[0]
+    direction = np.exp(1j * curves.imag)
+    middle = median_and_scale(direction.real)[0] + 1j * median_and_scale(direction.imag)[0]
+    levelled = curves.real - _gain(curves, magnitude)[:, None]
+    return _Usual(magnitude, middle, reach_of_peers(levelled, sideways=SIDEWAYS, own=own))
+
+
+def _gain(curves: ComplexArray, usual: FloatArray) -> FloatArray:
+    """Return the broad difference of log magnitude from the usual one."""
+    return median_and_scale(curves.real - usual, axis=1)[0]
+
+
+def _measure(curves: ComplexArray, error: FloatArray, peers: Sequence[_Usual]) -> FloatArray:
+    """Return (3, responses, channels): broad gain, broad phase difference (rad), rise."""
+    result = np.empty((3, *curves.shape[:2]))
+    for k, usual in enumerate(peers):
+        gain = _gain(curves[:, k], usual.log_magnitude)
+        turned = np.angle(np.exp(1j * curves[:, k].imag) * usual.direction.conj())
+        result[0, :, k] = gain
+        result[1, :, k] = median_and_scale(np.abs(turned), axis=1)[0]
+        levelled = curves[:, k].real - gain[:, None]
+        result[2, :, k] = rise_above_peers(levelled, error[:, k], usual.reach)
+    return result
+
+
+def _oddness(measures: FloatArray, campaign: _Campaign) -> FloatArray:
+    """Return the largest distance of one channel, gain and phase judged within their group."""
+    gain, phase, rise = measures
+    worst = _shared_by_unit(rise, campaign.unit)
+    for g in np.unique(campaign.group):
+        mine = campaign.group == g
+        units = len(np.unique(campaign.unit[mine]))
+        broad = np.fmax(
+            standardised(gain[mine], units, _LEAST_GAIN_SPREAD),
+            standardised(phase[mine], units, _LEAST_PHASE_SPREAD),
         )
-        count = measured.shape[0]
-        curve, error = cell_means(
-            part["frequency"].values,
-            measured.reshape(count, -1, measured.shape[-1]),
-            variance.reshape(count, -1, measured.shape[-1]),
-            mask.values.reshape(count, -1, measured.shape[-1]),
-            edges,
-        )
-        curves.append(curve)
-        errors.append(error)
-    return np.concatenate(curves), np.concatenate(errors)
-
-
-def cell_means(
-    frequency: FloatArray,
-    measured: ComplexArray,
-    variance: FloatArray,
-    usable: BoolArray,
-    edges: FloatArray,
-) -> tuple[ComplexArray, FloatArray]:
-    """Average responses over cells of log frequency; empty cells inside the range are bridged.
-
-    Parameters
-    ----------
-    frequency
-        (points,) Hz, increasing.
-    measured, variance, usable
-        (responses, channels, points).
-    edges
-        (cells + 1,) cell edges in log frequency.
-
-    Returns
-    -------
-    tuple
-        (responses, channels, cells) log magnitude + 1j phase (rad), NaN outside the range; and
-        the standard deviation of the log magnitude.
-    """
-    cells = len(edges) - 1
-    cell = np.clip(np.searchsorted(edges, np.log(np.maximum(frequency, 1e-300))) - 1, 0, cells - 1)
-    starts = np.flatnonzero(np.r_[True, np.diff(cell) > 0])
-    kept = np.where(usable & (frequency > 0.0), measured, 0.0)
-    weight = np.add.reduceat(kept != 0.0, starts, axis=-1).astype(float)
-    mean = np.add.reduceat(kept, starts, axis=-1) / np.maximum(weight, 1.0)
-    noise = np.add.reduceat(np.where(kept != 0.0, variance, 0.0), starts, axis=-1)
-    shape = (*measured.shape[:2], cells)
-    curve = np.full(shape, _UNKNOWN)
-    error = np.full(shape, np.nan)
-    known = (weight > 0.0) & (np.abs(mean) > 0.0)
-    size = np.abs(np.where(known, mean, 1.0))
-    logged = np.where(known, np.log(size) + 1j * np.angle(mean), _UNKNOWN)
-    relative = np.where(known, np.sqrt(noise / 2.0) / np.maximum(weight, 1.0) / size, np.nan)
-    curve[..., cell[starts]] = logged
-    error[..., cell[starts]] = relative
-    return _bridge(curve), np.asarray(_bridge(error).real, dtype=float)
-
-
-def _bridge(curve: ComplexArray | FloatArray) -> ComplexArray:
-    """Fill empty cells from the last known one to their left, inside the known range only."""
-    known = np.isfinite(curve)
-    places = np.arange(curve.shape[-1])
-    last = np.maximum.accumulate(np.where(known, places, -1), axis=-1)
-    ahead = np.flip(np.maximum.accumulate(np.flip(known, -1), axis=-1), -1)
-    filled = np.take_along_axis(curve, np.maximum(last, 0), axis=-1)
-    return np.asarray(np.where((last >= 0) & ahead, filled, _UNKNOWN), dtype=complex)
-
-
-def _channel_oddness(
-    curves: ComplexArray, error: FloatArray, groups: Sequence[IntArray], unit: IntArray
-) -> FloatArray:
-    worst, rise = np.full((2, len(curves)), np.nan)
-    for group in groups:
-        own = np.bincount(unit[group])
-        units = int((own > 0).sum())
-        if len(group) < FEWEST_PEERS or units < FEWEST_PEERS:
-            continue
-        magnitude = curves[group].real
-        gain = median_and_scale(magnitude - median_and_scale(magnitude)[0], axis=1)[0]
-        rise[group] = rise_above_peers(
-            magnitude - gain[:, None], error[group], sideways=SIDEWAYS, own=int(own.max())
-        )
-        worst[group] = np.fmax(
-            standardised(gain, units, _LEAST_GAIN_SPREAD),
-            standardised(_phase_offset(curves[group]), units, _LEAST_PHASE_SPREAD),
-        )
-    return np.asarray(np.fmax(worst, _shared_by_unit(rise, unit)), dtype=float)
+        worst[mine] = np.fmax(worst[mine], broad)
+    return worst
 
 
 def _shared_by_unit(rise: FloatArray, unit: IntArray) -> FloatArray:
@@ -183,19 +220,3 @@ def _shared_by_unit(rise: FloatArray, unit: IntArray) -> FloatArray:
         typical[u] = median_and_scale(rise[unit == u])[0]
     alone = np.where(np.bincount(unit)[unit] > 1, 0.6, 1.0) * rise
     return np.asarray(np.fmax(alone, np.minimum(typical[unit], 2.0 * rise)), dtype=float)
-
-
-def _phase_offset(curves: ComplexArray) -> FloatArray:
-    """Return the median absolute phase difference from the peers' median direction, rad."""
-    direction = np.exp(1j * curves.imag)
-    middle = median_and_scale(direction.real)[0] + 1j * median_and_scale(direction.imag)[0]
-    return median_and_scale(np.abs(np.angle(direction * middle.conj())), axis=1)[0]
-
-
-def _units(parts: Sequence[xr.Dataset]) -> IntArray:
-    """Return the unit of every response, each its own where there is no label."""
-    count = sum(part.sizes["response"] for part in parts)
-    if not all("unit" in part.coords for part in parts):
-        return np.arange(count)
-    names = np.concatenate([part["unit"].values.astype(str) for part in parts])
-    return np.asarray(np.unique(names, return_inverse=True)[1], dtype=np.int64)

@@ -8,6 +8,7 @@ from identkit.methods.robust_distance import (
     dilate,
     median_and_scale,
     median_slope,
+    reach_of_peers,
     rise_above_peers,
     standardised,
 )
@@ -67,7 +68,7 @@ def test_a_shifted_resonance_is_usual_and_an_additional_one_is_not():
     curves[4] = peaks(4.0)
     curves[7] += np.roll(peaks(0.0), 60)
     error = np.full(curves.shape, 0.01)
-    rise = rise_above_peers(curves, error, sideways=3, own=1)
+    rise = rise_above_peers(curves, error, reach_of_peers(curves, sideways=3, own=1))
     assert rise[7] > 6.0
     assert np.delete(rise, 7).max() < 2.0
 
@@ -77,8 +78,9 @@ def test_own_error_excuses_and_unknown_places_say_nothing():
     curves[:, ::2] += 0.3 * np.random.default_rng(4).normal(size=(12, 25))
     curves[3, 20] = 9.0
     curves[5] = np.nan
-    clear = rise_above_peers(curves, np.full(curves.shape, 1e-3), sideways=1, own=1)
-    noisy = rise_above_peers(curves, np.full(curves.shape, 4.0), sideways=1, own=1)
+    peers = reach_of_peers(curves, sideways=1, own=1)
+    clear = rise_above_peers(curves, np.full(curves.shape, 1e-3), peers)
+    noisy = rise_above_peers(curves, np.full(curves.shape, 4.0), peers)
     assert clear[3] > 10.0
     assert noisy[3] == 0.0
     assert np.isnan(clear[5])
