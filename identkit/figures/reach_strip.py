@@ -10,7 +10,7 @@ from matplotlib.ticker import FixedLocator
 
 from identkit.figures.frequency_axis import frequency_ticks, mark_modes
 from identkit.figures.labels import reading_order, units_of
-from identkit.figures.set_plants import labelled, reach_along
+from identkit.figures.set_plants import labelled, left_out, reach_along
 from identkit.figures.style import (
     INK,
     PAPER,
@@ -42,6 +42,8 @@ class ReachStrip:
         (units,) first row of each unit.
     units
         Names of the units.
+    used_rows
+        Number of rows that count for the bound; those below were left out of it.
     responses
         Number of responses behind the rows.
     mode_names, mode_frequency
@@ -52,6 +54,7 @@ class ReachStrip:
     reach: FloatArray
     unit_starts: IntArray
     units: tuple[str, ...]
+    used_rows: int
     responses: int
     mode_names: tuple[str, ...]
     mode_frequency: FloatArray
@@ -64,6 +67,8 @@ def pick_reach_strip(
     mode_frequency: FloatArray | None = None,
 ) -> ReachStrip | None:
     """Pick the reach of every plant of a set, rows by unit, head and temperature.
+
+    Plants left out of the bound come last.
 
     Parameters
     ----------
@@ -82,16 +87,19 @@ def pick_reach_strip(
     if reach is None:
         return None
     data = labelled(contents.plants)
-    order = reading_order(data)
+    order, out = reading_order(data), left_out(contents)
+    order = np.concatenate([order[~out[order]], order[out[order]]])
     edges, binned = binned_maximum(frequency, reach[order])
     rows, home = thinned_rows(binned)
-    units = units_of(data)[order]
-    first = np.flatnonzero(np.append(True, units[1:] != units[:-1]))
+    units, out = units_of(data)[order], out[order]
+    changes = (units[1:] != units[:-1]) | (out[1:] != out[:-1])
+    first = np.flatnonzero(np.append(True, changes))
     return ReachStrip(
         edges=edges,
         reach=rows,
         unit_starts=home[first],
         units=tuple(str(name) for name in units[first]),
+        used_rows=int(home[~out].max(initial=-1)) + 1,
         responses=len(contents.plants),
         mode_names=mode_names,
         mode_frequency=np.zeros(0) if mode_frequency is None else mode_frequency,
@@ -150,7 +158,7 @@ def draw_reach_strip(picked: ReachStrip, layout: Layout = WIDE) -> Figure:
 
 
 def _largest(axes: Axes, picked: ReachStrip, layout: Layout) -> None:
-    largest = np.fmax.reduce(picked.reach, axis=0)
+    largest = np.fmax.reduce(picked.reach[: picked.used_rows], axis=0)
     axes.stairs(largest, np.log10(picked.edges), color=INK, lw=0.9)
     axes.axhline(1.0, color=WEIGHT, lw=1.0)
     axes.set_ylim(0.0, max(1.15, 1.08 * float(np.nanmax(largest))))
@@ -173,7 +181,9 @@ def _strip(axes: Axes, picked: ReachStrip, figure: Figure, layout: Layout) -> No
     axes.grid(visible=False)
     for start in picked.unit_starts[1:]:
         axes.axhline(start - 0.5, color=PAPER, lw=0.6)
-    _unit_ticks(axes, picked, layout)
+    _unit_ticks(axes, picked)
+    if picked.used_rows < rows:
+        _left_out(axes, picked, rows)
     ticks = frequency_ticks(
         float(picked.edges[0]),
         float(picked.edges[-1]),
@@ -190,7 +200,20 @@ def _strip(axes: Axes, picked: ReachStrip, figure: Figure, layout: Layout) -> No
     bar.outline.set_visible(False)
 
 
-def _unit_ticks(axes: Axes, picked: ReachStrip, layout: Layout) -> None:
+def _left_out(axes: Axes, picked: ReachStrip, rows: int) -> None:
+    """Set the rows of plants left out of the bound apart, and say so beside them."""
+    axes.axhline(picked.used_rows - 0.5, color=INK, lw=1.2)
+    axes.annotate(
+        "left out of the bound",
+        (0.004, 0.5 * (picked.used_rows + rows - 1)),
+        xycoords=("axes fraction", "data"),
+        va="center",
+        size="small",
+        bbox={"facecolor": PAPER, "edgecolor": "none", "alpha": 0.85, "pad": 1.5},
+    )
+
+
+def _unit_ticks(axes: Axes, picked: ReachStrip) -> None:
     ends = np.append(picked.unit_starts[1:], picked.reach.shape[0])
     middles = 0.5 * (picked.unit_starts + ends - 1)
     every = max(1, -(-len(picked.units) // 48))

@@ -36,6 +36,12 @@ def labelled(plants: Sequence[FittedPlant]) -> xr.Dataset:
     )
 
 
+def left_out(contents: PlantSetFields) -> NDArray[np.bool_]:
+    """Return (plants,) whether each plant of a set was left out of its bound."""
+    out = {each.label for each in contents.certificate.measured.excluded}
+    return np.array([plant.response in out for plant in contents.plants], dtype=bool)
+
+
 def _column(plants: Sequence[FittedPlant], name: str) -> NDArray[Any]:
     values = [plant.labels.get(name) for plant in plants]
     if all(isinstance(value, int | float) for value in values if value is not None):

@@ -8,7 +8,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from identkit.figures.labels import condition_of, natural_key, nearest_mode, units_of
-from identkit.figures.set_plants import labelled
+from identkit.figures.set_plants import labelled, left_out
 from identkit.figures.style import (
     ALARM,
     BANDS,
@@ -110,7 +110,7 @@ def _reaches(contents: PlantSetFields | None, audit: xr.Dataset | None) -> xr.Da
     if contents is None or not contents.plants:
         return None
     data = labelled(contents.plants)
-    return data.assign(left_out=("response", np.zeros(data.sizes["response"], dtype=bool)))
+    return data.assign(left_out=("response", left_out(contents)))
 
 
 @in_house_style

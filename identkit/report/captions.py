@@ -36,8 +36,8 @@ CAPTIONS = {
     "reach": Caption(
         "Reach by frequency, one row per response",
         "Dark columns are frequencies where many plants use up the set; dark rows are plants that "
-        "stand apart everywhere. A reach of 1 touches the weight; orange would be a plant "
-        "outside the set.",
+        "stand apart everywhere. A reach of 1 touches the weight; orange lies outside the set, "
+        "which only plants left out of the bound may.",
         "Recomputed from the set file at the bounding frequencies. Each column shows the largest "
         "value within it, so no peak is averaged away.",
     ),

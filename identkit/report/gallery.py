@@ -25,6 +25,7 @@ from identkit.report.bound_curves import order_tradeoff, pointwise_floor
 from identkit.report.captions import CAPTIONS, Caption
 from identkit.report.contents import ReportInput
 from identkit.report.pictures import InlinePicture, picture
+from identkit.report.verdict import excluded_names
 
 
 @dataclass(frozen=True)
@@ -69,7 +70,9 @@ def _fan(given: ReportInput) -> Any:
     if given.plant_set is None:
         return pick_responses_fan(given.responses)
     frequency, nominal = _nominal(given, given.plant_set)
-    worst = max(given.plant_set.plants, key=lambda plant: plant.reach, default=None)
+    out = excluded_names(given.plant_set)
+    used = [plant for plant in given.plant_set.plants if plant.response not in out]
+    worst = max(used, key=lambda plant: plant.reach, default=None)
     return pick_responses_fan(
         given.responses,
         nominal_frequency=frequency,

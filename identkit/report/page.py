@@ -9,16 +9,15 @@ from typing import Any
 from jinja2 import Environment, PackageLoader, StrictUndefined, select_autoescape
 
 from identkit.atomic import write_text
-from identkit.figures.radius import readable_names
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.report import measurement_tables, mode_tables, set_tables
 from identkit.report.contents import ReportInput
 from identkit.report.gallery import Exhibit, hang, population_modes
-from identkit.report.mode_findings import mode_near
-from identkit.report.numbers import number
+from identkit.report.numbers import counted, number
 from identkit.report.table import Table
-from identkit.report.verdict import headline, touching, verdict
+from identkit.report.touches import touching
+from identkit.report.verdict import headline, verdict
 
 __all__ = ["ReportInput", "build_report", "write_report"]
 
@@ -134,12 +133,11 @@ def _tiles(given: ReportInput) -> list[Tile]:
     if names:
         span = f"{frequency_label(frequency.min())} to {frequency_label(frequency.max())}"
         tiles.append(Tile("Modes", str(len(names)), span))
-    if contents is not None and contents.attribution:
-        top = touching(contents)[0]
-        unit = readable_names(contents).get(top.label, top.label)
-        mode = mode_near(given, top.frequency, top.mode)
-        place = " · ".join(part for part in (frequency_label(top.frequency), mode) if part)
-        tiles.append(Tile("Set by", unit, f"near {place}"))
+    touches = touching(given)
+    if touches:
+        everywhere = sum(len(touch.places) for touch in touches)
+        words = f"at {len(touches[0].places)} of {counted(everywhere, 'frequency', 'frequencies')}"
+        tiles.append(Tile("Set most by", touches[0].unit, words))
     return tiles
 
 

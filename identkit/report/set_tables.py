@@ -9,7 +9,7 @@ import xarray as xr
 
 from identkit.figures.labels import nearest_mode, short_names
 from identkit.figures.radius import readable_names
-from identkit.figures.set_plants import labelled
+from identkit.figures.set_plants import labelled, left_out
 from identkit.figures.style import frequency_label
 from identkit.methods.arrays import FloatArray
 from identkit.report.bound_curves import order_tradeoff
@@ -80,7 +80,7 @@ def worst_table(
     if given.plant_set is None or not given.plant_set.plants:
         return None
     data = labelled(given.plant_set.plants)
-    names, reach = short_names(data), data["reach"].values
+    names, reach, out = short_names(data), data["reach"].values, left_out(given.plant_set)
     frequency = data["reach_frequency"].values
     rows = [
         (
@@ -89,10 +89,17 @@ def worst_table(
             frequency_label(float(frequency[at])),
             nearest_mode(float(frequency[at]), list(mode_names), mode_frequency) or "–",
         )
-        for at in np.argsort(-reach, kind="stable")[:10]
+        for at in np.lexsort((-reach, out))[:10]
+        if not out[at]
     ]
-    columns = (("response", "text"), ("reach", "number"), ("at", "number"), ("mode", "text"))
-    return table_of("Largest reach", columns, rows, "Computed from the set file alone.")
+    columns = (
+        ("response", "text"),
+        ("reach", "number"),
+        ("at", "number"),
+        ("mode", "text"),
+    )
+    note = "Plants that count for the bound; those left out stand in the audit table."
+    return table_of("Largest reach", columns, rows, note)
 
 
 def order_table(given: ReportInput) -> Table | None:

@@ -8,13 +8,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from identkit.figures.labels import natural_key, units_of
-from identkit.figures.radius import readable_names
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
-from identkit.plant_set.fields import Attribution, Excluded, PlantSetFields
+from identkit.plant_set.fields import Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
-from identkit.report.mode_findings import mode_near, modes_sentence, odd_modes_sentence
+from identkit.report.mode_findings import modes_sentence, odd_modes_sentence
 from identkit.report.numbers import counted, listed, number, percent
+from identkit.report.touches import touching
 
 HELD, NOT_HELD, NO_SET = "held", "not held", "no set"
 
@@ -185,26 +185,18 @@ def _rechecked(given: ReportInput) -> str:
 
 
 def _setters(given: ReportInput) -> str:
-    contents = given.plant_set
-    if contents is None or not contents.attribution:
+    touches = touching(given)
+    if not touches:
         return ""
-    names = readable_names(contents)
-    shown = []
-    for entry in touching(contents):
-        mode = mode_near(given, entry.frequency, entry.mode)
-        mode = f" ({mode})" if mode else ""
-        name = names.get(entry.label, entry.label)
-        shown.append(f"{name} near {frequency_label(entry.frequency)}{mode}")
-    if not shown:
-        return ""
-    verb = "leaves" if len(shown) == 1 else "leave"
-    return f"The bound is set by {listed(shown, 3)}, which {verb} the weight no slack there."
-
-
-def touching(contents: PlantSetFields) -> list[Attribution]:
-    """Return who comes within half a percent of the largest reach, closest first."""
-    entries = sorted(contents.attribution, key=lambda each: -each.reach)
-    return [entry for entry in entries if entry.reach >= 0.995 * entries[0].reach]
+    shown = [
+        f"{touch.unit} ({'; '.join(touch.places[:3])}{'; ...' * (len(touch.places) > 3)})"
+        for touch in touches
+    ]
+    places = sum(len(touch.places) for touch in touches)
+    return (
+        f"The bound is set at {counted(places, 'frequency', 'frequencies')}, where a plant touches "
+        f"the weight: {listed(shown, 3)}{' units' * (len(shown) > 3)}."
+    )
 
 
 def _limit_of_control(given: ReportInput) -> str:

@@ -18,7 +18,7 @@ from identkit.figures.reach_strip import (
 from identkit.figures.set_plants import reach_along
 from identkit.figures.style import NARROW, WIDE
 from identkit.figures.worst import draw_worst, pick_worst
-from identkit.plant_set.fields import FittedPlant, TimeBase
+from identkit.plant_set.fields import Excluded, FittedPlant, TimeBase
 
 
 def test_reach_along_agrees_with_the_weight_that_was_fitted(study):
@@ -185,3 +185,17 @@ def test_missing_labels_do_not_stop_a_picture(study, missing):
     draw_worst(pick_worst(contents))
     draw_reach_strip(pick_reach_strip(contents))
     draw_radius(pick_radius(contents))
+
+
+def test_strip_puts_plants_left_out_last_and_out_of_the_largest(study):
+    contents = study.plant_set
+    out = tuple(Excluded(p.response, "cracked") for p in contents.plants[:4])
+    measured = replace(contents.certificate.measured, excluded=out)
+    certificate = replace(contents.certificate, measured=measured)
+    picked = pick_reach_strip(replace(contents, certificate=certificate))
+    assert picked.units[-1] == "U01"
+    assert picked.used_rows == 20
+    picked.reach[20:] = 7.0
+    figure = draw_reach_strip(picked)
+    assert figure.axes[0].get_ylim()[1] < 2.0
+    assert [text.get_text() for text in figure.axes[1].texts] == ["left out of the bound"]

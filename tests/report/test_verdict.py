@@ -94,11 +94,17 @@ def test_weight_sentence_carries_excess_floor_and_gap(given):
 
 
 def test_setters_are_named_by_unit_head_and_temperature(given):
-    first = given.plant_set.plants[0]
-    entry = fields.Attribution(first.response, 8263.0, 1.0, "M5")
-    changed = replace(given, plant_set=replace(given.plant_set, attribution=(entry,)))
-    assert sentence(changed, "The bound is set by").startswith(
-        "The bound is set by U01, head 0, 10 °C near 8.26 kHz (M5), which leaves"
+    first, second = given.plant_set.plants[0], given.plant_set.plants[4]
+    entries = (
+        fields.Attribution(first.response, 8263.0, 1.0, "M5"),
+        fields.Attribution(first.response, 90.0, 0.2, "M1"),
+        fields.Attribution(second.response, 2200.0, 0.9999, "M2"),
+        fields.Attribution(first.response, 1240.0, 0.999, "M1"),
+    )
+    changed = replace(given, plant_set=replace(given.plant_set, attribution=entries))
+    assert sentence(changed, "The bound is set") == (
+        "The bound is set at 3 frequencies, where a plant touches the weight: U01 (head 0, 10 °C "
+        "near 1.24 kHz, M1; head 0, 10 °C near 8.26 kHz, M5) and U02 (head 0, 10 °C near 2.2 kHz)."
     )
 
 
