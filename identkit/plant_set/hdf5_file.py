@@ -16,6 +16,8 @@ from identkit.atomic import replacing
 from identkit.errors import InputError, Problem
 from identkit.plant_set.plant_columns import Columns
 
+# What the library raises on files that are cut short or damaged, depending on where.
+_DAMAGE = (OSError, RuntimeError, ValueError, KeyError, TypeError, AttributeError)
 _NOT_HDF5 = "an HDF5 file of format identkit-plant-set/1"
 
 
@@ -28,7 +30,7 @@ def write_hdf5(document: dict[str, Any], columns: Columns, path: Path) -> None:
                 _write(file, name, value)
         plants = file.create_group("plants")
         for name, column in columns.items():
-            plants.create_dataset(name, data=_storable(column))
+            plants.create_dataset(_link(name), data=_storable(column))
 
 
 def read_hdf5(path: Path) -> tuple[dict[str, Any], Columns]:
@@ -46,16 +48,28 @@ def read_hdf5(path: Path) -> tuple[dict[str, Any], Columns]:
         with library.File(path, "r") as file:
             document = {name: _read(file[name], path) for name in file if name != "plants"}
             columns = _read_columns(file["plants"]) if "plants" in file else {}
-    except (OSError, RuntimeError, AttributeError, TypeError, UnicodeError) as error:
+    except _DAMAGE as error:
         raise InputError(Problem(str(path), f"unreadable data ({error})", _NOT_HDF5)) from error
     return document, columns
+
+
+def _link(name: str) -> str:
+    """Return a name as HDF5 can carry it: a slash or a lone dot would mean a path there."""
+    quoted = name.replace("%", "%25").replace("/", "%2F").replace("\x00", "%00")
+    return quoted.replace(".", "%2E") if set(quoted) == {"."} else quoted
+
+
+def _name(link: str) -> str:
+    """Return the name behind `_link`."""
+    plain = link.replace("%2E", ".").replace("%00", "\x00").replace("%2F", "/")
+    return plain.replace("%25", "%")
 
 
 def _write(parent: Any, name: str, value: Any) -> None:
     if isinstance(value, dict) and name != "settings":
         group = parent.create_group(name)
         for key, content in value.items():
-            _write(group, key.replace("/", "\\"), content)
+            _write(group, _link(key), content)
     elif isinstance(value, str):
         parent.create_dataset(name, data=value)
     elif _is_numeric(value):
@@ -80,7 +94,7 @@ def _is_numeric(value: Any) -> bool:
 
 def _read(item: Any, path: Path) -> Any:
     if hasattr(item, "keys"):
-        return {key.replace("\\", "/"): _read(item[key], path) for key in item}
+        return {_name(key): _read(item[key], path) for key in item}
     value = item[()]
     if isinstance(value, bytes):
         text = value.decode("utf-8")
@@ -114,5 +128,5 @@ def _read_columns(group: Any) -> Columns:
         values = group[name][()]
         if values.dtype.kind in "OS":
             values = np.array([item.decode("utf-8") for item in values.tolist()], dtype=str)
-        columns[name] = values
+        columns[_name(name)] = values
     return columns

@@ -22,6 +22,13 @@ if TYPE_CHECKING:
 class PlantSet(PlantSetFields):
     """A nominal plant, fixed weights and bounded unknowns that hold every measured plant."""
 
+    def __repr__(self) -> str:
+        low, high = self.band
+        return (
+            f"<PlantSet: {self.form}, {low:g} to {high:g} Hz, {len(self.outputs)} x "
+            f"{len(self.inputs)}, {self.nominal.states} states, {len(self.plants)} plants>"
+        )
+
     def frequency_response(
         self, frequency: FloatArray, delta: Sequence[Matrices] | None = None
     ) -> ComplexArray:

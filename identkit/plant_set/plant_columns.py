@@ -51,7 +51,11 @@ def _label_columns(plants: Sequence[FittedPlant]) -> Columns:
     columns: Columns = {}
     for name in names:
         values = [plant.labels.get(name) for plant in plants]
-        numeric = all(value is None or not isinstance(value, str) for value in values)
+        texts = [isinstance(value, str) for value in values if value is not None]
+        numeric = not any(texts)
+        if any(texts) and not all(texts):
+            expected = "one or the other in all plants"
+            raise InputError(Problem(f"label {name}", "text here and a number there", expected))
         blank: Any = 0.0 if numeric else ""
         filled = [blank if value is None else value for value in values]
         columns[f"has_label_{name}"] = np.array([value is not None for value in values])

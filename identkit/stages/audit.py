@@ -208,24 +208,40 @@ def _judge_fits(
 ) -> None:
     reach = reach_of_plants(plant_set, plants)
     limit = 1.0 + ROUNDING + plant_set.certificate.between_grid.tolerance
+    near = {} if modes is None else nearest_modes(modes, plants, reach.frequency)
     for plant, value, hertz in zip(plants, reach.value, reach.frequency, strict=True):
         index = place[plant.response]
         columns["fit_reach"][index] = float(value)
         columns["fit_reach_frequency"][index] = float(hertz)
         columns["fit_verdict"][index] = HELD if value <= limit else NOT_HELD
-        if modes is not None:
-            columns["nearest_mode"][index] = nearest_mode(modes, plant.response, float(hertz))
+        columns["nearest_mode"][index] = near.get(plant.response, "")
 
 
-def nearest_mode(modes: xr.Dataset, response: str, frequency: float) -> str:
-    """Return the name of the response's mode nearest a frequency (Hz), if within 10 % of it."""
-    own = modes["modal_frequency"].sel(response=response)
-    distance = np.abs(np.log(own.values / frequency))
-    if not np.isfinite(distance).any():
-        return ""
-    best = int(np.nanargmin(distance))
-    name = str(own["mode"].values[best]) if "mode" in own.coords else f"mode {best + 1}"
-    return name if distance[best] <= NEAR_MODE else ""
+def nearest_modes(
+    modes: xr.Dataset, plants: list[FittedPlant], frequency: FloatArray
+) -> dict[str, str]:
+    """Return by response the name of its mode nearest a frequency, where one is within 10 %.
+
+    Parameters
+    ----------
+    modes
+        Fits or paired modes.
+    plants
+        Plants out of them.
+    frequency
+        (plants,) Hz.
+    """
+    count = modes.sizes["mode"]
+    names = modes["mode"].values.astype(str) if "mode" in modes.coords else None
+    columns = modes["modal_frequency"].transpose("response", "mode").values
+    rows = {str(name): row for row, name in enumerate(modes["response"].values)}
+    found = {}
+    for plant, hertz in zip(plants, frequency, strict=True):
+        distance = np.abs(np.log(columns[rows[plant.response]] / hertz))
+        best = int(np.nanargmin(distance)) if np.isfinite(distance).any() else count
+        if best < count and distance[best] <= NEAR_MODE:
+            found[plant.response] = f"mode {best + 1}" if names is None else str(names[best])
+    return found
 
 
 def _judged(

@@ -3,14 +3,10 @@
 Sixteen responses of four units, one of them cracked and left out with its reason.
 """
 
-import json
 import sys
 from pathlib import Path
 
-from identkit.grids import load
 from identkit.pipeline import run_study
-from identkit.stages.audit import audit
-from identkit.stages.export import SetOrigin, build_set, finished_set, write_set_files
 from identkit.synthetic import Story, invent_campaign
 from identkit.synthetic_files import write_campaign
 
@@ -34,22 +30,13 @@ exclude = [{ unit = "U04", reason = "cracked arm" }]
 
 
 def run(folder: Path) -> None:
-    """Write the campaign, run it, write the set files into ``results``."""
+    """Write the campaign, and run it up to its set files in ``results``."""
     campaign = invent_campaign(
         units=4, heads=2, temperatures=(25.0, 50.0), story=Story(cracked_unit="U04")
     )
     write_campaign(folder, campaign, bad_files=False)
     (folder / "study.toml").write_text(STUDY, encoding="utf-8")
-    run_study(folder / "study.toml", until="coverage", jobs=1)
-    results = folder / "results"
-    nominal, bound, modes, responses, screening = (
-        load(results / f"{name}.nc")
-        for name in ("nominal", "bound", "modes", "responses", "screening")
-    )
-    draft = build_set(nominal, bound, modes, SetOrigin(settings={"bound": {"order": 8}}))
-    table = audit(draft, modes, responses, screening)
-    coverage = json.loads((results / "coverage.json").read_text(encoding="utf-8"))
-    write_set_files(finished_set(draft, table, coverage), results)
+    run_study(folder / "study.toml", until="export", jobs=1)
 
 
 if __name__ == "__main__":

@@ -18,7 +18,7 @@ from identkit.stages.audit import (
     audit_responses,
     audit_table,
     failed_sentences,
-    nearest_mode,
+    nearest_modes,
     run_verdict,
 )
 from identkit.stages.set_plants import set_plants
@@ -283,10 +283,13 @@ def test_nothing_or_other_channels_are_refused(bounded, makers):
 
 
 def test_a_far_frequency_has_no_nearest_mode(makers):
-    modes = modes_of(all_plants(makers)[:2])
-    assert nearest_mode(modes, "U0/H0", 1510.0) == "M1"
-    assert nearest_mode(modes, "U0/H0", 2300.0) == ""
+    plants = all_plants(makers)[:2]
+    modes = modes_of(plants)
+
+    def near(data, *hertz):
+        return nearest_modes(data, plants, np.array(hertz))
+
+    assert near(modes, 1510.0, 2300.0) == {"U0/H0": "M1"}
+    assert near(modes.drop_vars("mode"), 2300.0, 1510.0) == {"U0/H1": "mode 1"}
     modes["modal_frequency"][0] = np.nan
-    assert nearest_mode(modes, "U0/H0", 1510.0) == ""
-    unnamed = modes.drop_vars("mode")
-    assert nearest_mode(unnamed, "U0/H1", 1510.0) == "mode 1"
+    assert near(modes, 1510.0, 2300.0) == {}
