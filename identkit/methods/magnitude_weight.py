@@ -37,8 +37,8 @@ DAMPING_FLOOR = 0.002
 TOLERANCE_DB = 0.02
 LADDER = (1, 2, 3, 4, 6, 8, 10, 12, 16, 20, 24)
 LADDER_TOLERANCE_DB = 0.2
-DAMPING_ROUNDS = 8
-DAMPING_PROGRAMS = 60
+DAMPING_PROGRAMS = 120
+ROUND_PROGRAMS = 50
 RESTARTS = ((0.01, 1.0), (0.03, 1.0), (0.01, 4.0), (0.03, 16.0), (0.03, 64.0))
 FAR = 1e6
 TWO_PI = 2.0 * np.pi
@@ -164,6 +164,16 @@ def fit_magnitude_weight(
     return climb.weight(order)
 
 
+@dataclass(frozen=True)
+class _Roots:
+    """Poles and zeros with the gain that keeps the radius; excess inf where a ceiling is broken."""
+
+    poles: ComplexArray
+    zeros: ComplexArray
+    gain: float
+    excess_db: float
+
+
 class WeightClimb:
     """Orders in ascending sequence, each search started from the one before.
 
@@ -212,18 +222,19 @@ class WeightClimb:
         found = self._settled(order, self.search(order, 0.5 * self.tolerance_db))
         if found.best is None:
             raise self.problem.infeasible(order, found.deciding)
-        poles, zeros = self._damped(order, found.best)
-        gain, excess_db = self.problem.settled_gain(poles, zeros)
+        kept = self._damped(order, found.best)
+        if not np.isfinite(kept.excess_db):
+            raise self.problem.infeasible(order, found.deciding)
         floor_db = _decibels(found.floor)
         return MagnitudeWeight(
             order=order,
-            excess_db=excess_db,
+            excess_db=kept.excess_db,
             floor_db=floor_db,
-            gap_db=excess_db - floor_db,
-            damping_cost_db=max(excess_db - _decibels(found.best.level), 0.0),
-            poles=poles,
-            zeros=zeros,
-            gain=gain,
+            gap_db=kept.excess_db - floor_db,
+            damping_cost_db=max(kept.excess_db - _decibels(found.best.level), 0.0),
+            poles=kept.poles,
+            zeros=kept.zeros,
+            gain=kept.gain,
             programs=self.programs,
         )
 
@@ -242,7 +253,7 @@ class WeightClimb:
                 self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping)),
                 tolerance=_relative(0.5 * relaxed * self.tolerance_db),
                 initial=found.best,
-                most_programs=DAMPING_PROGRAMS,
+                most_programs=ROUND_PROGRAMS,
             )
             self._keep(again)
             found = replace(again, floor=max(again.floor, found.floor))
@@ -272,34 +283,54 @@ class WeightClimb:
             self.best = replace(pair, level=level) if np.isfinite(level) else None
         return found
 
-    def _damped(self, order: int, free: Ratio) -> tuple[ComplexArray, ComplexArray]:
-        """Return poles and zeros that keep the damping floor, near the best excess."""
-        hard, pair, damping = HardRows(), free, 1.02 * self.damping_floor
-        for _ in range(DAMPING_ROUNDS):
+    def _damped(self, order: int, free: Ratio) -> _Roots:
+        """Return poles and zeros that keep the damping floor, near the best excess.
+
+        Rows are added around offending roots and the search repeated; in every round the roots that
+        still offend are turned onto the floor, and the best outcome of all rounds is returned.
+        """
+        hard, pair, damping, best = HardRows(), free, 1.02 * self.damping_floor, None
+        enough = _decibels(free.level) + 0.2 * self.tolerance_db
+        budget = self.programs + DAMPING_PROGRAMS
+        while True:
             zeros, poles = _factors(pair, self.problem)
-            bad = [offending(roots, self.damping_floor) for roots in (zeros, poles)]
-            if not (bad[0].size or bad[1].size):
-                return poles, zeros
-            for k in (0, 1):
-                hard = hard.joined(
-                    rows_around(bad[k], damping, self.problem.centre, on_numerator=k == 0)
-                )
-            start = self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping))
-            tolerance = _relative(0.25 * self.tolerance_db)
+            best = self._better(best, poles, zeros)
+            clean = not self._offending(poles, zeros)
+            if clean or best.excess_db <= enough or self.programs >= budget:
+                return best
+            hard = hard.joined(self._rows(poles, zeros, damping))
             found = lower_ratio(
                 self.problem.bounds,
                 order,
-                start,
-                tolerance=tolerance,
+                self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping)),
+                tolerance=_relative(0.25 * self.tolerance_db),
                 hard=hard,
-                most_programs=DAMPING_PROGRAMS,
+                most_programs=ROUND_PROGRAMS,
             )
-            self.programs += found.programs
+            self.programs += max(found.programs, 1)
             if found.best is None:
-                break
+                return best
             pair, damping = found.best, damping * 1.05
-        zeros, poles = _factors(pair, self.problem)
-        return _moved(poles, self.damping_floor), _moved(zeros, self.damping_floor)
+
+    def _offending(self, poles: ComplexArray, zeros: ComplexArray) -> bool:
+        return any(offending(roots, self.damping_floor).size for roots in (poles, zeros))
+
+    def _rows(self, poles: ComplexArray, zeros: ComplexArray, damping: float) -> HardRows:
+        centre, floor = self.problem.centre, self.damping_floor
+        above = rows_around(offending(zeros, floor), damping, centre, on_numerator=True)
+        return above.joined(
+            rows_around(offending(poles, floor), damping, centre, on_numerator=False)
+        )
+
+    def _better(self, best: _Roots | None, poles: ComplexArray, zeros: ComplexArray) -> _Roots:
+        """Turn offending roots onto the floor; return this outcome or the best so far."""
+        poles, zeros = _moved(poles, self.damping_floor), _moved(zeros, self.damping_floor)
+        gain, excess_db = self.problem.settled_gain(poles, zeros)
+        if not self.problem.below_ceiling(poles, zeros, gain):
+            excess_db = np.inf
+        if best is not None and best.excess_db <= excess_db:
+            return best
+        return _Roots(poles, zeros, gain, excess_db)
 
 
 def _factors(pair: Ratio, problem: RadiusProblem) -> tuple[ComplexArray, ComplexArray]:
