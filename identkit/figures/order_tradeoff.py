@@ -59,14 +59,7 @@ def draw_order_tradeoff(picked: OrderTradeoff, layout: Layout = WIDE) -> Figure:
     at = np.flatnonzero(picked.order == picked.chosen)
     if at.size:
         axes.plot(picked.order[at], picked.excess[at], "o", ms=12, mfc="none", mec=INK, mew=1.3)
-        axes.annotate(
-            f"chosen: order {picked.chosen}, {picked.excess[at[0]]:.2f} dB",
-            (picked.chosen, picked.excess[at[0]]),
-            xytext=(0, 13),
-            textcoords="offset points",
-            ha="right" if picked.chosen > picked.order.mean() else "left",
-            fontweight="bold",
-        )
+        axes.set_title(f"chosen: order {picked.chosen}, {picked.excess[at[0]]:.2f} dB")
     axes.set_xlabel("order of the weight")
     axes.set_ylabel("excess over radius × profile, dB")
     axes.xaxis.set_major_locator(MaxNLocator(integer=True))

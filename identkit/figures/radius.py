@@ -210,7 +210,7 @@ def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     over = picked.radius > picked.weight * (1.0 + 1e-6)
     if over.any():
         axes.plot(f[over], picked.radius[over], ".", color=INK, ms=3, label="not held")
-    _touches(axes, picked)
+    _touches(axes, picked, layout)
     axes.axhline(1.0, color=SOFT_INK, lw=0.7)
     axes.set_ylabel("relative error, 1 = 100 %")
     curves = np.concatenate([picked.radius, picked.weight])
@@ -218,7 +218,7 @@ def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     axes.legend(loc="upper left", ncols=1)
 
 
-def _touches(axes: Axes, picked: RadiusWeight) -> None:
+def _touches(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     """Ring the places where a plant touches the weight, and name its unit."""
     if not picked.touch_frequency.size:
         return
@@ -228,7 +228,7 @@ def _touches(axes: Axes, picked: RadiusWeight) -> None:
     named: list[float] = []
     places = zip(np.log10(picked.touch_frequency), height, picked.touch_names, strict=True)
     for x, y, name in places:
-        if any(abs(x - other) < 0.06 for other in named):
+        if any(abs(x - other) < (0.16 if layout.is_narrow else 0.06) for other in named):
             continue
         named.append(float(x))
         axes.annotate(

@@ -28,7 +28,8 @@ CAPTIONS = {
         "Where the weight passes 1 the plant is not known well enough to be controlled there. "
         "Where the filled radius stands well above the floor, another nominal could tighten the "
         "set; where it lies on the floor, only different plants could. The rows below name the "
-        "response that needs the largest radius at each frequency.",
+        "unit that needs the largest radius at each frequency; rings mark where a plant touches "
+        "the weight.",
         "Errors of the fitted plants against the exported nominal, at the bounding frequencies. "
         "The floor is the smallest enclosing disc, frequency by frequency: no nominal of any "
         "order needs less.",

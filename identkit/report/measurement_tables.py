@@ -48,9 +48,7 @@ def _by_unit(key: tuple[str, str, str]) -> tuple[list[tuple[int, str]], str, str
 
 def _mark_row(key: tuple[str, str, str], marked: list[tuple[str, float, float]]) -> tuple[str, ...]:
     values = [value for _, value, _ in marked]
-    span = number(min(values))
-    if len(values) > 1:
-        span += f" to {number(max(values))}"
+    span = " to ".join(dict.fromkeys((number(min(values)), number(max(values)))))
     which = listed([name for name, _, _ in marked if name], 3)
     return (key[0], key[1], str(len(marked)), span, number(marked[0][2]), key[2], which)
 

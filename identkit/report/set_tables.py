@@ -147,7 +147,7 @@ def audit_table(given: ReportInput) -> Table | None:
             str(audit["nearest_mode"].values[at]) or "–",
             _at(audit, at, "raw_reach", "raw_reach_frequency"),
             _at(audit, at, "raw_reach_with_allowance", "raw_reach_with_allowance_frequency"),
-            str(audit["reason"].values[at]) if excluded[at] else "used in the bound",
+            "left out" if excluded[at] else "used",
         )
         for at in chosen
     ]
@@ -156,9 +156,9 @@ def audit_table(given: ReportInput) -> Table | None:
         ("verdict", "text"),
         ("reach of fit", "number"),
         ("mode", "text"),
-        ("reach of raw points", "number"),
-        ("with allowance for noise", "number"),
-        ("standing", "text"),
+        ("raw points", "number"),
+        ("noise allowed for", "number"),
+        ("in the bound", "text"),
     )
     note = (
         "Raw points are judged with an allowance for their noise; cannot tell lies between "
