@@ -5,6 +5,7 @@ import xarray as xr
 
 from identkit.methods.arrays import FloatArray, IntArray
 from identkit.methods.mode_template import ModeTable
+from identkit.stages.response_labels import text_label
 
 CHANNEL_DIMS = ("response", "mode", "output", "input")
 
@@ -87,10 +88,11 @@ def known_temperature(data: xr.Dataset) -> FloatArray:
 
 
 def group_index(data: xr.Dataset, label: str) -> IntArray:
-    """Return the group of each response by a label, all 0 where the label is missing."""
-    if label not in data.coords:
+    """Return the group of each response by a label, all 0 where no response has it."""
+    names = text_label([data], label)
+    if names is None:
         return np.zeros(data.sizes["response"], dtype=np.int64)
-    return np.asarray(np.unique(data[label].values.astype(str), return_inverse=True)[1])
+    return np.asarray(np.unique(names, return_inverse=True)[1], dtype=np.int64)
 
 
 def _groups(fits: xr.Dataset) -> tuple[FloatArray, IntArray, IntArray, int, int]:

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from identkit.methods.arrays import BoolArray, ComplexArray, FloatArray, IntArray
 from identkit.methods.log_cells import cell_means
@@ -21,6 +22,7 @@ from identkit.methods.robust_distance import (
     rise_above_peers,
     standardised,
 )
+from identkit.stages.response_labels import text_label, unit_label
 
 CELL = 0.01  # width of a cell in log frequency
 SIDEWAYS = 3  # cells: a resonance may stand 3 % to either side of its peers'
@@ -88,7 +90,7 @@ def odd_responses(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -
 def peer_groups(parts: Sequence[xr.Dataset]) -> IntArray:
     """Return the group of each response: its head where every head has six, else one group."""
     count = sum(part.sizes["response"] for part in parts)
-    head = _labels(parts, "head")
+    head = _numbered(text_label(parts, "head"))
     if head is None or np.bincount(head).min() < FEWEST_PEERS:
         return np.zeros(count, dtype=np.int64)
     return head
@@ -96,7 +98,7 @@ def peer_groups(parts: Sequence[xr.Dataset]) -> IntArray:
 
 def _campaign(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> _Campaign:
     sizes = [part.sizes["response"] for part in parts]
-    unit = _labels(parts, "unit")
+    unit = _numbered(unit_label(parts))
     return _Campaign(
         parts,
         [mask.transpose(*_DIMS).values for mask in usable],
@@ -107,10 +109,9 @@ def _campaign(parts: Sequence[xr.Dataset], usable: Sequence[xr.DataArray]) -> _C
     )
 
 
-def _labels(parts: Sequence[xr.Dataset], label: str) -> IntArray | None:
-    if not all(label in part.coords for part in parts):
+def _numbered(names: NDArray[np.str_] | None) -> IntArray | None:
+    if names is None:
         return None
-    names = np.concatenate([part[label].values.astype(str) for part in parts])
     return np.asarray(np.unique(names, return_inverse=True)[1], dtype=np.int64)
 
 

@@ -10,6 +10,7 @@ from collections.abc import Collection
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from identkit.errors import InputError, Problem
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
@@ -23,6 +24,7 @@ from identkit.stages.population_quantity import (
     mode_quantities,
     summarise,
 )
+from identkit.stages.response_labels import text_label
 
 _KEPT_OUT = (Outcome.MODE_SHIFTED, Outcome.MODE_OUT_OF_BAND)
 
@@ -172,14 +174,12 @@ def _effect_part(
         },
         coords={"unit": list(design.units), "effect": names, "effect_other": names},
     )
-    if "lot" in modes.coords:
-        part = part.merge(_lot_part(modes, design, effects))
-    return part
+    lot = text_label([modes], "lot")
+    return part if lot is None else part.merge(_lot_part(lot, design, effects))
 
 
-def _lot_part(modes: xr.Dataset, design: Design, effects: FloatArray) -> xr.Dataset:
+def _lot_part(lot: NDArray[np.str_], design: Design, effects: FloatArray) -> xr.Dataset:
     """Return the mean unit effect of every lot; a unit counts for the lot it was measured in."""
-    lot = modes["lot"].values.astype(str)
     lots = np.unique(lot)
     members: list[BoolArray] = [
         np.isin(np.arange(len(design.units)), design.unit[lot == name]) for name in lots

@@ -4,8 +4,10 @@ from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
+from identkit.stages.response_labels import NOT_LABELLED, text_label, unit_label
 
 EVERY_HEAD = "all"
 _LEAST_STEP = 0.5  # K: temperatures closer than this are one temperature
@@ -68,15 +70,12 @@ def campaign_design(modes: xr.Dataset, reference_temperature: float) -> Design:
     """Return the design that the labels of a modes dataset allow."""
     notes: list[str] = []
     count = modes.sizes["response"]
-    if "unit" in modes.coords:
-        units, unit = np.unique(modes["unit"].values.astype(str), return_inverse=True)
-    else:
-        units, unit = modes["response"].values.astype(str), np.arange(count)
-        notes.append("no unit label: every response is counted as a unit of its own")
+    units, unit = _units(modes, notes)
     heads, head = np.array([EVERY_HEAD]), np.zeros(count, dtype=np.int64)
     within = np.zeros(count, dtype=np.int64)
-    if "head" in modes.coords:
-        names, within = np.unique(modes["head"].values.astype(str), return_inverse=True)
+    head_names = text_label([modes], "head")
+    if head_names is not None:
+        names, within = np.unique(head_names, return_inverse=True)
         if _shared(within, unit):
             heads, head = names, within
         else:
@@ -119,6 +118,20 @@ def regressors(design: Design, rows: BoolArray) -> Regressors:
     return Regressors(
         np.column_stack(columns), present, head_columns, places["temperature"], places["position"]
     )
+
+
+def _units(modes: xr.Dataset, notes: list[str]) -> tuple[NDArray[np.str_], IntArray]:
+    """Return the names of the units and the unit of every response."""
+    labels = unit_label([modes])
+    if labels is None:
+        notes.append("no unit label: every response is counted as a unit of its own")
+        return modes["response"].values.astype(str), np.arange(modes.sizes["response"])
+    plain = text_label([modes], "unit")
+    lacking = 0 if plain is None else int(np.count_nonzero(plain == NOT_LABELLED))
+    if lacking:
+        notes.append(f"{lacking} responses have no unit label: each counts as a unit of its own")
+    units, unit = np.unique(labels, return_inverse=True)
+    return units, np.asarray(unit, dtype=np.int64)
 
 
 def _shared(head: IntArray, unit: IntArray) -> bool:

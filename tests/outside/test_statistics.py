@@ -30,6 +30,33 @@ TURNIP_GREENS = np.array(
 )
 
 
+# Davies and Goldsmith, Statistical Methods in Research and Production, 4th ed., 1972, Table 6.1:
+# yield of dyestuff, 6 batches x 5 (data from memory).
+DYESTUFF = np.array(
+    [
+        [1545, 1440, 1440, 1520, 1580],
+        [1540, 1555, 1490, 1560, 1495],
+        [1595, 1550, 1605, 1510, 1560],
+        [1445, 1440, 1595, 1465, 1545],
+        [1595, 1630, 1515, 1635, 1625],
+        [1520, 1455, 1450, 1480, 1445],
+    ],
+    dtype=float,
+)
+# Box and Tiao, Bayesian Inference in Statistical Analysis, 1973, Table 5.1.4: generated data of
+# the same shape whose variance between batches is estimated as zero (data from memory).
+NO_SPREAD = np.array(
+    [
+        [7.298, 3.846, 2.434, 9.566, 7.990],
+        [5.220, 6.556, 0.608, 11.788, -0.892],
+        [0.110, 10.386, 13.434, 5.510, 8.166],
+        [2.212, 4.852, 7.092, 9.288, 4.980],
+        [0.282, 9.014, 4.458, 9.446, 7.198],
+        [1.722, 4.782, 8.106, 0.758, 3.758],
+    ]
+)
+
+
 @pytest.mark.parametrize(
     ("content", "confidence", "draws"),
     # Wilks 1941 and the GRS tables (Glaeser); 29, 299 and 459 are values from memory.
@@ -103,6 +130,43 @@ def test_nested_components_of_the_turnip_greens():
     # The mean's standard error is that of the plant means.
     assert fit.effects[0] == pytest.approx(TURNIP_GREENS.mean(), abs=1e-9)
     assert fit.effect_covariance[0, 0] == pytest.approx(plant_mean_square / 24.0, rel=1e-4)
+
+
+def _one_way(table):
+    batch = np.repeat(np.arange(len(table)), table.shape[1])
+    size = table.size
+    return restricted_likelihood_fit(
+        table.ravel(), np.ones((size, 1)), batch, batch, np.zeros(size)
+    )
+
+
+def _criterion(fit, observations):
+    return -2.0 * fit.restricted_log_likelihood + (observations - 1) * np.log(2.0 * np.pi)
+
+
+def test_one_way_components_of_the_dyestuff():
+    # D. Bates, M. Maechler, B. Bolker and S. Walker, "Fitting linear mixed-effects models using
+    # lme4", Journal of Statistical Software 67 (2015), and the package's manual: variance 1764.05
+    # and 2451.25, standard error of the mean 19.38, criterion 319.6543, predicted batch effects
+    # (values from memory).
+    fit = _one_way(DYESTUFF)
+    assert fit.variance[[0, 2]] == pytest.approx([1764.05, 2451.25], abs=0.006)
+    assert fit.effects[0] == pytest.approx(1527.5, abs=1e-9)
+    assert np.sqrt(fit.effect_covariance[0, 0]) == pytest.approx(19.38, abs=0.005)
+    assert _criterion(fit, 30) == pytest.approx(319.6543, abs=5e-5)
+    predicted = [-17.6069, 0.3913, 28.5622, -23.0845, 56.7332, -44.9953]
+    assert fit.unit_effect == pytest.approx(predicted, abs=1e-3)
+
+
+def test_one_way_components_without_spread_stay_at_zero():
+    # Box and Tiao 1973: the analysis of variance gives a negative component; the restricted
+    # likelihood stops at zero, residual 13.81, criterion 161.8283 (values from memory).
+    fit = _one_way(NO_SPREAD)
+    assert fit.converged
+    assert fit.variance[0] == 0.0
+    assert fit.variance[2] == pytest.approx(13.81, abs=0.005)
+    assert fit.effects[0] == pytest.approx(5.6656, abs=5e-5)
+    assert _criterion(fit, 30) == pytest.approx(161.8283, abs=5e-5)
 
 
 def test_unbalanced_nested_components_agree_with_statsmodels():

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+import xarray as xr
 
 from identkit.errors import InputError
 from identkit.outcomes import Outcome
@@ -123,6 +124,28 @@ def test_nothing_to_pair_is_refused_in_one_sentence(fits):
     empty["modal_frequency"][:] = np.nan
     with pytest.raises(InputError, match="no mode in any of 288 responses"):
         pair_modes(empty)
+
+
+def test_two_outputs_are_paired_on_both_residues():
+    fits = invented_fits(invent_campaign(seed=7, units=8, story=SOUND), FitErrors(extra=0.2))
+    rng = np.random.default_rng(7)
+    second = fits["residue"] * rng.normal(-0.5, 0.02, fits["residue"].shape)
+    residue = xr.concat([fits["residue"], second], "output").assign_coords(
+        output=["position", "velocity"]
+    )
+    names = fits["parameter"].values
+    two = fits.drop_vars(["residue", "residue_rate", "base_residue", "feedthrough", "output"])
+    two = two.assign(residue=residue)
+    paired = pair_modes(two)
+    one = pair_modes(fits)
+    assert paired["residue"].dims == ("response", "mode", "output", "input")
+    assert paired["mode_in_population"].values.sum() == 8
+    assert np.array_equal(
+        paired["modal_frequency"].values[:, :8],
+        one["modal_frequency"].values[:, :8],
+        equal_nan=True,
+    )
+    assert "residue_1" in names  # one name for all channels: its error stands for each
 
 
 def test_a_mode_lost_by_the_first_fit_is_found_again():

@@ -4,6 +4,7 @@ import time
 
 import numpy as np
 import pytest
+import xarray as xr
 
 from identkit.errors import InputError
 from identkit.outcomes import Outcome
@@ -150,6 +151,39 @@ def test_missing_labels_are_said_and_survived(modes):
     assert (found["temperature_slope"] == 0.0).all()
     assert found["head"].values.tolist() == ["all"]
     assert "lot_effect" not in found
+
+
+def test_a_few_missing_labels_are_not_taken_for_one_unit(modes):
+    some = modes.copy(deep=True)
+    unit = modes["unit"].values.astype("<U12")
+    unit[:3] = ""
+    lot = modes["lot"].values.astype("<U12")
+    lot[:12] = ""
+    some = some.assign_coords(unit=("response", unit), lot=("response", lot))
+    found = describe_population(some)
+    assert "3 responses have no unit label" in found.attrs["notes"]
+    assert found.sizes["unit"] == 27
+    assert "not labelled" in found["lot"].values
+
+
+def test_matrix_plants_have_one_residue_quantity_per_channel(modes):
+    channel = [name for name in modes.data_vars if "output" in modes[name].dims]
+    twice = {name: xr.concat([modes[name], 2.0 * modes[name]], "output") for name in channel}
+    wide = modes.drop_vars([*channel, "output"]).assign(
+        {name: value.assign_coords(output=["a", "b"]) for name, value in twice.items()}
+    )
+    found = describe_population(wide)
+    assert found["quantity"].values.tolist() == [
+        "modal_frequency",
+        "damping_ratio",
+        "residue_1_1",
+        "residue_2_1",
+    ]
+    first, second = (
+        found["population_value"].sel(quantity=f"residue_{k}_1").values for k in (1, 2)
+    )
+    assert second == pytest.approx(2.0 * first, rel=1e-6)
+    assert "base_residue_2_1" in found["base_quantity"].values
 
 
 def test_one_temperature_gives_no_slope():
