@@ -271,6 +271,8 @@ NOMINAL = (
         ("delay_order", "whole", "", "Order of the all-pass that stands for the delay."),
         ("floor_distance_peak_db", "number", "dB", "Largest distance from the floor."),
         ("floor_distance_mean_db", "number", "dB", "Mean distance over log frequency."),
+        ("centre_distance_peak_db", "number", "dB", "Largest distance of the centre."),
+        ("centre_distance_mean_db", "number", "dB", "Mean distance of the centre."),
     ),
     *_along(
         ("frequency",),

@@ -4,6 +4,7 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 import xarray as xr
+from threadpoolctl import threadpool_limits
 
 from identkit.errors import InputError, Problem
 from identkit.forms.bounding import BoundOptions, SpreadBound, bound_plants
@@ -88,7 +89,9 @@ def bound_spread(
     common = CommonPart(centre, float(band[0]), float(band[1]))
     plants = _counted(fitted_plants(modes).without(left_out or {}), centre.parameters)
     options = BoundOptions(order, tuple(profile), tuple(cap), radius_floor, jobs)
-    found = bound_plants(plants.parameters, common, nominal["frequency"].values, options)
+    # Many small matrices: threads inside the linear algebra would only wait for each other.
+    with threadpool_limits(limits=1):
+        found = bound_plants(plants.parameters, common, nominal["frequency"].values, options)
     return xr.merge(
         [
             _curves(found, plants, options),

@@ -1,9 +1,10 @@
 """Nominal: the one plant in the middle of the set, as it will be exported."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 import xarray as xr
+from threadpoolctl import threadpool_limits
 
 from identkit.errors import InputError, Problem
 from identkit.forms.multiplicative import accepts, relative_errors
@@ -14,10 +15,13 @@ from identkit.methods.enclosing_disc import EnclosingDisc, enclosing_disc
 from identkit.methods.modal_model import TWO_PI, ModalParameters, modal_response
 from identkit.methods.pade_delay import pade_order
 from identkit.methods.resonance_grid import resonance_grid
+from identkit.methods.tightest_nominal import tightest_nominal
 from identkit.methods.transmission_zeros import finite_zeros
 from identkit.stages.fitted_plants import FittedPlants, fitted_plants
 
 DELAY_TOLERANCE = 1e-3
+CHOICES = ("centre", "tightest")
+SEARCH_STRIDE = 3
 SCALARS = (
     "base_gain",
     "base_frequency",
@@ -43,7 +47,10 @@ def choose_nominal(
 
     "centre" is the population at its reference temperature: log frequency, log damping ratio and
     signed residue at their means. The delay becomes a Pade all-pass inside the matrices, of the
-    lowest order whose error in the band is below `delay_tolerance`.
+    lowest order whose error in the band is below `delay_tolerance`. "tightest" moves the modes,
+    residues and feedthrough of the centre for the least radius over the band, peaks above 1
+    counting more (least p-th approximation, Bandler & Charalambous 1972); its modes need no longer
+    be those of any plant.
 
     Parameters
     ----------
@@ -52,7 +59,7 @@ def choose_nominal(
     population
         Values at the reference temperature, as `describe_population` writes them.
     choice
-        "centre".
+        "centre" or "tightest".
     band
         Hz, in which everything is claimed; the ends of `lines` by default.
     lines
@@ -71,23 +78,31 @@ def choose_nominal(
         ``frequency`` (dense near every resonance), ``nominal_radius`` = max_i |P_i/P0 - 1|,
         ``radius_floor`` (the least radius of any nominal at that frequency),
         ``radius_floor_saturated``, ``floor_distance_peak_db``, ``floor_distance_mean_db`` (mean
-        over log frequency).
+        over log frequency), and both distances of the centre, ``centre_distance_peak_db`` and
+        ``centre_distance_mean_db``.
 
     Raises
     ------
     InputError
         If the choice is unknown, no response is left, or the delay is too long for the band.
     """
-    if choice != "centre":
-        raise InputError(Problem("[nominal] choice", repr(choice), '"centre"'))
+    if choice not in CHOICES:
+        raise InputError(Problem("[nominal] choice", repr(choice), " or ".join(CHOICES)))
     accepts(modes.sizes["output"], modes.sizes["input"])
     plants = fitted_plants(modes).without(left_out or {})
     if not plants.parameters:
         raise InputError(Problem("[bound] exclude", "every response left out", "one that counts"))
     low, high = _band(band, lines)
-    nominal = _rational(population_centre(population), high, delay_tolerance)
-    grid = _grid(plants, nominal, (low, high), lines)
-    return _described(nominal, plants, grid, radius_floor, population).assign_attrs(
+    nominal = centre = _rational(population_centre(population), high, delay_tolerance)
+    # Many small matrices: threads inside the linear algebra would only wait for each other.
+    with threadpool_limits(limits=1):
+        grid = _grid(plants, [centre], (low, high), lines)
+        if choice == "tightest":
+            scale = _residue_scale(modes, population, plants)
+            nominal = _tightest(centre, plants, grid, scale, radius_floor)
+            grid = _grid(plants, [centre, nominal], (low, high), lines)
+        data = _described(nominal, centre, plants, grid, radius_floor, population)
+    return data.assign_attrs(
         choice=choice,
         band=[low, high],
         base=str(population.attrs["base"]),
@@ -174,15 +189,16 @@ def _rational(centre: ModalParameters, high: float, tolerance: float) -> Nominal
 
 def _grid(
     plants: FittedPlants,
-    nominal: NominalPlant,
+    nominals: Sequence[NominalPlant],
     band: tuple[float, float],
     lines: FloatArray | None,
 ) -> FloatArray:
-    zeros = finite_zeros(nominal.realisation(), 4.0 * TWO_PI * band[1])
-    everyone = (*plants.parameters, nominal.parameters)
+    largest = 4.0 * TWO_PI * band[1]
+    zeros = np.concatenate([finite_zeros(each.realisation(), largest) for each in nominals])
+    everyone = (*plants.parameters, *[each.parameters for each in nominals])
     frequency = [plant.modal_frequency for plant in everyone]
     damping = [plant.damping_ratio for plant in everyone]
-    if nominal.parameters.base == "pivot":
+    if nominals[0].parameters.base == "pivot":
         frequency.append(np.array([plant.base_frequency for plant in everyone]))
         damping.append(np.array([plant.base_damping_ratio for plant in everyone]))
     size = np.abs(zeros)
@@ -194,8 +210,26 @@ def _grid(
     )
 
 
+def _residue_scale(modes: xr.Dataset, population: xr.Dataset, plants: FittedPlants) -> FloatArray:
+    """Return the median size of every population mode's residue over the plants that count."""
+    chosen = modes["residue"].isel(response=list(plants.index)).sel(mode=population["mode"].values)
+    sizes = np.abs(chosen.transpose("response", "mode", "output", "input").values[:, :, 0, 0])
+    return np.asarray(np.nanmedian(sizes, axis=0), dtype=float)
+
+
+def _tightest(
+    centre: NominalPlant, plants: FittedPlants, grid: FloatArray, scale: FloatArray, least: float
+) -> NominalPlant:
+    coarse = np.unique(np.append(grid[::SEARCH_STRIDE], grid[-1]))
+    values = np.array([modal_response(coarse, plant) for plant in plants.parameters])
+    order = centre.delay_order
+    found = tightest_nominal(coarse, values, centre.parameters, order, scale, least)
+    return NominalPlant(found.parameters, order)
+
+
 def _described(
     nominal: NominalPlant,
+    centre: NominalPlant,
     plants: FittedPlants,
     grid: FloatArray,
     least: float,
@@ -204,6 +238,8 @@ def _described(
     radius = np.abs(relative_errors(grid, plants.parameters, nominal)).max(axis=0)
     disc = enclosing_disc(np.array([modal_response(grid, plant) for plant in plants.parameters]))
     peak, mean = floor_distance(grid, radius, disc, least)
+    usual = np.abs(relative_errors(grid, plants.parameters, centre)).max(axis=0)
+    usual_peak, usual_mean = floor_distance(grid, usual, disc, least)
     data = xr.Dataset(
         {
             **_matrices(nominal),
@@ -213,6 +249,8 @@ def _described(
             "radius_floor_saturated": ("frequency", disc.saturated),
             "floor_distance_peak_db": ((), peak),
             "floor_distance_mean_db": ((), mean),
+            "centre_distance_peak_db": ((), usual_peak),
+            "centre_distance_mean_db": ((), usual_mean),
         },
         coords={"frequency": grid, "mode": population["mode"].values.astype(str)},
     )

@@ -79,7 +79,7 @@ def test_survives_its_file(tmp_path: object) -> None:
 
 
 def test_refusals_say_what_is_wrong() -> None:
-    with pytest.raises(InputError, match="middle"):
+    with pytest.raises(InputError, match="found .middle.; expected centre or tightest"):
         chosen(choice="middle")
     with pytest.raises(InputError, match="no band and no measured lines"):
         choose_nominal(modes_dataset(PLANTS), population_dataset(plant()))
@@ -97,3 +97,16 @@ def test_measured_lines_of_several_grids() -> None:
     two = xr.Dataset(coords={"frequency": [2.0, 3.0]})
     tree = xr.DataTree.from_dict({"/grid_1": one, "/grid_2": two})
     np.testing.assert_array_equal(measured_lines(tree), [1.0, 2.0, 3.0])
+
+
+def test_tightest_is_no_worse_than_the_centre_and_prints_both() -> None:
+    centre, tight = chosen(), chosen(choice="tightest")
+    for measure in ("peak", "mean"):
+        own = float(centre[f"floor_distance_{measure}_db"])
+        assert float(centre[f"centre_distance_{measure}_db"]) == own
+        assert float(tight[f"centre_distance_{measure}_db"]) == pytest.approx(own, abs=0.05)
+    assert float(tight["floor_distance_mean_db"]) < float(centre["floor_distance_mean_db"])
+    system = StateSpace(*[tight[f"nominal_{letter}"].values for letter in "ABCD"])
+    assert system.unstable_poles() == 0
+    found = frequency_response(system, LINES)[:, 0, 0]
+    np.testing.assert_allclose(found, nominal_plant(tight).response(LINES), rtol=1e-7)
