@@ -3,8 +3,8 @@
 At one point with error E = P/P0 - 1 and noise of standard deviation sigma (scaled like E), the
 point is held if (|E| - q sigma)+ <= |W|. For circular complex noise P(|e| > q sigma) = e^{-q^2}
 (N. R. Goodman, Ann. Math. Statist. 34(1), 1963); q = sqrt(ln(F / alpha)) keeps the chance that
-noise alone pushes any of F points beyond its allowance at alpha or less. Between the verdicts with
-and without allowance nothing can be told.
+noise alone pushes any of the F points in the band beyond its allowance at alpha or less. Between
+the verdicts with and without allowance nothing can be told.
 """
 
 from dataclasses import dataclass
@@ -123,7 +123,8 @@ def _reaches(
         "additive": np.ones_like(measured),
         "inverse-multiplicative": nominal / measured**2,
     }.get(contents.form, np.broadcast_to(1.0 / nominal, measured.shape))
-    points = max(frequency.size, 1)
+    low, high = contents.band
+    points = max(int(np.sum((frequency >= low) & (frequency <= high))), 1)
     allowance = np.sqrt(np.log(points / false_alarm)) * np.sqrt(variance) * np.abs(per_plant)
     # Unknown noise may be anything: with allowance such a point proves nothing.
     allowance = np.where(np.isfinite(allowance), allowance, np.inf)

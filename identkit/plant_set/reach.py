@@ -29,6 +29,7 @@ from identkit.plant_set.stacked import StackedPlants, stack
 
 PLANTS_AT_ONCE = 24
 LOWEST_SHARE = 1e-9
+REST_SHARE = 1e-3
 _ON_AXIS = 1e-6
 
 
@@ -66,21 +67,32 @@ def reach_of_plants(contents: PlantSetFields, plants: Sequence[FittedPlant]) -> 
     if contents.time.domain != "continuous":
         raise InputError(Problem("time.domain", repr(contents.time.domain), "'continuous'"))
     around = Surroundings(contents)
-    unstable = around.unstable_poles()
+    unstable = count_unstable(around.nominal_poles, around.rest)
     pieces = []
     for start in range(0, len(plants), PLANTS_AT_ONCE):
         some = plants[start : start + PLANTS_AT_ONCE]
         value, frequency = _reach_of_some(around, some)
-        alike = np.array([count_unstable(plant_poles(plant)) == unstable for plant in some])
+        alike = np.array(
+            [count_unstable(plant_poles(plant), around.rest) == unstable for plant in some]
+        )
         pieces.append((np.where(alike, value, np.inf), frequency))
     if not pieces:
         return Reach(np.zeros(0), np.zeros(0))
     return Reach(*(np.concatenate(part) for part in zip(*pieces, strict=True)))
 
 
-def count_unstable(poles: ComplexArray) -> int:
-    """Count the poles right of the imaginary axis; those on it (a free base) do not count."""
-    return int(np.sum(poles.real > _ON_AXIS * np.abs(poles) + _ON_AXIS))
+def count_unstable(poles: ComplexArray, rest: float = 0.0) -> int:
+    """Count the poles right of the imaginary axis; those on it do not count.
+
+    Parameters
+    ----------
+    poles
+        (poles,) rad/s.
+    rest
+        rad/s; slower poles are taken for those of a free base, which rounding splits in two.
+    """
+    right = poles.real > _ON_AXIS * np.abs(poles) + _ON_AXIS
+    return int(np.sum(right & (np.abs(poles) > rest)))
 
 
 class Surroundings:
@@ -113,9 +125,15 @@ class Surroundings:
         found += [part.poles for part in (self._nominal, self._left, self._right)]
         return _upper_half(np.concatenate(found))
 
-    def unstable_poles(self) -> int:
-        """Return the number of unstable poles of the nominal."""
-        return count_unstable(self._nominal.poles)
+    @property
+    def nominal_poles(self) -> ComplexArray:
+        """(states,) poles of the nominal, rad/s."""
+        return self._nominal.poles
+
+    @property
+    def rest(self) -> float:
+        """Far below the band (rad/s): poles here are on the axis as far as the band can tell."""
+        return REST_SHARE * 2.0 * np.pi * self.band[0]
 
     def at(self, frequency: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
         """Return nominal, left and right weight, each (points, rows, columns)."""

@@ -96,6 +96,9 @@ def test_a_free_base_is_on_the_axis_and_does_not_count(make_family):
     assert count_unstable(plant_poles(item)) == 0
     poles = np.linalg.eigvals(plant_matrices(item).A)
     assert count_unstable(poles) == 0
+    split = np.append(poles, [0.2, -0.2])
+    assert count_unstable(split) == 1
+    assert count_unstable(split, rest=1e-3 * 2 * np.pi * 50.0) == 0
 
 
 def test_zeros_are_where_the_plant_vanishes(make_family):
