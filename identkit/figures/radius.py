@@ -252,7 +252,7 @@ def _bottom(picked: RadiusWeight) -> float:
 
 def _who(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     shown = picked.setters[:ROWS]
-    names = [clipped(name, 12) for name in shown]
+    names = [clipped(name, 16) for name in shown]
     for row in range(len(shown)):
         _segments(axes, picked, picked.setter == row, row, group_style(row)[0])
     if len(picked.setters) > ROWS:

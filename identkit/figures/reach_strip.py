@@ -25,7 +25,7 @@ from identkit.figures.style import (
 from identkit.methods.arrays import FloatArray, IntArray
 from identkit.plant_set.fields import PlantSetFields
 
-COLUMNS, MOST_ROWS = 480, 720
+COLUMNS, MOST_ROWS, MOST_SEPARATED = 480, 720, 60
 
 
 @dataclass(frozen=True)
@@ -179,7 +179,8 @@ def _strip(axes: Axes, picked: ReachStrip, figure: Figure, layout: Layout) -> No
         norm=Normalize(0.0, 1.0 + 1e-6),
     )
     axes.grid(visible=False)
-    for start in picked.unit_starts[1:]:
+    separable = len(picked.units) <= MOST_SEPARATED
+    for start in picked.unit_starts[1:] if separable else ():
         axes.axhline(start - 0.5, color=PAPER, lw=0.6)
     _unit_ticks(axes, picked)
     if picked.used_rows < rows:

@@ -136,8 +136,14 @@ def new_figure(layout: Layout, height: float) -> Figure:
 
 
 def clipped(text: str, most: int = 18) -> str:
-    """Return at most `most` letters of a user's label, so that no label squeezes a picture flat."""
-    return text if len(text) <= most else text[: most - 1] + "…"
+    """Return at most `most` letters of a user's label, so that no label squeezes a picture flat.
+
+    What is taken out is the middle: paths and serial numbers differ at their ends.
+    """
+    if len(text) <= most:
+        return text
+    head = most // 3
+    return f"{text[:head]}…{text[len(text) - (most - 1 - head) :]}"
 
 
 def frequency_label(frequency: float) -> str:

@@ -129,7 +129,7 @@ def draw_worst(picked: WorstLedger, layout: Layout = WIDE) -> Figure:
     marks.axvline(1.0, color=WEIGHT, lw=1.3)
     marks.set_xlim(0.0, limit)
     marks.set_ylim(rows - 0.4, -0.6)
-    marks.set_yticks(range(rows), [clipped(name, 12) for name in picked.units[:rows]])
+    marks.set_yticks(range(rows), [clipped(name, 16) for name in picked.units[:rows]])
     marks.tick_params(axis="y", length=0)
     marks.grid(axis="y", visible=False)
     marks.spines["left"].set_visible(False)

@@ -103,3 +103,9 @@ def test_styles_of_a_drawing_do_not_leak():
 
     assert draw(style.NARROW) == style.NARROW.font_size
     assert dict(matplotlib.rcParams) == before
+
+
+def test_long_labels_lose_their_middle():
+    assert style.clipped("U05") == "U05"
+    assert style.clipped("lot-C_2026-04-06/U13_H0_10C", 12) == "lot-…_H0_10C"
+    assert len(style.clipped("x" * 99, 10)) == 10
