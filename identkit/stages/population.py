@@ -64,9 +64,10 @@ def describe_population(
     Notes
     -----
     Modes that stand far off the population (MODE_SHIFTED) and modes outside the band do not
-    count; a deviation is that of the units that are in step. Unit effects are best linear
-    unbiased predictions; their correlation is shrunk (Schaefer, Strimmer 2005) and is meant for
-    drawing virtual units: effect = deviation x correlated standard normal.
+    count, unless fewer than two others are left; a deviation is that of the units in step.
+    Unit effects are best linear unbiased predictions; their correlation is shrunk (Schaefer,
+    Strimmer 2005) and is meant for drawing virtual units: effect = deviation x correlated
+    standard normal.
     """
     kept = ~np.isin(modes["response"].values.astype(str), list(leave_out))
     population = modes["mode_in_population"].values.astype(bool)
@@ -75,8 +76,7 @@ def describe_population(
         raise InputError(Problem("modes", found, "at least one of each"))
     modes = modes.isel(response=np.flatnonzero(kept), mode=np.flatnonzero(population))
     design = campaign_design(modes, reference_temperature)
-    counted = modes["modal_frequency"].notnull() & ~modes["mode_outcome"].isin(_KEPT_OUT)
-    usable = counted.transpose("response", "mode").values
+    usable = _counted(modes)
     per_mode = [
         [summarise(q, design) for q in mode_quantities(modes, m, usable[:, m])]
         for m in range(modes.sizes["mode"])
@@ -101,6 +101,14 @@ def describe_population(
         "output_unit": str(modes.attrs.get("output_unit", "")),
     }
     return result
+
+
+def _counted(modes: xr.Dataset) -> BoolArray:
+    """Return which modes count; all that were found where too few would be left."""
+    found = np.isfinite(modes["modal_frequency"].transpose("response", "mode").values)
+    outcome = modes["mode_outcome"].transpose("response", "mode").values
+    in_step = found & ~np.isin(outcome, [int(code) for code in _KEPT_OUT])
+    return np.where(in_step.sum(axis=0) >= 2, in_step, found)
 
 
 def _counts(modes: xr.Dataset) -> dict[str, tuple[str, IntArray]]:

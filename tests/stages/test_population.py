@@ -140,6 +140,13 @@ def test_shifted_modes_do_not_widen_the_population():
     assert found["responses_shifted"].values.tolist() == [0, 12, 0, 12, 0, 0, 0, 0]
 
 
+def test_a_mode_that_is_always_out_of_band_still_has_a_value(modes):
+    outside = modes.copy(deep=True)
+    outside["mode_outcome"].loc[{"mode": "M8"}] = Outcome.MODE_OUT_OF_BAND
+    found = describe_population(outside).sel(mode="M8", quantity="modal_frequency")
+    assert float(found["population_value"]) == pytest.approx(18400.0, rel=0.01)
+
+
 def test_missing_labels_are_said_and_survived(modes):
     bare = modes.drop_vars(["unit", "head", "temperature", "lot", "measured_at"])
     found = describe_population(bare)
