@@ -18,7 +18,7 @@ from identkit.plant_set.model import PlantSet
 from identkit.progress import Progress, silent
 from identkit.readers.campaign import CampaignFiles
 from identkit.report.contents import ReportInput
-from identkit.report.verdict import verdict
+from identkit.report.verdict import short_verdict
 from identkit.settings import Settings, load_settings
 from identkit.stages.export import SetOrigin, build_set
 from identkit.stages.read import READ_SETTINGS, find_measurements, read
@@ -312,7 +312,7 @@ def _export(work: Work) -> None:
     draft = load_set(work.study.path("draft.h5"))
     final = finished_set(draft, work.dataset("audit.nc"), coverage)
     written = write_set_files(final, work.study.folder, work.settings.export.formats)
-    sentences = verdict(_report_input(work, final))
+    sentences = short_verdict(_report_input(work, final))
     write_certificate(final, work.stage.path("certificate.json"), sentences, written)
 
 

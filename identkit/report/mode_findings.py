@@ -12,6 +12,9 @@ from identkit.outcomes import Outcome
 from identkit.report.contents import ReportInput
 from identkit.report.numbers import counted, listed, percent
 
+SMALL_SPREAD = 1e-4
+"""Relative spread below which a label is not worth a word."""
+
 
 def modes_sentence(given: ReportInput) -> str:
     """Return how many modes describe the population and how they spread."""
@@ -33,6 +36,33 @@ def modes_sentence(given: ReportInput) -> str:
         f"{percent(np.nanmin(spread))} to {percent(np.nanmax(spread))} (one sigma, error of the "
         f"fits taken out), most for {names[widest]} at {frequency_label(value[widest])}."
     )
+
+
+def label_spread_sentence(given: ReportInput) -> str:
+    """Return how much of the spread of the frequencies belongs to which label."""
+    if given.population is None or not given.population.sizes["mode"]:
+        return ""
+    chosen = given.population.sel(quantity="modal_frequency")
+    parts = [
+        f"{words} {_span(chosen[name].values)}"
+        for words, name in (
+            ("unit to unit", "unit_deviation"),
+            ("head to head in a unit", "head_deviation"),
+            ("repeat to repeat", "residual_deviation"),
+        )
+        if np.isfinite(chosen[name].values).any() and np.nanmax(chosen[name].values) > SMALL_SPREAD
+    ]
+    slope = chosen["temperature_slope"].values
+    if np.isfinite(slope).any() and np.any(slope):
+        parts.append(f"with temperature {_span(slope)} per K")
+    return f"Frequencies differ (one sigma) {', '.join(parts)}." if parts else ""
+
+
+def _span(values: FloatArray) -> str:
+    low, high = np.nanmin(values), np.nanmax(values)
+    if percent(low) == percent(high):
+        return percent(low)
+    return f"{percent(low)} to {percent(high)}"
 
 
 def frequency_spread(given: ReportInput) -> FloatArray:

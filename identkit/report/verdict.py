@@ -12,7 +12,7 @@ from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.plant_set.fields import Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
-from identkit.report.mode_findings import modes_sentence, odd_modes_sentence
+from identkit.report.mode_findings import label_spread_sentence, modes_sentence, odd_modes_sentence
 from identkit.report.numbers import counted, listed, number, percent
 from identkit.report.touches import touching
 
@@ -60,9 +60,14 @@ def verdict(given: ReportInput) -> list[str]:
     given
         What the stages wrote; a stage that did not run adds no sentence.
     """
-    measured = (_held, _rechecked, modes_sentence, odd_modes_sentence)
     made = (_nominal, _weight, _setters, _limit_of_control)
-    makers = (*measured, *made, _marked_but_kept, _coverage, _envelope)
+    makers = (*_FOUND, *made, _marked_but_kept, _coverage, _envelope)
+    return [sentence for make in makers if (sentence := make(given))]
+
+
+def short_verdict(given: ReportInput) -> list[str]:
+    """Return the sentences of the verdict that a terminal shows; the page has them all."""
+    makers = (*_FOUND, _weight, _setters, _coverage)
     return [sentence for make in makers if (sentence := make(given))]
 
 
@@ -250,3 +255,6 @@ def _short(method: str) -> str:
 
 def _ended(sentence: str) -> str:
     return re.sub(r"[.;\s]*$", "", sentence) + "."
+
+
+_FOUND = (_held, _rechecked, modes_sentence, label_spread_sentence, odd_modes_sentence)
