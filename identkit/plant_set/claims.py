@@ -22,7 +22,7 @@ from identkit.plant_set.reach import Reach, Surroundings, reach_of_plants
 from identkit.plant_set.response import nominal_response, set_points, state_space_response
 from identkit.plant_set.sample import draw_members
 from identkit.plant_set.schur import zeros
-from identkit.plant_set.stacked import stack
+from identkit.plant_set.stacked import plants_at
 
 ROUNDING = 1e-6
 DECIBEL_ROUNDING = 1e-3
@@ -51,7 +51,7 @@ class FailedCheck:
 
 
 def check_claims(contents: PlantSetFields, reach: Reach | None = None) -> list[FailedCheck]:
-    """Check every claim of a continuous set that can be worked out again from the file.
+    """Check every claim of a set that can be worked out again from the file.
 
     Parameters
     ----------
@@ -74,12 +74,12 @@ def check_weights(contents: PlantSetFields) -> list[FailedCheck]:
         weight: Matrices | None = getattr(contents.weights, side)
         if weight is None:
             continue
-        poles = np.linalg.eigvals(weight.A)
-        if poles.size and poles.real.max() >= 0.0:
-            failed.append(FailedCheck(f"weights.{side}", "a pole right of the axis", "none"))
-        found = zeros(weight, 2.0 * np.pi * contents.band[1])
-        if found.size and found.real.max() >= 0.0:
-            failed.append(FailedCheck(f"weights.{side}", "a zero right of the axis", "none"))
+        far = 2.0 * np.pi * contents.band[1]
+        poles = np.linalg.eigvals(weight.A).astype(complex)
+        for word, roots in (("pole", poles), ("zero", zeros(weight, far))):
+            if _outside(roots, contents.time.period):
+                where = "outside the circle" if contents.time.period else "right of the axis"
+                failed.append(FailedCheck(f"weights.{side}", f"a {word} {where}", "none"))
     return failed
 
 
@@ -222,8 +222,7 @@ def errors_at(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
     pieces: list[FloatArray] = []
     for start in range(0, len(contents.plants), _PLANTS_AT_ONCE):
         some: Sequence[FittedPlant] = contents.plants[start : start + _PLANTS_AT_ONCE]
-        grid = np.broadcast_to(frequency, (len(some), frequency.size))
-        response = stack(some).response(np.arange(len(some)), grid)
+        response = plants_at(some, frequency, contents.time.period)
         pieces.append(pointwise_reach(contents.form, response, nominal, one, one))
     return np.concatenate(pieces)
 
@@ -240,6 +239,10 @@ def excess_db(contents: PlantSetFields) -> float:
 def _magnitude(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
     _, left, right = Surroundings(contents).at(frequency)
     return np.asarray(np.abs(left[:, 0, 0] * right[:, 0, 0]))
+
+
+def _outside(roots: ComplexArray, period: float) -> bool:
+    return bool(np.any(np.abs(roots) >= 1.0 if period > 0.0 else roots.real >= 0.0))
 
 
 def _side(weight: Matrices, points: ComplexArray) -> ComplexArray:

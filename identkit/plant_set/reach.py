@@ -31,6 +31,7 @@ PLANTS_AT_ONCE = 24
 LOWEST_SHARE = 1e-9
 REST_SHARE = 1e-3
 _ON_AXIS = 1e-6
+_FAST = 1e-9
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,10 +63,8 @@ def reach_of_plants(contents: PlantSetFields, plants: Sequence[FittedPlant]) -> 
     Raises
     ------
     InputError
-        If the form has no pointwise reach, or the set is sampled.
+        If the form has no pointwise reach.
     """
-    if contents.time.domain != "continuous":
-        raise InputError(Problem("time.domain", repr(contents.time.domain), "'continuous'"))
     around = Surroundings(contents)
     unstable = count_unstable(around.nominal_poles, around.rest)
     pieces = []
@@ -103,6 +102,10 @@ class Surroundings:
         # At rest a free base is infinite and only its limit counts.
         low, high = contents.band
         self.band = (max(low, LOWEST_SHARE * high), high)
+        self.period = contents.time.period
+        if self.period > 0.0 and high > (0.5 + 1e-9) / self.period:
+            expected = f"at most half the rate, {0.5 / self.period:g} Hz"
+            raise InputError(Problem("band", f"{high:g} Hz", expected))
         self._delay = contents.nominal.delay
         self._nominal = SchurResponse(contents.nominal)
         outputs, inputs = contents.nominal.D.shape
@@ -123,12 +126,12 @@ class Surroundings:
         parts = (contents.nominal, contents.weights.left, contents.weights.right)
         found = [zeros(part, far) for part in parts if part is not None]
         found += [part.poles for part in (self._nominal, self._left, self._right)]
-        return _upper_half(np.concatenate(found))
+        return _upper_half(np.concatenate([as_continuous(item, self.period) for item in found]))
 
     @property
     def nominal_poles(self) -> ComplexArray:
-        """(states,) poles of the nominal, rad/s."""
-        return self._nominal.poles
+        """(states,) poles of the nominal, rad/s; those of z by s = ln(z)/period."""
+        return as_continuous(self._nominal.poles, self.period)
 
     @property
     def rest(self) -> float:
@@ -137,7 +140,7 @@ class Surroundings:
 
     def at(self, frequency: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
         """Return nominal, left and right weight, each (points, rows, columns)."""
-        points = evaluation_points(frequency)
+        points = evaluation_points(frequency, self.period)
         nominal = self._nominal(points) * delay_factor(frequency, self._delay)[:, None, None]
         return nominal, self._left(points), self._right(points)
 
@@ -148,6 +151,21 @@ class Surroundings:
     def reach_on_common_grid(self, plants: ComplexArray) -> FloatArray:
         """Return (plants, points) reach of (plants, points, outputs, inputs) responses."""
         return pointwise_reach(self.form, plants, *self._common)
+
+
+def as_continuous(roots: ComplexArray, period: float) -> ComplexArray:
+    """Return roots in z as s = ln(z)/period, rad/s, roots at 0 (delays) left out; s as they are."""
+    if period <= 0.0:
+        return roots
+    slow = roots[np.abs(roots) > _FAST].astype(complex)
+    found = np.log(slow) / period
+    # A root on the negative axis stands at half the rate, on whichever side rounding puts it.
+    return np.asarray(found.real + 1j * np.abs(found.imag))
+
+
+def folded(poles: ComplexArray, period: float) -> ComplexArray:
+    """Return continuous poles as the samples see them, modulo the rate."""
+    return poles if period <= 0.0 else as_continuous(np.exp(poles * period), period)
 
 
 def _identity(size: int) -> Matrices:
@@ -164,10 +182,11 @@ def _reach_of_some(
 ) -> tuple[FloatArray, FloatArray]:
     stacked = stack(plants)
     rows = np.arange(len(plants))
-    own = clustered(_own_features(plants, around.band), around.band)
+    own = clustered(_own_features(plants, around.band, around.period), around.band)
     common = np.broadcast_to(around.common_grid, (rows.size, around.common_grid.size))
-    on_common = around.reach_on_common_grid(stacked.response(rows, common))
-    on_own = around.reach_at(own.ravel(), stacked.response(rows, own).reshape(-1, *stacked.shape))
+    on_common = around.reach_on_common_grid(stacked.response(rows, common, around.period))
+    there = stacked.response(rows, own, around.period).reshape(-1, *stacked.shape)
+    on_own = around.reach_at(own.ravel(), there)
     grid = np.concatenate([common, own], axis=1)
     values = np.concatenate([on_common, on_own.reshape(own.shape)], axis=1)
     order = np.argsort(grid, axis=1, kind="stable")
@@ -177,17 +196,20 @@ def _reach_of_some(
 
 def _evaluator(around: Surroundings, stacked: StackedPlants) -> Evaluate:
     def evaluate(row: IntArray, frequency: FloatArray) -> FloatArray:
-        return around.reach_at(frequency, stacked.response(row, frequency[:, None])[:, 0])
+        there = stacked.response(row, frequency[:, None], around.period)
+        return around.reach_at(frequency, there[:, 0])
 
     return evaluate
 
 
-def _own_features(plants: Sequence[FittedPlant], band: tuple[float, float]) -> ComplexArray:
+def _own_features(
+    plants: Sequence[FittedPlant], band: tuple[float, float], period: float
+) -> ComplexArray:
     """Return (plants, features) poles and zeros, padded with the lower end of the band."""
     found = []
     for plant in plants:
-        poles = plant_poles(plant)
-        if plant.feedthrough.size == 1:
+        poles = folded(plant_poles(plant), period)
+        if plant.feedthrough.size == 1 and period <= 0.0:
             poles = np.concatenate([poles, zeros(plant_matrices(plant), 2.0 * np.pi * band[1])])
         found.append(_upper_half(poles))
     most = max(item.size for item in found)

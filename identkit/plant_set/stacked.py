@@ -7,6 +7,7 @@ import numpy as np
 
 from identkit.plant_set.fields import ComplexArray, FittedPlant, FloatArray, IntArray
 from identkit.plant_set.response import TWO_PI
+from identkit.plant_set.zero_order_hold import held_terms, split_delay
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,7 +39,7 @@ class StackedPlants:
         """(outputs, inputs)."""
         return self.feedthrough.shape[1], self.feedthrough.shape[2]
 
-    def response(self, row: IntArray, frequency: FloatArray) -> ComplexArray:
+    def response(self, row: IntArray, frequency: FloatArray, period: float = 0.0) -> ComplexArray:
         """Return the responses of the plants `row` (rows,) at their own frequencies.
 
         Parameters
@@ -47,12 +48,16 @@ class StackedPlants:
             (rows,) which plants.
         frequency
             (rows, points) Hz.
+        period
+            s; above 0 the plants are sampled behind a zero-order hold.
 
         Returns
         -------
         ComplexArray
             (rows, points, outputs, inputs).
         """
+        if period > 0.0:
+            return self._sampled(row, frequency, period)
         s = 1j * TWO_PI * frequency
         square = s * s
         total = np.repeat(self.feedthrough[row, None].astype(complex), s.shape[1], axis=1)
@@ -66,6 +71,31 @@ class StackedPlants:
             if general:
                 total += self.residue_rate[row, None, k] * (s * below)[..., None, None]
         return np.asarray(total * np.exp(-s * self.delay[row, None])[..., None, None])
+
+    def _sampled(self, row: IntArray, frequency: FloatArray, period: float) -> ComplexArray:
+        z = np.exp(1j * TWO_PI * frequency * period)
+        whole, fraction = split_delay(self.delay[row], period)
+        # A direct term answers at once: behind a fraction of a period it sees the input before.
+        direct = np.where(fraction[:, None] > 0.0, 1.0 / z, 1.0)
+        total: ComplexArray = self.feedthrough[row, None] * direct[..., None, None].astype(complex)
+        terms = held_terms(self.natural[row], self.loss[row], fraction, period)
+        for k in range(self.natural.shape[1]):
+            place, speed = terms.states(k, z)
+            total += self.residue[row, None, k] * place[..., None, None]
+            total += self.residue_rate[row, None, k] * speed[..., None, None]
+        if np.any(self.base_gain):
+            still = np.zeros((row.size, 1))
+            place, _ = held_terms(still, still, fraction, period).states(0, z)
+            total += self.base_gain[row, None] * place[..., None, None]
+        return np.asarray(total * (z ** -whole[:, None])[..., None, None])
+
+
+def plants_at(
+    plants: Sequence[FittedPlant], frequency: FloatArray, period: float = 0.0
+) -> ComplexArray:
+    """Return (plants, points, outputs, inputs) responses of plants on one grid (points,) of Hz."""
+    grid = np.broadcast_to(frequency, (len(plants), frequency.size))
+    return stack(plants).response(np.arange(len(plants)), grid, period)
 
 
 def stack(plants: Sequence[FittedPlant]) -> StackedPlants:

@@ -33,7 +33,7 @@ from identkit.plant_set.raw_points import (
     judge_points,
 )
 from identkit.plant_set.reach import reach_of_plants
-from identkit.plant_set.response import plant_response
+from identkit.plant_set.stacked import plants_at
 from identkit.stages.set_plants import label_columns, labels_of, set_plants
 
 NO_FIT, NOT_JUDGED = "no fit", "not judged"
@@ -306,7 +306,7 @@ def _variance(
     for index, plant in enumerate(plants):
         if plant is None:
             continue
-        fitted = plant_response(plant, frequency)[0, 0]
+        fitted = plants_at([plant], frequency, plant_set.time.period)[0, :, 0, 0]
         square = np.abs(measured[index] / fitted - 1.0) ** 2
         good = np.isfinite(square) if usable is None else np.isfinite(square) & usable[index]
         result[index] = _moving_mean(square, good) * np.abs(fitted) ** 2

@@ -139,12 +139,6 @@ def test_a_response_is_judged_at_its_own_points(small_set):
     assert np.isnan(nothing.value[0])
 
 
-def test_a_sampled_set_is_refused_for_now(small_set):
-    sampled = replace(small_set, time=f.TimeBase("sampled", 2e-5))
-    with pytest.raises(InputError, match=r"time\.domain"):
-        reach_of_plants(sampled, small_set.plants)
-
-
 FORMS = ["additive", "multiplicative", "input-multiplicative", "inverse-multiplicative"]
 
 
