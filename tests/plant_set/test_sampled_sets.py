@@ -171,11 +171,11 @@ def test_reach_is_the_norm_by_slycot(sampled_set, makers):
     error = (own - nominal) * inverse(nominal) * inverse(weight)
     norm, place = control.linfnorm(error, tol=1e-11)
     reach = reach_of_plants(whole, [plant])
-    assert 2 * np.pi * reach.frequency[0] == pytest.approx(place, rel=1e-5)
-    # The norm itself comes back 1e-6 below the value its own system has at its own peak.
-    there = abs(error(np.exp(1j * place * PERIOD)))
+    # slycot stops 2e-5 beside the peak, where the value is 1e-6 lower; ours is attained.
+    assert 2 * np.pi * reach.frequency[0] == pytest.approx(place, rel=1e-4)
+    assert norm <= reach.value[0] <= norm * (1.0 + 3e-6)
+    there = abs(error(np.exp(2j * np.pi * reach.frequency[0] * PERIOD)))
     assert reach.value[0] == pytest.approx(there, rel=1e-8)
-    assert reach.value[0] == pytest.approx(norm, rel=3e-6)
 
 
 def test_claims_and_members_of_a_sampled_set(sampled_set):
