@@ -12,7 +12,7 @@ Derived here.
 import numpy as np
 
 from identkit.methods.arrays import ComplexArray, FloatArray
-from identkit.methods.differential_correction import HardRows
+from identkit.methods.margin_program import HardRows
 from identkit.methods.spectral_factor import damping_ratios
 
 SHARE = 0.5

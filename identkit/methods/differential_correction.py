@@ -11,17 +11,17 @@ J. A. Ferland, S. Schaible, "An algorithm for generalized fractional programs", 
 Appl. 47(1), 35-49, 1985 (the same with one-sided rows).
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 
 from identkit.methods.arnoldi_basis import ArnoldiBasis, arnoldi_basis
-from identkit.methods.arrays import BoolArray, FloatArray, IntArray
+from identkit.methods.arrays import FloatArray, IntArray
 from identkit.methods.infeasibility_certificate import proves_infeasible
+from identkit.methods.margin_program import HardRows, hard_matrix, largest_margin
 
 MAX_PROGRAMS = 150
 CEILING_SLACK = 1e-9
-LARGEST = 1e3
 MOMENTUM = 1.0
 NEARLY_COMMON = 0.5
 
@@ -68,35 +68,6 @@ class RatioBounds:
         if np.any(factor * ratio > self.ceiling * (1.0 + CEILING_SLACK)):
             return factor, np.inf
         return factor, factor * float((ratio / self.upper).max())
-
-
-@dataclass(frozen=True)
-class HardRows:
-    """Linear conditions P(at) >= share * P(beside) on numerator and denominator alike or apart.
-
-    Attributes
-    ----------
-    at, beside
-        (rows,) abscissae.
-    share
-        (rows,) share of the neighbour's value that is asked for; 0 is plain positivity.
-    on_numerator
-        (rows,) true where P is the numerator, false where it is the denominator.
-    """
-
-    at: FloatArray = field(default_factory=lambda: np.zeros(0))
-    beside: FloatArray = field(default_factory=lambda: np.zeros(0))
-    share: FloatArray = field(default_factory=lambda: np.zeros(0))
-    on_numerator: BoolArray = field(default_factory=lambda: np.zeros(0, dtype=bool))
-
-    def joined(self, other: "HardRows") -> "HardRows":
-        """Return these rows followed by the other ones."""
-        return HardRows(
-            np.concatenate([self.at, other.at]),
-            np.concatenate([self.beside, other.beside]),
-            np.concatenate([self.share, other.share]),
-            np.concatenate([self.on_numerator, other.on_numerator]),
-        )
 
 
 @dataclass(frozen=True)
@@ -243,7 +214,7 @@ class _Descent:
 
     def _step(self, tolerance: float) -> bool:
         """Solve one program and take what it brings; false if it brought nothing."""
-        level = self.best.level if self.best else self.target
+        level = min(self.best.level, self.target) if self.best else self.target
         lowest = max(self.bounds.least_level, (level * self.floor) ** 0.5)
         probe = max(level / (1.0 + max(0.8 * tolerance, self.reach)), lowest)
         if level / probe < 1.0 + 0.8 * tolerance:
@@ -279,9 +250,9 @@ class _Descent:
                 np.hstack([numerator[j] * high[1][j, None], -denominator[j] * high[0][j, None]]),
             ]
         )
-        hard = _hard_rows(self.hard, self.scaled.bases)
+        hard = hard_matrix(self.hard, self.scaled.bases)
         normal = np.concatenate([np.zeros(self.order + 1), self.bounds.measure @ denominator])
-        found = _largest_margin(soft, hard, normal)
+        found = largest_margin(soft, hard, normal)
         if found is None:
             return None
         unknowns, margin, multipliers = found
@@ -380,45 +351,6 @@ def _row_factors(
     share = ratio / limit
     high = (1.0 / (1.0 + share), share / (1.0 + share))
     return low, high
-
-
-def _hard_rows(hard: HardRows, bases: tuple[ArnoldiBasis, ArnoldiBasis]) -> FloatArray:
-    blocks = []
-    for k, basis in enumerate(bases):
-        mine = hard.on_numerator == (k == 0)
-        at, beside = basis.evaluate(hard.at[mine]), basis.evaluate(hard.beside[mine])
-        block = hard.share[mine, None] * beside - at
-        block = block / np.linalg.norm(at, axis=1)[:, None]
-        other = np.zeros((block.shape[0], bases[1 - k].degree + 1))
-        blocks.append(np.hstack([block, other] if k == 0 else [other, block]))
-    return np.vstack(blocks)
-
-
-def _largest_margin(
-    soft: FloatArray, hard: FloatArray, normal: FloatArray
-) -> tuple[FloatArray, float, FloatArray] | None:
-    """Minimise z with soft @ c <= z, hard @ c <= 0, normal @ c = 1: unknowns, z, multipliers.
-
-    The box on c keeps the program well posed; where it is active the multipliers prove nothing.
-    """
-    from scipy.optimize import linprog
-
-    count = normal.size
-    column = np.concatenate([-np.ones(soft.shape[0]), np.zeros(hard.shape[0])])
-    matrix = np.hstack([np.vstack([soft, hard]), column[:, None]])
-    solved = linprog(
-        np.append(np.zeros(count), 1.0),
-        A_ub=matrix,
-        b_ub=np.zeros(matrix.shape[0]),
-        A_eq=np.append(normal, 0.0)[None],
-        b_eq=np.ones(1),
-        bounds=[(-LARGEST, LARGEST)] * count + [(-1.0, None)],
-        method="highs-ds",
-        options={"primal_feasibility_tolerance": 1e-10, "dual_feasibility_tolerance": 1e-10},
-    )
-    if solved.status != 0:
-        return None
-    return solved.x[:count], float(solved.x[count]), -np.asarray(solved.ineqlin.marginals)
 
 
 def _largest_coefficients(

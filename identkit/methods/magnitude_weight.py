@@ -17,12 +17,12 @@ import numpy as np
 from identkit.methods.arrays import ComplexArray, FloatArray
 from identkit.methods.damping_rows import offending, rows_around
 from identkit.methods.differential_correction import (
-    HardRows,
     Ratio,
     Search,
     constant_ratio,
     lower_ratio,
 )
+from identkit.methods.margin_program import HardRows
 from identkit.methods.radius_problem import RadiusProblem, radius_problem
 from identkit.methods.series_sections import StateMatrices, series_state_space
 from identkit.methods.spectral_factor import (
@@ -128,7 +128,8 @@ def fit_magnitude_weight(
     outside_factor
         Below and above the points, and in gaps wider than a tenth, |W| stays within this factor of
         what is asked and allowed at the neighbours (the excess counts there too), so that no weight
-        gains by a dip or a peak where nothing is asked; inf turns this off.
+        gains by a dip or a peak where nothing is asked. Below and above, the lower limit is relaxed
+        by its cube: a weight may go on falling there. inf turns all this off.
     ceiling
         (frequencies in Hz, values) further absolute ceilings on |W|, where no radius is given.
     start
@@ -221,10 +222,10 @@ class WeightClimb:
         self.programs = 0
         found = self._settled(order, self.search(order, 0.5 * self.tolerance_db))
         if found.best is None:
-            raise self.problem.infeasible(order, found.deciding)
+            raise self.problem.infeasible(order, found.deciding, proven=found.floor > 1.0)
         kept = self._damped(order, found.best)
         if not np.isfinite(kept.excess_db):
-            raise self.problem.infeasible(order, found.deciding)
+            raise self.problem.infeasible(order, found.deciding, proven=False)
         floor_db = _decibels(found.floor)
         return MagnitudeWeight(
             order=order,
@@ -269,19 +270,20 @@ class WeightClimb:
         constant = constant_ratio(self.problem.bounds)
         if np.isfinite(constant.level):
             return Search(constant, constant.level, True, -1, 0)
-        return Search(None, 0.0, False, int(np.argmin(self.problem.bounds.ceiling)), 0)
+        return Search(None, np.inf, False, int(np.argmin(self.problem.bounds.ceiling)), 0)
 
     def _below_ceiling(self, order: int) -> Search:
         """Look for any pair below the ceilings; it starts the search."""
         bounds = self.problem.ceiling_bounds()
         found = lower_ratio(bounds, order, self.start, tolerance=1e-4, stop_level=1.0)
         self.programs += found.programs
-        if found.best is not None:
-            pair = found.best
-            self.start = (pair.numerator, pair.denominator)
-            level = self.problem.bounds.normalised(pair.numerator / pair.denominator)[1]
-            self.best = replace(pair, level=level) if np.isfinite(level) else None
-        return found
+        if found.best is None:
+            return found
+        pair = found.best
+        self.start = (pair.numerator, pair.denominator)
+        level = self.problem.bounds.normalised(pair.numerator / pair.denominator)[1]
+        self.best = replace(pair, level=level) if np.isfinite(level) else None
+        return replace(found, best=self.best)
 
     def _damped(self, order: int, free: Ratio) -> _Roots:
         """Return poles and zeros that keep the damping floor, near the best excess.

@@ -68,12 +68,15 @@ class RadiusProblem:
         upper = np.where(np.isfinite(ceiling), ceiling, np.maximum(stand_in, 0.0))
         return replace(self.bounds, upper=upper, ceiling=np.full(upper.size, np.inf))
 
-    def infeasible(self, order: int, deciding: int) -> InfeasibleError:
-        """Return the error that names the point whose ceiling decides."""
-        frequency = float(self.omega[deciding] / TWO_PI)
-        cap = float(np.sqrt(self.bounds.ceiling[deciding]))
+    def infeasible(self, order: int, deciding: int, *, proven: bool) -> InfeasibleError:
+        """Return the error that names the point whose ceiling decides, where one does."""
+        known = deciding >= 0 and np.isfinite(self.bounds.ceiling[deciding])
+        tightest = int(np.argmin(self.bounds.ceiling / np.maximum(self.bounds.lower, 1e-300)))
+        at = deciding if known else tightest
+        frequency, cap = float(self.omega[at] / TWO_PI), float(np.sqrt(self.bounds.ceiling[at]))
+        found = "there is no weight" if proven else "no weight was found"
         return InfeasibleError(
-            f"no weight of order {order} covers the radius and stays below the cap: "
+            f"{found} of order {order} that covers the radius and stays below the cap: "
             f"the cap {cap:.4g} at {frequency:.6g} Hz decides; raise it there or raise the order",
             frequency,
         )
@@ -146,7 +149,8 @@ def _gathered(
 def _unasked(asked: _Asked, positive: FloatArray, factor: float) -> _Asked:
     """Points below, above and in wide gaps between those asked for, 0 and inf included.
 
-    Each keeps the looser of its two neighbours' demands, relaxed by the factor.
+    Each keeps the looser of its two neighbours' demands, relaxed by the factor; the lower one by
+    its cube below and above, where a weight may go on falling.
     """
     count = int(np.ceil(OUTSIDE_DECADES / np.log10(WIDEST_GAP)))
     reach = np.geomspace(WIDEST_GAP, 10.0**OUTSIDE_DECADES, count)
@@ -158,10 +162,11 @@ def _unasked(asked: _Asked, positive: FloatArray, factor: float) -> _Asked:
     ]
     omega = np.concatenate([below, *gaps, positive[-1] * reach, [np.inf]])
     right = np.searchsorted(asked.omega, omega)
+    end = (right == 0) | (right == asked.omega.size)
     left, right = np.maximum(right - 1, 0), np.minimum(right, asked.omega.size - 1)
     return _Asked(
         omega,
-        np.minimum(asked.lower[left], asked.lower[right]) / factor,
+        np.minimum(asked.lower[left], asked.lower[right]) / np.where(end, factor**3, factor),
         np.maximum(asked.upper[left], asked.upper[right]) * factor,
         np.maximum(asked.cap[left], asked.cap[right]),
     )
