@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from io import StringIO
 from pathlib import Path
 
+import numpy as np
 import xarray as xr
 from rich.console import Console
 from rich.table import Table
@@ -79,7 +80,9 @@ def _audit_new(plant_set: PlantSet, files: Sequence[Path], study: Path | None) -
         settings = load_settings(study)
         options, folder, pattern = settings.responses, settings.folder, settings.responses.files
     found = find_files(list(files), folder=folder, pattern=pattern)
-    return audit(plant_set, responses=read_campaign(found, options, folder=folder))
+    table = audit(plant_set, responses=read_campaign(found, options, folder=folder))
+    # files named one by one are asked about one by one, whatever the set left out when it was made
+    return table.assign(excluded=("response", np.zeros(table.sizes["response"], dtype=bool)))
 
 
 def _text(table: xr.Dataset) -> str:
@@ -109,7 +112,7 @@ def _cells(table: xr.Dataset, k: int) -> list[str]:
         f"{_reach(table, k):.3f}",
         f"{hertz:.5g}",
         str(row["nearest_mode"].values),
-        str(row["reason"].values) if bool(row["excluded"]) else "",
+        str(row["reason"].values),
     ]
 
 
