@@ -108,7 +108,7 @@ def _counted(modes: xr.Dataset) -> BoolArray:
     found = np.isfinite(modes["modal_frequency"].transpose("response", "mode").values)
     outcome = modes["mode_outcome"].transpose("response", "mode").values
     in_step = found & ~np.isin(outcome, [int(code) for code in _KEPT_OUT])
-    return np.where(in_step.sum(axis=0) >= 2, in_step, found)
+    return np.asarray(np.where(in_step.sum(axis=0) >= 2, in_step, found), dtype=bool)
 
 
 def _counts(modes: xr.Dataset) -> dict[str, tuple[str, IntArray]]:
