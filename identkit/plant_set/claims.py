@@ -115,7 +115,8 @@ def check_radii(contents: PlantSetFields) -> list[FailedCheck]:
     failed = []
     if len(missing) > cut:
         names = ", ".join(sorted(missing)[:5])
-        failed.append(FailedCheck("radii.set_by", f"plants that are not listed ({names})", "none"))
+        found = f"radii set by plants that are not listed ({names})"
+        failed.append(FailedCheck("radii.set_by", found, f"at most {cut} of them unlisted"))
     errors = errors_at(contents, radii.frequency)
     held = np.array([name not in _excluded(contents) for name in listed], dtype=bool)
     largest = np.max(errors[held], axis=0, initial=radii.floor)

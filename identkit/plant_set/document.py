@@ -35,6 +35,7 @@ from identkit.plant_set.node import Node
 from identkit.plant_set.plant_document import plant_from, plant_to
 
 Document = dict[str, Any]
+DOMAINS = ("continuous", "sampled")
 Kind = TypeVar("Kind")
 
 
@@ -96,7 +97,7 @@ def from_document(document: Any, place: str) -> PlantSetFields:
     weights = root.at("weights")
     return PlantSetFields(
         form=root.at("form").text(),
-        time=TimeBase(root.at("time").at("domain").text(), root.at("time").at("period").number()),
+        time=_time(root.at("time")),
         inputs=inputs,
         outputs=outputs,
         band=root.at("band").span(),
@@ -120,6 +121,14 @@ def from_document(document: Any, place: str) -> PlantSetFields:
         ),
         provenance=_provenance(root.at("provenance")),
     )
+
+
+def _time(node: Node) -> TimeBase:
+    domain, period = node.at("domain").text(), node.at("period").number()
+    node.expect(domain in DOMAINS, "domain", f"one of {', '.join(DOMAINS)}")
+    wanted = "a period above 0 s" if domain == "sampled" else "0 for continuous time"
+    node.expect((domain == "sampled") == (period > 0.0), "period", wanted)
+    return TimeBase(domain, period)
 
 
 def _channels(node: Node) -> tuple[Channel, ...]:
