@@ -199,7 +199,8 @@ class _Descent:
         self.bounds, self.order, self.hard, self.best = bounds, order, hard, initial
         self.lower_rows = self.upper_rows = _first_rows(bounds, order)
         self.target = _level_without_ceiling(bounds, start[0] / start[1])
-        self.scaled = _scale(bounds, order, *start)
+        factor = bounds.normalised(start[0] / start[1])[0]
+        self.scaled = _scale(bounds, order, factor * start[0], start[1])
         self.floor, self.deciding, self.reach = bounds.least_level, -1, 0.0
 
     def run(self, tolerance: float, stop_level: float, most_programs: int) -> Search:
