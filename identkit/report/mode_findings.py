@@ -14,6 +14,8 @@ from identkit.report.numbers import counted, listed, percent
 
 SMALL_SPREAD = 1e-4
 """Relative spread below which a label is not worth a word."""
+APART = 0.01
+"""Chance, over the whole table, below which a lot is said to stand apart."""
 
 
 def modes_sentence(given: ReportInput) -> str:
@@ -56,6 +58,35 @@ def label_spread_sentence(given: ReportInput) -> str:
     if np.isfinite(slope).any() and np.any(slope):
         parts.append(f"with temperature {_span(slope)} per K")
     return f"Frequencies differ (one sigma) {', '.join(parts)}." if parts else ""
+
+
+def lots_sentence(given: ReportInput) -> str:
+    """Return which lots stand apart from all others, in which modes and by how much."""
+    if given.population is None or "lot_chance" not in given.population:
+        return ""
+    chance = given.population["lot_chance"].values
+    effect = given.population["lot_effect"].values
+    names = given.population["effect"].values.astype(str)
+    found = []
+    for row, lot in enumerate(given.population["lot"].values.astype(str)):
+        apart = [
+            f"{_effect_words(names[k])} {100 * effect[row, k]:+.2g} %"
+            for k in np.flatnonzero(chance[row] < APART)
+        ]
+        if apart:
+            found.append(f"lot {lot} in {listed(apart, 4)}")
+    if not found:
+        return ""
+    return (
+        f"Apart from the other lots: {listed(found, 3)} (Student's test over units, chance below "
+        f"{percent(APART)} for the whole table)."
+    )
+
+
+def _effect_words(name: str) -> str:
+    mode, quantity = name.split(":", 1)
+    words = {"modal_frequency": "frequency", "damping_ratio": "damping"}.get(quantity, quantity)
+    return words.replace("_", " ") if mode == "base" else f"{mode} {words.replace('_', ' ')}"
 
 
 def _span(values: FloatArray) -> str:

@@ -12,7 +12,12 @@ from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.plant_set.fields import Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
-from identkit.report.mode_findings import label_spread_sentence, modes_sentence, odd_modes_sentence
+from identkit.report.mode_findings import (
+    label_spread_sentence,
+    lots_sentence,
+    modes_sentence,
+    odd_modes_sentence,
+)
 from identkit.report.numbers import counted, listed, number, percent
 from identkit.report.touches import touching
 
@@ -257,4 +262,11 @@ def _ended(sentence: str) -> str:
     return re.sub(r"[.;\s]*$", "", sentence) + "."
 
 
-_FOUND = (_held, _rechecked, modes_sentence, label_spread_sentence, odd_modes_sentence)
+_FOUND = (
+    _held,
+    _rechecked,
+    modes_sentence,
+    label_spread_sentence,
+    lots_sentence,
+    odd_modes_sentence,
+)

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from identkit.errors import InputError, Problem
 from identkit.methods.arrays import BoolArray, FloatArray, IntArray
 from identkit.methods.correlation_shrinkage import shrunk_correlation
+from identkit.methods.group_contrast import group_contrast
 from identkit.outcomes import Outcome
 from identkit.stages.population_design import Design, campaign_design
 from identkit.stages.population_quantity import (
@@ -187,10 +188,20 @@ def _effect_part(
 
 
 def _lot_part(lot: NDArray[np.str_], design: Design, effects: FloatArray) -> xr.Dataset:
-    """Return the mean unit effect of every lot; a unit counts for the lot it was measured in."""
+    """Return each lot's mean unit effect and the chance that it is no different from the rest.
+
+    A unit counts for the lot it was measured in.
+    """
     lots = np.unique(lot)
     members: list[BoolArray] = [
         np.isin(np.arange(len(design.units)), design.unit[lot == name]) for name in lots
     ]
     means = np.stack([effects[mine].mean(axis=0) for mine in members])
-    return xr.Dataset({"lot_effect": (("lot", "effect"), means)}, coords={"lot": list(lots)})
+    chance = group_contrast(effects, np.stack(members))
+    return xr.Dataset(
+        {
+            "lot_effect": (("lot", "effect"), means),
+            "lot_chance": (("lot", "effect"), chance),
+        },
+        coords={"lot": list(lots)},
+    )

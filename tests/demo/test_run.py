@@ -104,3 +104,8 @@ def test_a_second_run_does_nothing_again(demo, command):
     assert done.returncode == 0, done.stderr
     assert stages_run(demo) == before
     assert done.stdout.splitlines()[0] == demo.printed.splitlines()[0]
+
+
+def test_the_verdict_names_the_odd_lot(demo):
+    assert re.search(r"lot C in M3 frequency \+\d", demo.printed)
+    assert not re.search(r"lot [ABD] in", demo.printed)
