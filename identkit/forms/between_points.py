@@ -8,14 +8,16 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from identkit.forms.multiplicative import PlantComparison, WeightedNominal
+from identkit.forms.multiplicative import PlantComparison
 from identkit.methods.arrays import FloatArray
-from identkit.methods.level_crossings import level_crossings
+from identkit.methods.level_crossings import LevelCrossings
+from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import TWO_PI
 
 LEVEL_TOLERANCE = 1e-7
 MOST_CLIMBS = 40
-_ZOOMS, _ZOOM_POINTS = 7, 17
+LEAST_LEVEL = 1e-100
+_ZOOMS, _ZOOM_POINTS, _NARROW = 14, 17, 1e-8
 
 
 @dataclass(frozen=True)
@@ -26,13 +28,13 @@ class Peak:
     ratio: float
 
 
-def largest_ratio(comparison: PlantComparison, bound: WeightedNominal, start: float) -> Peak:
+def largest_ratio(comparison: PlantComparison, weight: MagnitudeWeight, start: float) -> Peak:
     """Return the supremum of |P - P0| / |W P0| over the band, to a relative 1e-7.
 
     Parameters
     ----------
-    comparison, bound
-        Plant and weighted nominal.
+    comparison, weight
+        Plant against nominal, and the weight.
     start
         Hz, the best grid point known.
 
@@ -42,43 +44,51 @@ def largest_ratio(comparison: PlantComparison, bound: WeightedNominal, start: fl
         If the level does not settle.
     """
     common = comparison.common
+    test = comparison.level_test(weight)
     frequency = np.array([np.clip(start, common.low, common.high)])
-    top = Peak(float(frequency[0]), float(comparison.ratio(frequency, bound.weight)[0]))
+    top = Peak(float(frequency[0]), float(comparison.ratio(frequency, weight)[0]))
     for _ in range(MOST_CLIMBS):
-        level = top.ratio * (1.0 + LEVEL_TOLERANCE) + np.finfo(float).tiny
-        higher = peaks_above(comparison, bound, level)
+        level = top.ratio * (1.0 + LEVEL_TOLERANCE) + LEAST_LEVEL
+        higher = _above(comparison, weight, test, level)
         if not higher:
             return top
         top = max(higher, key=lambda peak: peak.ratio)
     raise ArithmeticError(f"the ratio still grows at {top.ratio:.4g} near {top.frequency:g} Hz")
 
 
-def peaks_above(comparison: PlantComparison, bound: WeightedNominal, level: float) -> list[Peak]:
+def peaks_above(comparison: PlantComparison, weight: MagnitudeWeight, level: float) -> list[Peak]:
     """Return a peak of the ratio in every interval of the band where it exceeds `level`."""
+    return _above(comparison, weight, comparison.level_test(weight), level)
+
+
+def _above(
+    comparison: PlantComparison, weight: MagnitudeWeight, test: LevelCrossings, level: float
+) -> list[Peak]:
     common = comparison.common
-    low, high = TWO_PI * common.low, TWO_PI * common.high
-    crossings = level_crossings(comparison.level_test(bound), level, low, high) / TWO_PI
+    crossings = test.at(level) / TWO_PI
     edges = np.concatenate([[common.low], crossings, [common.high]])
     tried = np.concatenate([np.sqrt(edges[1:] * edges[:-1]), edges])
-    above = tried[comparison.ratio(tried, bound.weight) > level]
+    above = tried[comparison.ratio(tried, weight) > level]
     if not above.size:
         return []
     # A near miss of the axis splits an interval; a bracket ends at the next edge outside it.
     left = edges[np.maximum(np.searchsorted(edges, above, "left") - 1, 0)]
     right = edges[np.minimum(np.searchsorted(edges, above, "right"), edges.size - 1)]
-    return _zoomed(comparison, bound, np.unique(np.column_stack([left, right]), axis=0))
+    return _zoomed(comparison, weight, np.unique(np.column_stack([left, right]), axis=0))
 
 
 def _zoomed(
-    comparison: PlantComparison, bound: WeightedNominal, brackets: FloatArray
+    comparison: PlantComparison, weight: MagnitudeWeight, brackets: FloatArray
 ) -> list[Peak]:
     """Narrow every bracket (rows, 2) around its highest point, eightfold at a time."""
     for _ in range(_ZOOMS):
         points = np.linspace(brackets[:, 0], brackets[:, 1], _ZOOM_POINTS, axis=1)
-        ratio = comparison.ratio(points.ravel(), bound.weight).reshape(points.shape)
+        ratio = comparison.ratio(points.ravel(), weight).reshape(points.shape)
         best = np.argmax(ratio, axis=1)
         rows = np.arange(len(points))
         brackets = np.column_stack(
             [points[rows, np.maximum(best - 1, 0)], points[rows, np.minimum(best + 1, 16)]]
         )
+        if np.all(np.diff(brackets, axis=1) <= _NARROW * brackets[:, 1:]):
+            break
     return [Peak(float(points[row, at]), float(ratio[row, at])) for row, at in enumerate(best)]

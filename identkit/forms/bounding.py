@@ -18,7 +18,6 @@ from identkit.forms.between_points import LEVEL_TOLERANCE, Peak, largest_ratio, 
 from identkit.forms.multiplicative import (
     CommonPart,
     PlantComparison,
-    WeightedNominal,
     relative_errors,
 )
 from identkit.forms.radius_curve import RadiusCurve, interpolated
@@ -155,10 +154,9 @@ class _Bounding:
         while self._look_between(weight) > 1.0 + NEARLY and rounds < MOST_ROUNDS:
             weight = self._refitted(weight)
             rounds += 1
-        bound = WeightedNominal(weight, self.common)
         starts = self._best_points(weight)
         peaks = self.each(
-            lambda k: largest_ratio(self.comparisons[k], bound, starts[k]), range(len(self.plants))
+            lambda k: largest_ratio(self.comparisons[k], weight, starts[k]), range(len(self.plants))
         )
         factor = max(max(peak.ratio for peak in peaks), self.curve.shortfall(weight))
         scaled = self._scaled(weight, factor)
@@ -265,9 +263,8 @@ class _Bounding:
         """
         missed = self._missed(weight, 1.0 + LEVEL_TOLERANCE)
         over = self.curve.excess_db(weight, self._profile()) - weight.excess_db
-        bound = WeightedNominal(weight, self.common)
         found = self.each(
-            lambda comparison: peaks_above(comparison, bound, 1.0 + LEVEL_TOLERANCE),
+            lambda comparison: peaks_above(comparison, weight, 1.0 + LEVEL_TOLERANCE),
             self.comparisons,
         )
         peaks = [peak for several in found for peak in several]

@@ -6,19 +6,17 @@ every base, because a double integrator common to plant and nominal divides out.
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
 
 import numpy as np
 
 from identkit.errors import InputError, Problem
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.arrays import ComplexArray, FloatArray
-from identkit.methods.level_crossings import EvenPart, LevelTest, even_part
-from identkit.methods.levelling import levelled_realisation, levelling
+from identkit.methods.level_crossings import LevelCrossings, SquaredGain
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import TWO_PI, ModalParameters, modal_response
-from identkit.methods.pade_delay import pade_error, pade_matrices, pade_order
-from identkit.methods.state_space import StateSpace, negative, parallel, series
+from identkit.methods.modal_transfer import modal_poles, modal_value, modal_zeros
+from identkit.methods.pade_delay import pade_error, pade_order, pade_phase, pade_poles, pade_real
 
 NAME = "multiplicative"
 DELAY_TOLERANCE = 1e-9
@@ -48,39 +46,27 @@ def relative_errors(
     return errors
 
 
-@dataclass(frozen=True)
 class CommonPart:
-    """What all comparisons with one nominal and one band share.
+    """What all comparisons with one nominal over one band share.
 
-    Attributes
+    Parameters
     ----------
     nominal
         The nominal.
     low, high
-        Hz.
-    flexible
-        Levelled realisation of the nominal without its delay.
-    delayed
-        The same with the Pade all-pass behind it.
+        Hz, ends of the band.
     """
 
-    nominal: NominalPlant
-    low: float
-    high: float
-    flexible: StateSpace = field(init=False)
-    delayed: StateSpace = field(init=False)
-
-    def __post_init__(self) -> None:
-        parameters, order = self.nominal.parameters, self.nominal.delay_order
-        flexible = levelled_realisation(parameters, levelling(parameters, self.high))
-        object.__setattr__(self, "flexible", flexible)
-        object.__setattr__(self, "delayed", _delayed(flexible, parameters.delay, order))
+    def __init__(self, nominal: NominalPlant, low: float, high: float) -> None:
+        self.nominal, self.low, self.high = nominal, low, high
+        # P/P0 has the nominal's zeros for poles; its all-pass has zeros opposite to its poles.
+        parameters, order = nominal.parameters, nominal.delay_order
+        opposite = -pade_poles(parameters.delay, order)
+        self.zeros = np.concatenate([modal_zeros(parameters), opposite])
 
 
 class PlantComparison:
-    """One plant against the nominal: exact ratio at points, level test between them.
-
-    The error's dynamics and even part do not depend on the weight and are kept.
+    """One plant against the nominal: the ratio at points, and its level test between them.
 
     Parameters
     ----------
@@ -98,58 +84,47 @@ class PlantComparison:
     def __init__(self, plant: ModalParameters, common: CommonPart) -> None:
         self.plant, self.common = plant, common
         phase = TWO_PI * common.high * plant.delay
-        order = pade_order(phase, DELAY_TOLERANCE)
-        self.delay_error = pade_error(phase, order)
-        factor = levelling(common.nominal.parameters, common.high)
-        own = _delayed(levelled_realisation(plant, factor), plant.delay, order)
-        self._offset = own.states
-        self._error = parallel([own, negative(common.delayed)])
-        self._even = even_part(self._error)
+        self.delay_order = pade_order(phase, DELAY_TOLERANCE)
+        self.delay_error = pade_error(phase, self.delay_order)
+        own = np.concatenate([modal_poles(plant), pade_poles(plant.delay, self.delay_order)])
+        self._poles = np.concatenate([own, common.zeros])
 
     def ratio(self, frequency: FloatArray, weight: MagnitudeWeight) -> FloatArray:
         """Return |P - P0| / |W P0| at `frequency` (points,) Hz with exact delays."""
         error = relative_errors(frequency, [self.plant], self.common.nominal)[0]
         return np.asarray(np.abs(error) / weight.magnitude(frequency), dtype=float)
 
-    def level_test(self, bound: "WeightedNominal") -> LevelTest:
-        """Return the pair P - P0 and W P0 as one system that shares the nominal's states."""
-        error, weight = self._error, bound.weight_states
-        first, total = error.states, error.states + weight.states
-        shared = self._offset + np.arange(self.common.flexible.states)
-        dynamics = np.zeros((total, total))
-        dynamics[:first, :first] = error.A
-        dynamics[first:, first:] = weight.A
-        dynamics[first:, shared] = weight.B @ self.common.flexible.C
-        forced = np.concatenate([error.B[:, 0], (weight.B @ self.common.flexible.D)[:, 0]])
-        row = np.zeros(total)
-        row[shared], row[first:] = np.split(bound.even.row, [shared.size])
-        padded = np.concatenate([self._even.row, np.zeros(weight.states)])
-        return LevelTest(
-            dynamics,
-            forced,
-            EvenPart(padded, self._even.constant),
-            EvenPart(row, bound.even.constant),
+    def level_test(self, weight: MagnitudeWeight) -> LevelCrossings:
+        """Return the level test of (P - P0)/(W P0), the plant's delay rational."""
+        gain = SquaredGain(
+            lambda omega: self._on_axis(omega) / weight.magnitude(omega / TWO_PI) ** 2,
+            lambda s: self._off_axis(s) / _squared_weight(weight, s),
+            np.concatenate([self._poles, weight.zeros]),
         )
+        return LevelCrossings(gain, TWO_PI * self.common.low, TWO_PI * self.common.high)
+
+    def _on_axis(self, omega: FloatArray) -> FloatArray:
+        """Return |P/P0 - 1|^2 on the axis."""
+        nominal = self.common.nominal
+        lag = pade_phase(omega * self.plant.delay, self.delay_order)
+        lag = lag - pade_phase(omega * nominal.parameters.delay, nominal.delay_order)
+        s = np.asarray(1j * omega, dtype=complex)
+        flexible = modal_value(s, self.plant) / modal_value(s, nominal.parameters)
+        return np.asarray(np.abs(flexible * np.exp(-1j * lag) - 1.0) ** 2, dtype=float)
+
+    def _off_axis(self, s: float) -> float:
+        """Return (P/P0 - 1)(s) (P/P0 - 1)(-s) at one real s."""
+        nominal = self.common.nominal
+        both: ComplexArray = np.array([s, -s], dtype=complex)
+        flexible = modal_value(both, self.plant) / modal_value(both, nominal.parameters)
+        allpass = pade_real(s * self.plant.delay, self.delay_order) / pade_real(
+            s * nominal.parameters.delay, nominal.delay_order
+        )
+        ratio = flexible * np.array([allpass, 1.0 / allpass]) - 1.0
+        return float((ratio[0] * ratio[1]).real)
 
 
-class WeightedNominal:
-    """W P0, levelled and without the all-pass, whose modulus is 1.
-
-    Parameters
-    ----------
-    weight
-        The weight.
-    common
-        The nominal's part.
-    """
-
-    def __init__(self, weight: MagnitudeWeight, common: CommonPart) -> None:
-        self.weight = weight
-        self.weight_states = StateSpace(*weight.state_space())
-        self.even = even_part(series(common.flexible, self.weight_states))
-
-
-def _delayed(plant: StateSpace, delay: float, order: int) -> StateSpace:
-    if not order or not delay:
-        return plant
-    return series(plant, StateSpace(*pade_matrices(delay, order)))
+def _squared_weight(weight: MagnitudeWeight, s: float) -> float:
+    """Return W(s) W(-s)."""
+    factors = (weight.zeros**2 - s**2) / (weight.poles**2 - s**2)
+    return float(weight.gain**2 * factors.prod().real)

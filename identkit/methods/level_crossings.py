@@ -1,128 +1,140 @@
-"""Every frequency at which a scalar error crosses a level, from one small eigenvalue problem.
+"""Every frequency at which the gain of a scalar rational function crosses a level.
 
-|E| = level |N| on the axis where F(s) = level^2 N(s) N(-s) - E(s) E(-s) vanishes. F's zeros are the
-eigenvalues of the Hamiltonian matrix of S. Boyd, V. Balakrishnan and P. Kabamba (Mathematics of
-Control, Signals and Systems 2, 1989, 207-219). F is even, so it is a function of lambda = s^2 with
-half as many zeros (C. F. Van Loan, Linear Algebra and its Applications 61, 1984, 233-251):
+|G(j omega)| = level where F = level^2 - G(s) G(-s) vanishes on the axis: the eigenvalues on the
+axis of the Hamiltonian matrix of S. Boyd, V. Balakrishnan, P. Kabamba (Mathematics of Control,
+Signals and Systems 2, 1989, 207-219). F is even, a function of lambda = s^2 with half as many zeros
+(C. F. Van Loan, Linear Algebra and its Applications 61, 1984, 233-251).
 
-    F = constant + Z(s) + Z(-s),  Z = row (sI - A)^{-1} B,  row = D J C + B' Y,  A'Y + YA + C'JC = 0
-      = constant + 2 row A (lambda I - A^2)^{-1} B.
+Squaring in state space would lose the deep minima of a nominal. F is therefore kept as its values
+at real nodes, one below each of its known poles, each with full relative accuracy, and interpolated
+with its true denominator (J.-P. Berrut, L. N. Trefethen, "Barycentric Lagrange interpolation", SIAM
+Review 46(3), 2004, 501-517). In z = 1/(lambda - shift), poles zeta_k, nodes z_j:
 
-The Lyapunov equation is that of the additive decomposition (B. D. O. Anderson, SIAM J. Control 5,
-1967, 171-182). N may be smaller than E at infinity: zeros are sought in z = 1/(lambda - shift),
-where F is not zero at infinity. Real arithmetic throughout: simple crossings come out exactly real.
+    F prod (z - zeta_k)/(z - z_j) = F(shift) + sum_j b_j/(z - z_j),
+    b_j = F_j prod_k (z_j - zeta_k) / prod_{i != j} (z_j - z_i),
+
+whose zeros are the eigenvalues of a real diagonal matrix less a rank-one term (G. H. Golub, "Some
+modified matrix eigenvalue problems", SIAM Review 15(2), 1973, 318-334).
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import solve_continuous_lyapunov
 
-from identkit.methods.arrays import FloatArray
-from identkit.methods.state_space import StateSpace
+from identkit.methods.arrays import ComplexArray, FloatArray
 
 NEAR_REAL = 1e-4
+NODE_GAP = 1e-4
+SHIFTS = (0.5, 0.25, 0.75)
+GOOD_SHIFT = 1e-2
 
 
 @dataclass(frozen=True)
-class EvenPart:
-    """G(s) G(-s) = constant + Z(s) + Z(-s) with Z = row (sI - A)^{-1} B of one scalar G.
+class SquaredGain:
+    """G(s) G(-s) of a real rational G, by its values and its poles.
 
     Attributes
     ----------
-    row
-        (states,)
-    constant
-        G(infinity)^2.
+    on_axis
+        Returns |G(j omega)|^2 at angular frequencies (points,) rad/s.
+    off_axis
+        Returns G(s) G(-s) at one real s > 0, rad/s.
+    poles
+        (terms,) poles of G with conjugates, rad/s; infinite ones for a numerator of higher degree.
+        Numerators of no higher degree than there are poles.
     """
 
-    row: FloatArray
-    constant: float
+    on_axis: Callable[[FloatArray], FloatArray]
+    off_axis: Callable[[float], float]
+    poles: ComplexArray
 
 
-@dataclass(frozen=True)
-class LevelTest:
-    """Error E and bound N as two outputs of one system with one input.
-
-    Attributes
-    ----------
-    A, B
-        (states, states), (states,): the common dynamics.
-    error, bound
-        The even parts of E and N over the common states.
-    """
-
-    A: FloatArray
-    B: FloatArray
-    error: EvenPart
-    bound: EvenPart
-
-
-def even_part(system: StateSpace) -> EvenPart:
-    """Return the even part of a scalar system.
+class LevelCrossings:
+    """Level test of one function over a band.
 
     Parameters
     ----------
-    system
-        One input, one output; no two poles may sum to zero (no poles on the axis).
-    """
-    if not system.states:
-        return EvenPart(np.zeros(0), float(system.D[0, 0] ** 2))
-    gramian = solve_continuous_lyapunov(system.A.T, -system.C.T @ system.C)
-    row = system.D[0, 0] * system.C[0] + system.B[:, 0] @ gramian
-    return EvenPart(row, float(system.D[0, 0] ** 2))
-
-
-def level_crossings(test: LevelTest, level: float, low: float, high: float) -> FloatArray:
-    """Return the angular frequencies in [low, high] at which |E| = level |N|, near misses included.
-
-    Parameters
-    ----------
-    test
-        The pair E, N.
-    level
-        Positive.
+    gain
+        The function.
     low, high
-        rad/s, 0 < low < high; they also set the scale of the shift.
-
-    Returns
-    -------
-    FloatArray
-        Ascending, rad/s. Zeros within 1e-4 of the axis are reported too: a false hit costs one
-        evaluation, a missed one would cost the certificate.
+        rad/s, 0 < low < high.
     """
-    if not len(test.B):
-        return np.zeros(0)
-    squared = test.A @ test.A
-    row = 2.0 * (level**2 * test.bound.row - test.error.row) @ test.A
-    constant = level**2 * test.bound.constant - test.error.constant
-    shift, value, solved, reverse = _shifted(squared, test.B, row, constant, low, high)
-    zeros = np.linalg.eigvals(np.outer(solved, row @ reverse) / value - reverse)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        squares = shift + 1.0 / zeros.astype(complex)
-    near = (np.abs(squares.imag) <= NEAR_REAL * np.abs(squares)) & (squares.real < 0.0)
-    omega = np.sqrt(-squares[near].real)
-    return np.unique(omega[(omega > low) & (omega < high)])
+
+    def __init__(self, gain: SquaredGain, low: float, high: float) -> None:
+        self.gain, self.low, self.high = gain, low, high
+        self.nodes = _nodes(gain.poles, low, high)
+        self.values = gain.on_axis(self.nodes)
+        self._shifted = [_Shifted(self, low * (high / low) ** share) for share in SHIFTS]
+
+    def at(self, level: float) -> FloatArray:
+        """Return the angular frequencies in the band at which |G| = level, near misses included.
+
+        Zeros within 1e-4 of the axis are reported too: a false hit costs one evaluation, a missed
+        one would cost the certificate.
+        """
+        if not self.nodes.size:
+            return np.zeros(0)
+        quality = [shifted.quality(level) for shifted in self._shifted]
+        best = next((k for k, good in enumerate(quality) if good > GOOD_SHIFT), None)
+        chosen = self._shifted[int(np.argmax(quality)) if best is None else best]
+        squares = chosen.zeros(level, self.values)
+        near = (np.abs(squares.imag) <= NEAR_REAL * np.abs(squares)) & (squares.real < 0.0)
+        omega = np.sqrt(-squares[near].real)
+        return np.unique(omega[(omega > self.low) & (omega < self.high)])
 
 
-def _shifted(
-    squared: FloatArray, b: FloatArray, row: FloatArray, constant: float, low: float, high: float
-) -> tuple[float, float, FloatArray, FloatArray]:
-    """Choose the shift; return it, F there, (shift - A^2)^{-1} B and (shift - A^2)^{-1}.
+class _Shifted:
+    """The interpolant around one shift."""
 
-    Of three shifts inside the band's range the one where F is largest beside its own terms.
+    def __init__(self, test: LevelCrossings, root: float) -> None:
+        self.shift = root**2
+        self.value = test.gain.off_axis(root)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            poles = 1.0 / (test.gain.poles**2 - self.shift)
+        poles = np.where(np.isfinite(test.gain.poles), poles, 0.0)
+        self.nodes = -1.0 / (test.nodes**2 + self.shift)
+        self.factor = _factors(self.nodes, poles)
+
+    def quality(self, level: float) -> float:
+        """Return |F| at the shift beside the size of its two terms."""
+        return abs(level**2 - self.value) / (level**2 + abs(self.value))
+
+    def zeros(self, level: float, values: FloatArray) -> ComplexArray:
+        """Return the zeros of F, lambda plane; infinite where F is no smaller at the shift."""
+        terms = self.factor * (level**2 - values) / (level**2 - self.value)
+        root = np.sqrt(np.abs(terms))
+        matrix = np.diag(self.nodes) - np.outer(root, np.sign(terms) * root)
+        found = np.linalg.eigvals(matrix).astype(complex)
+        found[found == 0.0] = np.finfo(float).tiny
+        return np.asarray(self.shift + 1.0 / found, dtype=complex)
+
+
+def _nodes(poles: ComplexArray, low: float, high: float) -> FloatArray:
+    """Place one node below every pole: at its modulus, a pair one damping ratio to either side.
+
+    So nodes lie as dense as the function varies, and the factors stay near 1.
     """
-    best: tuple[float, float, FloatArray, FloatArray] | None = None
-    quality = 0.0
-    for shift in np.geomspace(low, high, 5)[1:4] ** 2:
-        reverse = np.linalg.inv(shift * np.eye(len(b)) - squared)
-        solved = reverse @ b
-        value = constant + row @ solved
-        size = abs(constant) + np.abs(row) @ np.abs(solved)
-        if best is None or abs(value) > quality * size:
-            best = (float(shift), float(value), solved, reverse)
-            quality = float(abs(value) / size)
-        if quality > 1e-3:
-            break
-    assert best is not None
-    return best
+    size = np.abs(poles)
+    usual = np.isfinite(size) & (size > 0.0)
+    safe = np.where(usual, poles, 1.0)
+    damping = np.abs(safe.real) / np.abs(safe)
+    place = np.log(np.abs(safe)) + np.sign(safe.imag) * damping
+    place = np.where(size == 0.0, np.log(low / 10.0), place)
+    place = np.sort(np.where(np.isinf(size), np.log(10.0 * high), place))
+    for k in range(1, place.size):
+        place[k] = max(place[k], place[k - 1] + NODE_GAP)
+    return np.asarray(np.exp(place), dtype=float)
+
+
+def _factors(nodes: FloatArray, poles: ComplexArray) -> FloatArray:
+    """Return prod_k (z_j - zeta_k) / prod_{i != j} (z_j - z_i), paired so that products stay small.
+
+    Poles are matched to nodes by order of modulus: each ratio is near 1 away from its own node.
+    """
+    order = np.argsort(np.abs(poles))[::-1]
+    above = nodes[:, None] - poles[order][None, :]
+    below = nodes[:, None] - nodes[np.argsort(np.abs(nodes))[::-1]][None, :]
+    own = below == 0.0
+    product = np.prod(above / np.where(own, 1.0, below), axis=1)
+    return np.asarray(product.real, dtype=float)

@@ -13,7 +13,7 @@ import numpy as np
 
 from identkit.methods.arrays import ComplexArray, FloatArray
 
-HIGHEST_ORDER = 14
+HIGHEST_ORDER = 40
 
 
 def pade_matrices(
@@ -106,7 +106,7 @@ def pade_order(phase: float, tolerance: float) -> int:
     Raises
     ------
     ValueError
-        If no order up to 14 is good enough: the delay is too long for a rational stand-in.
+        If no order up to 40 is good enough: the delay is too long for a rational stand-in.
     """
     for order in range(HIGHEST_ORDER + 1):
         if pade_error(phase, order) <= tolerance:
@@ -117,10 +117,21 @@ def pade_order(phase: float, tolerance: float) -> int:
     )
 
 
+def pade_poles(delay: float, order: int) -> ComplexArray:
+    """Return the poles of the approximant, rad/s."""
+    if not order or not delay:
+        return np.zeros(0, dtype=complex)
+    return np.asarray(_unit_poles(order) / delay, dtype=complex)
+
+
 @cache
-def pade_poles(order: int) -> tuple[ComplexArray, ComplexArray, float]:
-    """Return poles, residues and constant of the approximant of e^{-s} (unit delay)."""
-    a, b, c, d = _unit_ladder(order)
-    poles, vectors = np.linalg.eig(a)
-    residues = (c @ vectors)[0] * np.linalg.solve(vectors, b)[:, 0]
-    return poles.astype(complex), residues.astype(complex), float(d[0, 0])
+def _unit_poles(order: int) -> ComplexArray:
+    return np.asarray(np.linalg.eigvals(_unit_ladder(order)[0]), dtype=complex)
+
+
+def pade_real(x: float, order: int) -> float:
+    """Return the approximant at s tau = x, real."""
+    half, tail = x / 2.0, np.inf
+    for k in range(order, 0, -1):
+        tail = (2 * k - 1) + half**2 / tail
+    return float((tail - half) / (tail + half)) if order else 1.0

@@ -13,10 +13,10 @@ from identkit.grids import Gridded, datasets
 from identkit.methods.arrays import FloatArray
 from identkit.methods.enclosing_disc import EnclosingDisc, enclosing_disc
 from identkit.methods.modal_model import TWO_PI, ModalParameters, modal_response
+from identkit.methods.modal_transfer import modal_zeros
 from identkit.methods.pade_delay import pade_order
 from identkit.methods.resonance_grid import resonance_grid
 from identkit.methods.tightest_nominal import tightest_nominal
-from identkit.methods.transmission_zeros import finite_zeros
 from identkit.stages.fitted_plants import FittedPlants, fitted_plants
 
 DELAY_TOLERANCE = 1e-3
@@ -193,8 +193,8 @@ def _grid(
     band: tuple[float, float],
     lines: FloatArray | None,
 ) -> FloatArray:
-    largest = 4.0 * TWO_PI * band[1]
-    zeros = np.concatenate([finite_zeros(each.realisation(), largest) for each in nominals])
+    zeros = np.concatenate([modal_zeros(each.parameters) for each in nominals])
+    zeros = zeros[(zeros != 0.0) & (np.abs(zeros) < 4.0 * TWO_PI * band[1])]
     everyone = (*plants.parameters, *[each.parameters for each in nominals])
     frequency = [plant.modal_frequency for plant in everyone]
     damping = [plant.damping_ratio for plant in everyone]

@@ -82,7 +82,7 @@ def test_independent_of_units_and_of_the_number_of_threads() -> None:
     profile = [(0.1, 1.0), (1.0, 3.0)]
     other = bound_plants(
         [scaled(one, 1e-3, 1e6) for one in PLANTS],
-        replace(kilo, nominal=NominalPlant(scaled(plant(), 1e-3, 1e6), 3)),
+        CommonPart(NominalPlant(scaled(plant(), 1e-3, 1e6), 3), kilo.low, kilo.high),
         COARSE * 1e-3,
         BoundOptions(order=4, profile=profile),
     )

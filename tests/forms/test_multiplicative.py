@@ -8,7 +8,6 @@ from identkit.forms.between_points import largest_ratio, peaks_above
 from identkit.forms.multiplicative import (
     CommonPart,
     PlantComparison,
-    WeightedNominal,
     accepts,
     relative_errors,
 )
@@ -51,29 +50,29 @@ def test_relative_errors_are_plain_ratios_with_exact_delays() -> None:
 @pytest.mark.parametrize("base", ["pivot", "free", "none"])
 def test_largest_ratio_against_a_dense_grid(base: str) -> None:
     common = CommonPart(NominalPlant(plant(base=base), 3), *BAND)
-    bound = WeightedNominal(sample_weight(), common)
+    weighting = sample_weight()
     dense = np.geomspace(*BAND, 40001)
     for one in family(6, 3, base=base):
         comparison = PlantComparison(one, common)
-        ratio = comparison.ratio(dense, bound.weight)
+        ratio = comparison.ratio(dense, weighting)
         for start in (60.0, float(dense[np.argmax(ratio)])):
-            found = largest_ratio(comparison, bound, start)
+            found = largest_ratio(comparison, weighting, start)
             assert found.ratio >= ratio.max() * (1.0 - 1e-7)
             assert found.ratio == pytest.approx(ratio.max(), rel=1e-3)
-            at = comparison.ratio(np.array([found.frequency]), bound.weight)[0]
+            at = comparison.ratio(np.array([found.frequency]), weighting)[0]
             assert at == pytest.approx(found.ratio, rel=1e-12)
 
 
 @pytest.mark.parametrize("level", [0.2, 1.0, 3.0])
 def test_one_peak_for_every_interval_above_a_level(level: float) -> None:
     common = CommonPart(NominalPlant(plant(), 3), *BAND)
-    bound = WeightedNominal(sample_weight(), common)
+    weighting = sample_weight()
     dense = np.geomspace(*BAND, 60001)
     for one in family(6, 8):
         comparison = PlantComparison(one, common)
-        above = comparison.ratio(dense, bound.weight) > level
+        above = comparison.ratio(dense, weighting) > level
         edges = np.flatnonzero(np.diff(np.concatenate([[0], above.astype(int), [0]])))
-        peaks = np.array([p.frequency for p in peaks_above(comparison, bound, level)])
+        peaks = np.array([p.frequency for p in peaks_above(comparison, weighting, level)])
         for first, last in edges.reshape(-1, 2):
             inside = (peaks >= dense[max(first - 1, 0)]) & (peaks <= dense[min(last, 60000)])
             assert inside.any()
@@ -82,19 +81,19 @@ def test_one_peak_for_every_interval_above_a_level(level: float) -> None:
 def test_plant_equal_to_the_nominal_but_for_the_stand_in_of_its_delay() -> None:
     # What is left is the all-pass error of the nominal alone, far below the weight.
     common = CommonPart(NominalPlant(plant(), 5), *BAND)
-    bound = WeightedNominal(sample_weight(), common)
-    found = largest_ratio(PlantComparison(plant(), common), bound, 1000.0)
+    weighting = sample_weight()
+    found = largest_ratio(PlantComparison(plant(), common), weighting, 1000.0)
     assert found.ratio < 1e-4
 
 
 def test_right_half_plane_delay_and_overdamped_pivot_are_fine() -> None:
     odd = replace(plant(), delay=-2e-6, base_damping_ratio=1.0)
     common = CommonPart(NominalPlant(plant(), 3), *BAND)
-    bound = WeightedNominal(sample_weight(), common)
+    weighting = sample_weight()
     comparison = PlantComparison(odd, common)
     dense = np.geomspace(*BAND, 40001)
-    found = largest_ratio(comparison, bound, 100.0)
-    assert found.ratio == pytest.approx(comparison.ratio(dense, bound.weight).max(), rel=1e-4)
+    found = largest_ratio(comparison, weighting, 100.0)
+    assert found.ratio == pytest.approx(comparison.ratio(dense, weighting).max(), rel=1e-4)
 
 
 def test_only_scalar_plants_are_accepted() -> None:

@@ -8,7 +8,6 @@ from identkit.forms.bounding import BoundOptions, bound_plants
 from identkit.forms.multiplicative import (
     CommonPart,
     PlantComparison,
-    WeightedNominal,
     relative_errors,
 )
 from identkit.forms.nominal_plant import NominalPlant
@@ -60,7 +59,7 @@ def test_first_order_delay_weight_does_not_cover() -> None:
         1, 0.0, 0.0, 0.0, 0.0, np.array([-2.0 / THETA + 0j]), np.zeros(1, dtype=complex), 2.0, 0
     )
     comparison = PlantComparison(gain_and_delay(1.0, THETA), common)
-    found = largest_ratio(comparison, WeightedNominal(weight, common), 0.02 * high)
+    found = largest_ratio(comparison, weight, 0.02 * high)
     assert found.ratio == pytest.approx(1.2157293, abs=2e-6)
     assert 2.0 * np.pi * found.frequency * THETA == pytest.approx(2.5711, abs=2e-3)
 

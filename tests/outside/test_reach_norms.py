@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from identkit.forms.between_points import largest_ratio
-from identkit.forms.multiplicative import CommonPart, PlantComparison, WeightedNominal
+from identkit.forms.multiplicative import CommonPart, PlantComparison
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import ModalParameters
@@ -49,6 +49,6 @@ def test_largest_ratio_against_slycot(seed: int) -> None:
     )  # fmt: skip
     common = CommonPart(NominalPlant(nominal, 0), 1.0, 1e6)
     comparison = PlantComparison(one, common)
-    found = largest_ratio(comparison, WeightedNominal(WEIGHT, common), 1e3)
+    found = largest_ratio(comparison, WEIGHT, 1e3)
     assert found.ratio == pytest.approx(expected, rel=1e-6)
     assert 2.0 * np.pi * found.frequency == pytest.approx(peak, rel=1e-3)
