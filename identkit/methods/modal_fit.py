@@ -29,7 +29,7 @@ from identkit.methods.modal_least_squares import (
 from identkit.methods.modal_model import BASES
 from identkit.methods.modal_problem import ModalProblem
 from identkit.methods.modal_solution import Solution, scale_data, solve
-from identkit.methods.order_settling import Request, mode_cap, settle
+from identkit.methods.order_settling import Request, improves, mode_cap, settle
 from identkit.methods.residual_variance import start_variance, updated_variance
 from identkit.methods.starting_poles import starting_point
 from identkit.outcomes import Outcome
@@ -148,14 +148,23 @@ def _fit(
 
 
 def _general_if_needed(solution: Solution, request: Request) -> Solution:
-    """Likelihood-ratio test of real against general residues at the same modes."""
+    """Likelihood-ratio test of real against general residues at the same modes.
+
+    Where it asks for general residues, the order is settled again with them, both from these
+    modes and from starting poles chosen with rates, and the better of the two is kept.
+    """
     modes = solution.shape.modes
+    data = solution.problem.data
     if modes == 0:
         return solution
-    problem = ModalProblem(solution.problem.data, replace(solution.shape, general=True))
+    problem = ModalProblem(data, replace(solution.shape, general=True))
     general = solve(problem, solution.poles)
-    freedom = 2 * problem.data.x.size - problem.shape.parameters
+    freedom = 2 * data.x.size - problem.shape.parameters
     noise = max(1.0, general.cost / max(freedom, 1))
     if solution.cost - general.cost < chi2.isf(LIKELIHOOD_RATIO_LEVEL, modes) * noise:
         return solution
-    return settle(general, replace(request, general=True), noise)
+    request = replace(request, general=True)
+    general = settle(general, request, noise)
+    poles, number, scale = starting_point(data, request)
+    again = settle(solve(ModalProblem(data, request.shape(number)), poles), request, scale)
+    return again if improves(again, general, min(noise, scale)) else general

@@ -130,8 +130,17 @@ def score_test(solution: Solution) -> list[Candidate]:
     places = np.concatenate([_shortlist(data, solution), _near_modes(solution)])
     places = places[np.exp(places[:, 0]) < 1.2]
     gains = _projected_gains(solution, places)
-    order = np.argsort(-gains)
-    return [Candidate(float(places[k, 0]), float(places[k, 1]), float(gains[k])) for k in order]
+    chosen: list[Candidate] = []
+    for k in np.argsort(-gains):
+        new = Candidate(float(places[k, 0]), float(places[k, 1]), float(gains[k]))
+        if all(_apart(new, one) for one in chosen):
+            chosen.append(new)
+    return chosen
+
+
+def _apart(new: Candidate, old: Candidate) -> bool:
+    narrow = np.exp(min(new.log_damping, old.log_damping))
+    return abs(new.log_frequency - old.log_frequency) > 0.5 * float(narrow)
 
 
 def candidate_grid(x: FloatArray) -> FloatArray:

@@ -24,6 +24,7 @@ from identkit.methods.order_selection import (
 
 MODE_CAP = 24
 WIDEST = 1.5
+TRIALS = 3
 
 
 @dataclass(frozen=True)
@@ -57,7 +58,11 @@ def settle(solution: Solution, request: Request, scale: float) -> Solution:
     solution = _without_stray(solution)
     for _ in range(2 * MODE_CAP):
         solution = with_leading_pivot(solution)
-        changed = _dropped(solution, request, scale) or _added(solution, request, scale)
+        changed = (
+            _dropped(solution, request, scale)
+            or _resplit(solution)
+            or _added(solution, request, scale)
+        )
         if changed is None:
             return solution
         solution = changed
@@ -84,12 +89,17 @@ def leading_first(static: FloatArray) -> list[int]:
     return [lead, *(k for k in range(static.size) if k != lead)]
 
 
-def _criterion(solution: Solution, scale: float) -> float:
+def improves(trial: Solution, solution: Solution, scale: float) -> bool:
+    """Return whether the extended information criterion prefers `trial` over `solution`."""
     points = solution.problem.data.x.size
-    freedom = max(2 * points - solution.shape.parameters, 1)
-    noise = max(1.0, min(scale, solution.cost / freedom))
-    shape = solution.shape
-    return information_criterion(solution.cost, noise, shape.parameters, shape.modes, points)
+    best = min(trial, solution, key=lambda one: one.cost)
+    noise = best.cost / max(2 * points - best.shape.parameters, 1)
+    noise = max(1.0, min(scale, noise))
+    first, second = (
+        information_criterion(one.cost, noise, one.shape.parameters, one.shape.modes, points)
+        for one in (trial, solution)
+    )
+    return first < second
 
 
 def _dropped(solution: Solution, request: Request, scale: float) -> Solution | None:
@@ -98,14 +108,12 @@ def _dropped(solution: Solution, request: Request, scale: float) -> Solution | N
         return None
     wald = wald_statistics(solution)
     weakest = int(np.argmin(wald))
-    trial = resized(solution, drop=weakest)
     if request.modes is not None:
-        return trial
-    price = mode_price(request, solution.problem.data.x.size)
-    if wald[weakest] > price * scale:
+        return resized(solution, drop=weakest)
+    if wald[weakest] > mode_price(request, solution.problem.data.x.size) * scale:
         return None
-    better = _criterion(trial, scale) <= _criterion(solution, scale)
-    return trial if better else None
+    trial = resized(solution, drop=weakest)
+    return trial if improves(trial, solution, scale) else None
 
 
 def _added(solution: Solution, request: Request, scale: float) -> Solution | None:
@@ -113,13 +121,32 @@ def _added(solution: Solution, request: Request, scale: float) -> Solution | Non
     most = mode_cap(points) if request.modes is None else request.modes
     if modes >= most or 2 * points <= request.shape(modes + 1).parameters + 4:
         return None
-    for candidate in score_test(solution)[:2]:
+    for candidate in score_test(solution)[:TRIALS]:
         if request.modes is None and candidate.gain < _entry(solution, request):
             return None
         trial = _without_stray(resized(solution, add=candidate))
         if trial.shape.modes > modes and (
-            request.modes is not None or _criterion(trial, scale) < _criterion(solution, scale)
+            request.modes is not None or improves(trial, solution, scale)
         ):
+            return trial
+    return None
+
+
+def _resplit(solution: Solution) -> Solution | None:
+    """Pull apart two modes that fell on one another, where that lowers the cost."""
+    first = solution.shape.sections - solution.shape.modes
+    frequency, damping = solution.poles.log_frequency, solution.poles.log_damping
+    order = first + np.argsort(frequency[first:])
+    gap = np.diff(frequency[order])
+    width = np.exp(np.minimum(damping[order[:-1]], damping[order[1:]]))
+    for k in np.flatnonzero(gap < 0.3 * width):
+        low, high = order[k], order[k + 1]
+        moved, narrowed = frequency.copy(), damping.copy()
+        middle = 0.5 * (frequency[low] + frequency[high])
+        moved[[low, high]] = middle - 0.7 * width[k], middle + 0.7 * width[k]
+        narrowed[[low, high]] -= np.log(2.0)
+        trial = solve(solution.problem, Poles(solution.poles.delay, moved, narrowed))
+        if trial.cost < solution.cost - 1.0:
             return trial
     return None
 

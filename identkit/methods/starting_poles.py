@@ -26,7 +26,7 @@ from identkit.methods.order_settling import (
 )
 from identkit.methods.pole_relocation import relocate_poles, starting_sections
 
-START_SECTIONS = 16
+START_SECTIONS = 24
 
 
 def starting_point(data: ScaledData, request: Request) -> tuple[Poles, int, float]:
