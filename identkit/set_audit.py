@@ -16,8 +16,10 @@ from identkit.grids import load
 from identkit.plant_set.files import load_set
 from identkit.plant_set.model import PlantSet
 from identkit.readers.campaign import find_files, read_campaign
-from identkit.settings import ResponseSettings, load_settings
+from identkit.settings import Settings, load_settings
 from identkit.stages.audit import all_held, audit, failed_sentences
+from identkit.stages.fit import fit_modes
+from identkit.stages.screen import screen
 
 ROWS_SHOWN = 40
 ORDER = {"not held": 0, "cannot tell": 1, "not judged": 2, "held": 3}
@@ -74,15 +76,26 @@ def _audit_new(plant_set: PlantSet, files: Sequence[Path], study: Path | None) -
     missing = [path for path in files if not path.exists()]
     if missing:
         raise InputError([Problem(str(path), "no such file", "a file") for path in missing])
-    if study is None:
-        options, folder, pattern = ResponseSettings(), Path(), None
-    else:
-        settings = load_settings(study)
-        options, folder, pattern = settings.responses, settings.folder, settings.responses.files
+    settings = load_settings(study) if study is not None else _settings_of(plant_set)
+    pattern = settings.responses.files if study is not None else None
+    folder = settings.folder if study is not None else Path()
     found = find_files(list(files), folder=folder, pattern=pattern)
-    table = audit(plant_set, responses=read_campaign(found, options, folder=folder))
+    responses = read_campaign(found, settings.responses, folder=folder)
+    screening = screen(
+        responses, band=plant_set.band, **settings.screen.model_dump(exclude={"leave_out"})
+    )
+    model = settings.model.model_dump(exclude={"sharing"})
+    fits = fit_modes(responses, screening, **model)
+    table = audit(plant_set, fits, responses, screening)
     # files named one by one are asked about one by one, whatever the set left out when it was made
     return table.assign(excluded=("response", np.zeros(table.sizes["response"], dtype=bool)))
+
+
+def _settings_of(plant_set: PlantSet) -> Settings:
+    """Return the settings the set was made with, as far as its file tells them."""
+    known = plant_set.provenance.settings
+    tables = {name: known[name] for name in ("screen", "model") if name in known}
+    return Settings.from_tables(tables, path="study.toml")
 
 
 def _text(table: xr.Dataset) -> str:
@@ -111,9 +124,14 @@ def _cells(table: xr.Dataset, k: int) -> list[str]:
         str(row["verdict"].values),
         f"{_reach(table, k):.3f}",
         f"{hertz:.5g}",
-        str(row["nearest_mode"].values),
+        _named_mode(str(row["nearest_mode"].values)),
         str(row["reason"].values),
     ]
+
+
+def _named_mode(name: str) -> str:
+    """Return the name of a population mode; modes of an unpaired fit have only a number."""
+    return "" if name.isdigit() else name
 
 
 def _reach(table: xr.Dataset, k: int) -> float:
