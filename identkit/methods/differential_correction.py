@@ -24,6 +24,7 @@ MAX_PROGRAMS = 150
 CEILING_SLACK = 1e-9
 MOMENTUM = 1.0
 NEARLY_COMMON = 0.5
+SOLVER_NOISE = 1e-9
 
 
 @dataclass(frozen=True)
@@ -272,7 +273,7 @@ class _Descent:
     def _accept(self, solution: _Solution) -> bool:
         """Keep the pair if it is positive and better; it then weights the next program."""
         n, d = self._relative_values(solution)
-        if n.min() <= 0.0 or d.min() <= 0.0:
+        if n.min() <= SOLVER_NOISE or d.min() <= SOLVER_NOISE:
             return False
         numerator, denominator = self.scaled.numerator * n, self.scaled.denominator * d
         factor, level = self.bounds.normalised(numerator / denominator)
@@ -334,14 +335,22 @@ def cancelling_factor(
     """
     common = np.ones(x.size)
     zeros, poles = (basis.roots(part) for basis, part in zip(bases, parts, strict=True))
+    resolved = _end_resolution(x)
     for pole in poles[poles.imag >= 0.0]:
-        distance = max(abs(pole.imag), abs(pole.real) - 1.0, 1e-14)
+        at_end = abs(abs(pole.real) - 1.0) < 2.0 * resolved and abs(pole.imag) < 2.0 * resolved
+        distance = max(abs(pole.imag), abs(pole.real) - 1.0, resolved if at_end else 1e-14)
         if not zeros.size or np.abs(zeros - pole).min() > NEARLY_COMMON * distance:
             continue
-        width = max(0.5 * abs(1.0 - pole.real**2), distance)
+        width = 1.0 if at_end else max(0.5 * abs(1.0 - pole.real**2), distance)
         dip = ((x - pole.real) ** 2 + distance**2) / ((x - pole.real) ** 2 + width**2)
         common = common * (dip if pole.imag > 0.0 else np.sqrt(dip))
     return common
+
+
+def _end_resolution(x: FloatArray) -> float:
+    """Return the smallest distance from -1 or 1 at which the points can tell two roots apart."""
+    inside = 1.0 - np.abs(x[np.abs(x) < 1.0])
+    return float(inside.min()) if inside.size else 1e-14
 
 
 def _row_factors(

@@ -39,6 +39,7 @@ LADDER = (1, 2, 3, 4, 6, 8, 10, 12, 16, 20, 24)
 LADDER_TOLERANCE_DB = 0.2
 DAMPING_PROGRAMS = 120
 ROUND_PROGRAMS = 50
+RESTART_PROGRAMS = 30
 RESTARTS = ((0.01, 1.0), (0.03, 1.0), (0.01, 4.0), (0.03, 16.0), (0.03, 64.0))
 FAR = 1e6
 TWO_PI = 2.0 * np.pi
@@ -122,7 +123,10 @@ def fit_magnitude_weight(
     cap
         (points,) absolute ceiling on |W|; inf for none. Held at its end values outside the points.
     damping_floor
-        Least damping ratio of every pole and zero.
+        Least damping ratio of every pole and zero. The default lies below the damping of the
+        structural resonances that make peaks in a radius (0.5 to 2 %, common practice), so peaks
+        can be followed; a higher floor is paid for in dB wherever the radius is sharper, and
+        `damping_cost_db` says how much.
     tolerance_db
         Gap to the proven optimum at which the search may end, damping cost apart.
     outside_factor
@@ -146,6 +150,12 @@ def fit_magnitude_weight(
         If arrays disagree in length, hold values out of range, or are too short for the order.
     InfeasibleError
         If no weight of this order stays below the ceilings; names the frequency that decides.
+
+    Notes
+    -----
+    Holds at the points only: between them the caller has to look, add points and fit again. At
+    orders far above what the radius needs (an excess of some tenths of a dB) the floor may stay
+    unproven; `gap_db` then says so by its size. Scalar weights only.
     """
     problem = radius_problem(
         frequency_hz,
@@ -254,7 +264,7 @@ class WeightClimb:
                 self.problem.squared_parts(_moved(poles, damping), _moved(zeros, damping)),
                 tolerance=_relative(0.5 * relaxed * self.tolerance_db),
                 initial=found.best,
-                most_programs=ROUND_PROGRAMS,
+                most_programs=RESTART_PROGRAMS,
             )
             self._keep(again)
             found = replace(again, floor=max(again.floor, found.floor))
