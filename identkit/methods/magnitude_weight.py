@@ -56,7 +56,8 @@ class MagnitudeWeight:
     excess_db
         Largest 20 log10 |W| / (radius profile) over the points, recomputed from poles and zeros.
     floor_db
-        No weight of this order, whatever its damping, has a smaller excess: proven lower bound.
+        No weight of this order under the same conditions, whatever its damping, has a smaller
+        excess: proven lower bound.
     gap_db
         excess_db - floor_db.
     damping_cost_db
