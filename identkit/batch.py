@@ -6,6 +6,7 @@ runs on one thread everywhere, so results are the same bit for bit for any numbe
 
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from importlib import import_module
 from multiprocessing import get_context
 from typing import TypeVar
 
@@ -94,4 +95,7 @@ def _work_chunk(work: Callable[[Element], Result], part: Sequence[Element]) -> l
 
 def _one_thread() -> None:
     """Hold linear algebra of this worker to one thread for as long as it lives."""
+    # a library that is not loaded yet cannot be held: numpy and scipy each bring their own
+    for library in ("numpy", "scipy.linalg"):
+        import_module(library)
     threadpool_limits(limits=1)
