@@ -58,6 +58,7 @@ def _chunk_results(
     work: Callable[[Element], Result], parts: list[Sequence[Element]], jobs: int
 ) -> Iterator[tuple[int, list[Result]]]:
     if jobs <= 1:
+        _load_linear_algebra()
         for index, part in enumerate(parts):
             with threadpool_limits(limits=1):
                 result = _work_chunk(work, part)
@@ -95,7 +96,11 @@ def _work_chunk(work: Callable[[Element], Result], part: Sequence[Element]) -> l
 
 def _one_thread() -> None:
     """Hold linear algebra of this worker to one thread for as long as it lives."""
-    # a library that is not loaded yet cannot be held: numpy and scipy each bring their own
+    _load_linear_algebra()
+    threadpool_limits(limits=1)
+
+
+def _load_linear_algebra() -> None:
+    """Load what brings threads of its own; a library that is not loaded yet cannot be held."""
     for library in ("numpy", "scipy.linalg"):
         import_module(library)
-    threadpool_limits(limits=1)
