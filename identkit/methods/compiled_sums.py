@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from identkit.methods.arrays import FloatArray, IntArray
+from identkit.methods.arrays import ComplexArray, FloatArray, IntArray
 
 njit: Any = None
 with suppress(ImportError):
@@ -107,6 +107,51 @@ def _window_gains(
             out[k] += slope_match * slope_match / slope_energy
 
 
+def relocation_rows_numpy(
+    x: FloatArray,
+    weight: FloatArray,
+    target: ComplexArray,
+    stiffness: FloatArray,
+    rate: FloatArray,
+    out: FloatArray,
+) -> None:
+    """Write w/D_k, w jx/D_k, -target/D_k, -target jx/D_k as four blocks of rows."""
+    points, count = x.size, stiffness.size
+    inverse = 1.0 / (stiffness[:, None] - x * x + 1j * rate[:, None] * x)
+    for block, factor in enumerate((weight + 0j, 1j * x * weight, -target, -1j * x * target)):
+        rows = factor * inverse
+        out[block * count : (block + 1) * count, :points] = rows.real
+        out[block * count : (block + 1) * count, points:] = rows.imag
+
+
+def _relocation_rows(
+    x: FloatArray,
+    weight: FloatArray,
+    target: ComplexArray,
+    stiffness: FloatArray,
+    rate: FloatArray,
+    out: FloatArray,
+) -> None:
+    points, count = x.size, stiffness.size
+    for k in range(count):
+        a, b = stiffness[k], rate[k]
+        for i in range(points):
+            real = a - x[i] * x[i]
+            imag = b * x[i]
+            scale = 1.0 / (real * real + imag * imag)
+            real, imag = real * scale, -imag * scale
+            out[k, i] = weight[i] * real
+            out[k, points + i] = weight[i] * imag
+            out[count + k, i] = -x[i] * weight[i] * imag
+            out[count + k, points + i] = x[i] * weight[i] * real
+            turned_real = imag * target[i].imag - real * target[i].real
+            turned_imag = -real * target[i].imag - imag * target[i].real
+            out[2 * count + k, i] = turned_real
+            out[2 * count + k, points + i] = turned_imag
+            out[3 * count + k, i] = -x[i] * turned_imag
+            out[3 * count + k, points + i] = x[i] * turned_real
+
+
 def _section_rows(
     x: FloatArray, weight: FloatArray, stiffness: FloatArray, rate: FloatArray, out: FloatArray
 ) -> None:
@@ -155,7 +200,9 @@ if njit is None:  # pragma: no cover - exercised where numba is absent
     section_rows = section_rows_numpy
     derivative_rows = derivative_rows_numpy
     window_gains = window_gains_numpy
+    relocation_rows = relocation_rows_numpy
 else:
     section_rows = njit(cache=True, error_model="numpy")(_section_rows)
     derivative_rows = njit(cache=True, error_model="numpy")(_derivative_rows)
     window_gains = njit(cache=True, error_model="numpy")(_window_gains)
+    relocation_rows = njit(cache=True, error_model="numpy")(_relocation_rows)

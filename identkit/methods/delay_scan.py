@@ -13,7 +13,7 @@ from scipy.linalg import solve_triangular
 from identkit.methods.arrays import FloatArray
 from identkit.methods.modal_problem import ScaledData, as_reals, scaled_factor
 
-STEP = 0.25
+STEP = 0.5
 LOWEST, HIGHEST = -1.0, 40.0
 
 

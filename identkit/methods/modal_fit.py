@@ -13,6 +13,7 @@ capped; reaching the cap is an outcome of its own.
 """
 
 from dataclasses import replace
+from typing import TypeAlias
 
 import numpy as np
 from scipy.stats import chi2
@@ -29,13 +30,15 @@ from identkit.methods.modal_least_squares import (
 from identkit.methods.modal_model import BASES
 from identkit.methods.modal_problem import ModalProblem
 from identkit.methods.modal_solution import Solution, scale_data, solve
-from identkit.methods.order_settling import Request, improves, mode_cap, settle
+from identkit.methods.order_settling import Request, mode_cap, settle
 from identkit.methods.residual_variance import start_variance, updated_variance
 from identkit.methods.starting_poles import starting_point
 from identkit.outcomes import Outcome
 
 LIKELIHOOD_RATIO_LEVEL = 1e-3
 RESIDUES = ("real", "general", "auto")
+
+Measured: TypeAlias = tuple[FloatArray, ComplexArray, FloatArray]
 
 
 def fit_modal_model(
@@ -95,9 +98,11 @@ def fit_modal_model(
         return empty_fit(request.shape(0), refused, int(use.sum()), variance is None)
     frequency, response = frequency[use], response[use]
     spread = start_variance(frequency, response) if variance is None else variance[use]
-    solution, spread = _fit(frequency, response, spread, request, variance is None)
+    data = (frequency, response, spread)
     if residues == "auto":
-        solution = _general_if_needed(solution, request)
+        solution = _fit_either(data, request, variance is None)
+    else:
+        solution = _fit(data, request, variance is None)
     capped = number is None and solution.shape.modes >= mode_cap(frequency.size)
     return as_fit(solution, variance is None, Outcome.MODE_LIMIT if capped else Outcome.DONE)
 
@@ -127,44 +132,57 @@ def _check(
         raise InputError(problems)
 
 
-def _fit(
-    frequency: FloatArray,
-    response: ComplexArray,
-    variance: FloatArray,
-    request: Request,
-    estimated: bool,
-) -> tuple[Solution, FloatArray]:
+def _fit(measured: Measured, request: Request, estimated: bool) -> Solution:
     """Start, refine and settle; update the variance; settle again."""
+    frequency, response, variance = measured
     data = scale_data(frequency, response, variance)
     start, modes, scale = starting_point(data, request)
-    problem = ModalProblem(data, request.shape(modes))
-    solution = settle(solve(problem, start), request, scale)
+    solution = solve(ModalProblem(data, request.shape(modes)), start)
+    return _settled(solution, measured, request, estimated, scale)
+
+
+def _settled(
+    solution: Solution, measured: Measured, request: Request, estimated: bool, scale: float
+) -> Solution:
+    frequency, response, variance = measured
+    solution = settle(solution, request, scale)
     for _ in range(2 if estimated else 1):
         variance = updated_variance(solution, response, variance, estimated)
         data = scale_data(frequency, response, variance)
-        problem = ModalProblem(data, solution.shape)
-        solution = settle(solve(problem, solution.poles), request, 1.0 if estimated else scale)
-    return solution, variance
+        again = solve(ModalProblem(data, solution.shape), solution.poles)
+        solution = settle(again, request, 1.0 if estimated else scale)
+    return solution
 
 
-def _general_if_needed(solution: Solution, request: Request) -> Solution:
-    """Likelihood-ratio test of real against general residues at the same modes.
+def _fit_either(measured: Measured, request: Request, estimated: bool) -> Solution:
+    """Choose real or general residues by likelihood ratio, before and after settling the order."""
+    data = scale_data(*measured)
+    start, modes, scale = starting_point(data, request)
+    first = solve(ModalProblem(data, request.shape(modes)), start)
+    general = replace(request, general=True)
+    if _needs_rates(first):
+        found = _fit(measured, general, estimated)
+    else:
+        found = _settled(first, measured, request, estimated, scale)
+        if not _needs_rates(found):
+            return found
+        found = settle(with_rates(found), general, scale)
+    real = solve(ModalProblem(found.problem.data, replace(found.shape, general=False)), found.poles)
+    return found if _needs_rates(real) else settle(real, request, scale)
 
-    Where it asks for general residues, the order is settled again with them, both from these
-    modes and from starting poles chosen with rates, and the better of the two is kept.
-    """
-    modes = solution.shape.modes
-    data = solution.problem.data
+
+def with_rates(solution: Solution) -> Solution:
+    """Refit with residue rates at the same modes."""
+    problem = ModalProblem(solution.problem.data, replace(solution.shape, general=True))
+    return solve(problem, solution.poles)
+
+
+def _needs_rates(real: Solution) -> bool:
+    """Likelihood-ratio test of real against general residues at the same modes."""
+    modes = real.shape.modes
     if modes == 0:
-        return solution
-    problem = ModalProblem(data, replace(solution.shape, general=True))
-    general = solve(problem, solution.poles)
-    freedom = 2 * data.x.size - problem.shape.parameters
+        return False
+    general = with_rates(real)
+    freedom = 2 * real.problem.data.x.size - general.shape.parameters
     noise = max(1.0, general.cost / max(freedom, 1))
-    if solution.cost - general.cost < chi2.isf(LIKELIHOOD_RATIO_LEVEL, modes) * noise:
-        return solution
-    request = replace(request, general=True)
-    general = settle(general, request, noise)
-    poles, number, scale = starting_point(data, request)
-    again = settle(solve(ModalProblem(data, request.shape(number)), poles), request, scale)
-    return again if improves(again, general, min(noise, scale)) else general
+    return bool(real.cost - general.cost > chi2.isf(LIKELIHOOD_RATIO_LEVEL, modes) * noise)

@@ -28,6 +28,7 @@ from identkit.methods.modal_solution import Solution, information_factor, intern
 DAMPING_LEVELS = (0.002, 0.006, 0.02, 0.06, 0.2)
 WINDOW = 12.0
 SHORTLIST = 12
+LISTED = 6
 NEIGHBOURS = ((-3.0, 1.0), (-1.5, 1.0), (-0.7, 1.0), (0.7, 1.0), (1.5, 1.0), (3.0, 1.0), (0.0, 2.0))
 
 
@@ -135,6 +136,8 @@ def score_test(solution: Solution) -> list[Candidate]:
         new = Candidate(float(places[k, 0]), float(places[k, 1]), float(gains[k]))
         if all(_apart(new, one) for one in chosen):
             chosen.append(new)
+        if len(chosen) == LISTED:
+            break
     return chosen
 
 

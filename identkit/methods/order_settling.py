@@ -76,16 +76,18 @@ def with_leading_pivot(solution: Solution) -> Solution:
         return solution
     first = int(shape.feedthrough)
     residue = solution.state.coefficients[first : first + shape.sections]
-    order = leading_first(residue / poles.stiffness)
+    order = leading_first(residue, poles)
     if order[0] == 0:
         return solution
     poles = Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
     return solve(solution.problem, poles)
 
 
-def leading_first(static: FloatArray) -> list[int]:
-    """Order sections with the one of largest static deflection first."""
-    lead = int(np.argmax(np.abs(static)))
+def leading_first(residue: FloatArray, poles: Poles) -> list[int]:
+    """Order sections with the resonance of largest static deflection first; trends do not lead."""
+    static = np.abs(residue) / poles.stiffness
+    static[poles.log_damping > np.log(WIDEST)] = 0.0
+    lead = int(np.argmax(static))
     return [lead, *(k for k in range(static.size) if k != lead)]
 
 

@@ -12,6 +12,7 @@ relocating properties of vector fitting", same journal 21 (2006) 1587-1592 (rela
 import numpy as np
 
 from identkit.methods.arrays import ComplexArray, FloatArray
+from identkit.methods.compiled_sums import relocation_rows, section_rows
 from identkit.methods.modal_problem import ScaledData, as_reals, scaled_factor, solve_scaled
 
 DAMPING_FLOOR = 1e-5
@@ -65,27 +66,42 @@ def _relocated(
     rate: FloatArray,
     double_integrator: bool,
 ) -> tuple[FloatArray, FloatArray]:
-    s = 1j * data.x
-    inverse = 1.0 / (stiffness[:, None] + s * rate[:, None] + s * s)
-    sections = np.concatenate([inverse, s * inverse])
-    background = [np.ones_like(s)] + ([1.0 / s, 1.0 / s**2] if double_integrator else [])
-    ones = np.ones((1, s.size))
-    numerator = np.concatenate([sections, np.array(background)]) * data.weight
-    sigma = np.concatenate([ones, sections])
-    rows = as_reals(np.concatenate([numerator, -sigma * target]))
+    points, count = data.x.size, stiffness.size
+    fixed = _fixed_rows(data, target, double_integrator)
+    rows = np.empty((4 * count + len(fixed), 2 * points))
+    relocation_rows(data.x, data.weight, target, stiffness, rate, rows)
+    rows[4 * count :] = fixed
     gram = rows @ rows.T
-    _relax(gram, sigma, float(np.sum(np.abs(target) ** 2)), len(numerator))
+    sigma = np.append(np.arange(2 * count, 4 * count), len(rows) - 1)
+    mean = _mean_of_sigma(data.x, stiffness, rate)
+    energy = float(np.sum(np.abs(target) ** 2))
+    gram[np.ix_(sigma, sigma)] += np.outer(mean, mean) * (energy / points**2)
     factor, scale = scaled_factor(gram)
     right = np.zeros(len(gram))
-    right[len(numerator) :] = sigma.sum(axis=1).real
-    solution = solve_scaled(factor, scale, right)[len(numerator) :]
-    return zeros_of_sigma(stiffness, rate, solution)
+    right[sigma] = mean
+    return zeros_of_sigma(stiffness, rate, solve_scaled(factor, scale, right)[sigma])
 
 
-def _relax(gram: FloatArray, sigma: ComplexArray, energy: float, first: int) -> None:
-    """Add the row that keeps sigma from vanishing: its mean real part is about one."""
-    mean = sigma.sum(axis=1).real
-    gram[first:, first:] += np.outer(mean, mean) * (energy / sigma.shape[1] ** 2)
+def _fixed_rows(data: ScaledData, target: ComplexArray, double_integrator: bool) -> FloatArray:
+    """Return the rows no pole changes: constant, poles at the origin, and sigma's constant last."""
+    s = 1j * data.x
+    background = [data.weight + 0j]
+    if double_integrator:
+        background += [data.weight / s, data.weight / s**2]
+    return as_reals(np.array([*background, -target]))
+
+
+def _mean_of_sigma(x: FloatArray, stiffness: FloatArray, rate: FloatArray) -> FloatArray:
+    """Sum over the points of the real parts of sigma's columns.
+
+    The relaxation: this mean is held near one, so that sigma cannot vanish.
+    """
+    ones = np.ones_like(x)
+    rows = np.empty((stiffness.size, 2 * x.size))
+    section_rows(x, ones, stiffness, rate, rows)
+    plain = rows[:, : x.size].sum(axis=1)
+    slope = -(rows[:, x.size :] @ x)
+    return np.concatenate([plain, slope, [float(x.size)]])
 
 
 def zeros_of_sigma(
@@ -98,10 +114,10 @@ def zeros_of_sigma(
     stiffness, rate
         (n,) sections of sigma's denominator.
     sigma
-        (1 + 2n,) constant, then coefficients of 1/D, then of s/D.
+        (2n + 1,) coefficients of 1/D, then of s/D, then the constant.
     """
     count = stiffness.size
-    constant = sigma[0] if abs(sigma[0]) > 1e-8 * np.max(np.abs(sigma)) else 1e-8
+    constant = sigma[-1] if abs(sigma[-1]) > 1e-8 * np.max(np.abs(sigma)) else 1e-8
     natural = np.sqrt(stiffness)
     matrix = np.zeros((2 * count, 2 * count))
     even, odd = np.arange(0, 2 * count, 2), np.arange(1, 2 * count, 2)
@@ -109,8 +125,8 @@ def zeros_of_sigma(
     matrix[odd, even] = -natural
     matrix[odd, odd] = -rate
     gain = np.empty(2 * count)
-    gain[even] = sigma[1 : 1 + count] / natural
-    gain[odd] = sigma[1 + count :]
+    gain[even] = sigma[:count] / natural
+    gain[odd] = sigma[count:-1]
     matrix[odd] -= gain / constant
     return _as_sections(np.linalg.eigvals(matrix).astype(complex))
 

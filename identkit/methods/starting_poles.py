@@ -104,5 +104,5 @@ def _with_pivot(data: ScaledData, poles: Poles, stiffness: FloatArray, rate: Flo
         return Poles(poles.delay, np.array([low]), np.array([np.log(0.4)]))
     shape = ModelShape("none", poles.log_frequency.size)
     state = ModalProblem(data, shape).linearise(poles)
-    order = leading_first(state.coefficients[1:] / poles.stiffness)
+    order = leading_first(state.coefficients[1:], poles)
     return Poles(poles.delay, poles.log_frequency[order], poles.log_damping[order])
