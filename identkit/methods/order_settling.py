@@ -109,13 +109,15 @@ def _dropped(solution: Solution, request: Request, scale: float) -> Solution | N
     if modes <= (request.modes or 0):
         return None
     wald = wald_statistics(solution)
-    weakest = int(np.argmin(wald))
+    weakest = np.argsort(wald)
     if request.modes is not None:
-        return resized(solution, drop=weakest)
-    if wald[weakest] > mode_price(request, solution.problem.data.x.size) * scale:
-        return None
-    trial = resized(solution, drop=weakest)
-    return trial if improves(trial, solution, scale) else None
+        return resized(solution, drop=int(weakest[0]))
+    price = mode_price(request, solution.problem.data.x.size) * scale
+    for k in weakest[wald[weakest] < price][: 2 * TRIALS]:
+        trial = resized(solution, drop=int(k))
+        if improves(trial, solution, scale):
+            return trial
+    return None
 
 
 def _added(solution: Solution, request: Request, scale: float) -> Solution | None:
