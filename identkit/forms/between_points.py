@@ -45,8 +45,11 @@ def largest_ratio(comparison: PlantComparison, weight: MagnitudeWeight, start: f
     """
     common = comparison.common
     test = comparison.level_test(weight)
-    frequency = np.array([np.clip(start, common.low, common.high)])
-    top = Peak(float(frequency[0]), float(comparison.ratio(frequency, weight)[0]))
+    # The test's own nodes lie on every resonance of the ratio: a start near the top for nothing.
+    nodes = np.append(test.nodes / TWO_PI, start)
+    inside = np.clip(nodes, common.low, common.high)
+    ratio = comparison.ratio(inside, weight)
+    top = Peak(float(inside[np.argmax(ratio)]), float(ratio.max()))
     for _ in range(MOST_CLIMBS):
         level = top.ratio * (1.0 + LEVEL_TOLERANCE) + LEAST_LEVEL
         higher = _above(comparison, weight, test, level)
@@ -67,7 +70,9 @@ def _above(
     common = comparison.common
     crossings = test.at(level) / TWO_PI
     edges = np.concatenate([[common.low], crossings, [common.high]])
-    tried = np.concatenate([np.sqrt(edges[1:] * edges[:-1]), edges])
+    nodes = test.nodes / TWO_PI
+    nodes = nodes[(nodes > common.low) & (nodes < common.high)]
+    tried = np.concatenate([np.sqrt(edges[1:] * edges[:-1]), edges, nodes])
     above = tried[comparison.ratio(tried, weight) > level]
     if not above.size:
         return []
