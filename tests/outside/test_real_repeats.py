@@ -4,12 +4,30 @@ Data: datasets/reflection_repeats (shipped in scikit-rf, BSD). The non-parametri
 |S_i - mean| / |mean| is a fact of the data and needs no model.
 """
 
+import shutil
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 
+from identkit.grids import load
+from identkit.pipeline import run_study
+
 FOLDER = Path(__file__).parents[2] / "datasets" / "reflection_repeats"
+
+STUDY = """
+[study]
+name = "repeats"
+
+[responses]
+files = "sweep_{repeat}.csv"
+columns = { frequency = "Freq [GHz]" }
+
+[model]
+base = "none"
+residues = "general"
+"""
 
 pytestmark = pytest.mark.outside
 
@@ -38,3 +56,20 @@ def test_extract_is_the_file_that_scikit_rf_ships():
         network = skrf.Network(str(Path(skrf.__file__).parent / "data" / f"ro,{number}.s1p"))
         np.testing.assert_allclose(frequency, network.f, rtol=1e-12)
         np.testing.assert_allclose(response, network.s[:, 0, 0], atol=1e-11)
+
+
+@pytest.mark.slow
+@pytest.mark.xfail(strict=True, reason="a negative delay is fitted, which no stable set can hold")
+def test_exported_set_holds_the_repeats(tmp_path):
+    """The fits are held, and no measured point is clearly outside once its noise is allowed for."""
+    for number in (1, 2, 3):
+        shutil.copy(FOLDER / f"sweep_{number}.csv", tmp_path)
+    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
+    result = run_study(tmp_path / "study.toml", jobs=1)
+    assert result.held
+    table = pd.read_csv(result.folder / "audit.csv")
+    assert table["fit_verdict"].tolist() == ["held"] * 3
+    assert not (table["raw_verdict"] == "not held").any()
+    assert (result.folder / "set.json").is_file()
+    fits = load(result.folder / "fits.nc")
+    assert (fits["delay"].values >= 0.0).all()
