@@ -36,8 +36,6 @@ def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
         _row("[bound] form", bound.form, "multiplicative"),
         _row("[bound] remove", list(bound.remove), []),
         _row("[bound] holds", bound.holds, "measured"),
-        _row("[bound] exchangeable", bound.exchangeable, "unit"),
-        _row("[bound] hold_out", bound.hold_out, 0.0),
         _row("[bound] factors", bound.factors, "auto"),
         _row("[bound] split", bound.split, ""),
         _row("[export] period", export.period, 0.0),

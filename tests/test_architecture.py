@@ -25,8 +25,9 @@ LEVELS = {
     "figures": 5,
     "history": 5,
     "report": 6,
-    "pipeline": 7,
-    "cli": 8,
+    "steps": 7,
+    "pipeline": 8,
+    "cli": 9,
     "atomic": 0,
     "settings_messages": 1,
     "progress": 1,
@@ -37,7 +38,7 @@ LEVELS = {
     "not_yet": 3,
     "show": 7,
     "set_audit": 7,
-    "__init__": 9,
+    "__init__": 10,
 }
 HEAVY = {"cvxpy", "matplotlib", "numba", "statsmodels", "sippy_unipi", "control", "slycot"}
 

@@ -12,6 +12,7 @@ from identkit.methods.tolerance_limits import (
     tolerance_content,
     tolerance_sample_size,
 )
+from identkit.plant_set.fields import FittedPlant
 
 CAUTION = "This figure is no safety certificate."
 
@@ -71,6 +72,27 @@ def state_coverage(
     return _claim(reach, content, confidence, exchangeable, needed)
 
 
+def largest_reach_by_group(
+    plants: Sequence[FittedPlant], groups: Mapping[str, str]
+) -> dict[str, float]:
+    """Return the largest reach of every held-out unit (or lot).
+
+    Parameters
+    ----------
+    plants
+        The plants of a set, with their reach.
+    groups
+        Unit (or lot) by response id. A response without a plant, because its fit failed or no set
+        of this form can hold it, counts as infinitely far.
+    """
+    reach = {plant.response: plant.reach for plant in plants}
+    largest: dict[str, float] = {}
+    for response, group in groups.items():
+        own = reach.get(response, float("inf"))
+        largest[group] = max(own, largest.get(group, 0.0))
+    return largest
+
+
 def _no_claim(
     content: float, confidence: float, exchangeable: str, needed: dict[str, int]
 ) -> dict[str, object]:
@@ -128,6 +150,7 @@ def _claim(
             "nominal and weight were fixed without the held-out measurements",
             f"a {exchangeable} counts as held when all its measured responses are",
             "measured conditions only: the heads, temperatures and band of the certificate",
+            f"{exchangeable}s excluded by hand are no part of the population",
         ],
         "sentence": sentence,
         "units_needed": needed,

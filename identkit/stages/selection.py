@@ -12,6 +12,8 @@ from identkit.stages.screen import marked_responses
 Rule = tuple[Mapping[str, str | float], str]
 """Labels that must all match, and the reason to print."""
 
+HELD_OUT = "held out to state the coverage"
+
 
 def left_out(
     responses: Gridded,
@@ -49,6 +51,65 @@ def left_out(
             )
         reasons.update({name: f"{words}: {reason}" if reason else words for name in matches})
     return reasons
+
+
+def held_out(
+    responses: Gridded,
+    reasons: Mapping[str, str],
+    *,
+    share: float,
+    seed: int,
+    by: str = "unit",
+) -> dict[str, str]:
+    """Draw the units (or lots) that nominal and bound must not see, so that coverage can be stated.
+
+    Parameters
+    ----------
+    responses
+        Measured responses.
+    reasons
+        What is left out for another reason; a unit of which nothing else is left is not drawn.
+    share
+        Share of the units to hold out, rounded to whole units; 0 holds out none.
+    seed
+        Of the random draw.
+    by
+        "unit" or "lot": what the next draw is.
+
+    Returns
+    -------
+    dict
+        Unit by response id. Responses left out for another reason are not in it.
+
+    Raises
+    ------
+    InputError
+        If a share is asked for that leaves fewer than two units on the one side or none on the
+        other, or the campaign has no such label.
+    """
+    if share <= 0.0:
+        return {}
+    groups = {name: group for name, group in _groups(responses, by).items() if name not in reasons}
+    names = sorted(set(groups.values()))
+    count = round(share * len(names))
+    if count < 1 or len(names) - count < 2:
+        found = f"{share:g}, which holds out {count} of {len(names)} {by}s"
+        expected = f"a share that holds out at least one {by} and keeps at least two"
+        raise InputError(Problem("[bound] hold_out", found, expected))
+    drawn = set(np.random.default_rng(seed).permutation(names)[:count].tolist())
+    return {name: group for name, group in groups.items() if group in drawn}
+
+
+def _groups(responses: Gridded, by: str) -> dict[str, str]:
+    groups: dict[str, str] = {}
+    for part in datasets(responses):
+        if by not in part.coords:
+            raise InputError(
+                Problem("[bound] hold_out", f'no label "{by}"', f"responses labelled by {by}")
+            )
+        names, values = part["response"].values.astype(str), part[by].values.astype(str)
+        groups.update(zip(names.tolist(), values.tolist(), strict=True))
+    return groups
 
 
 def _matching(part: xr.Dataset, labels: Mapping[str, str | float]) -> list[str]:
