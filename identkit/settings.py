@@ -10,9 +10,7 @@ from typing import Annotated, Any, Literal, Self
 
 from pydantic import (
     AfterValidator,
-    BaseModel,
     BeforeValidator,
-    ConfigDict,
     Field,
     PrivateAttr,
     ValidationError,
@@ -21,10 +19,8 @@ from pydantic import (
 
 from identkit.errors import InputError
 from identkit.settings_messages import problems_of, read_toml
-
-
-def _as_tuple(value: Any) -> Any:
-    return tuple(value) if isinstance(value, list) else value
+from identkit.settings_records import RecordSettings
+from identkit.settings_types import Count, NotNegative, Positive, Table, Text, as_tuple
 
 
 def _increasing(pairs: tuple[tuple[float, float], ...]) -> tuple[tuple[float, float], ...]:
@@ -40,25 +36,14 @@ def _band_in_order(band: tuple[float, float]) -> tuple[float, float]:
     return band
 
 
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
 Share = Annotated[float, Field(gt=0, lt=1)]
-Count = Annotated[int, Field(ge=1)]
-Text = Annotated[str, Field(min_length=1)]
-Texts = Annotated[tuple[Text, ...], BeforeValidator(_as_tuple)]
 Band = Annotated[
-    tuple[NotNegative, Positive], BeforeValidator(_as_tuple), AfterValidator(_band_in_order)
+    tuple[NotNegative, Positive], BeforeValidator(as_tuple), AfterValidator(_band_in_order)
 ]
-_Pair = Annotated[tuple[Positive, Positive], BeforeValidator(_as_tuple)]
-Curve = Annotated[tuple[_Pair, ...], BeforeValidator(_as_tuple), AfterValidator(_increasing)]
+_Pair = Annotated[tuple[Positive, Positive], BeforeValidator(as_tuple)]
+Curve = Annotated[tuple[_Pair, ...], BeforeValidator(as_tuple), AfterValidator(_increasing)]
 Mark = Literal["noise", "outlier", "too-few-points"]
-
-
-class Table(BaseModel):
-    """One table of the study file: fixed once read, strict in types, closed to unknown keys."""
-
-    model_config = ConfigDict(extra="forbid", frozen=True, strict=True)
 
 
 class StudySettings(Table):
@@ -127,17 +112,6 @@ class ResponseSettings(Table):
     units: UnitSettings = UnitSettings()
 
 
-class RecordSettings(Table):
-    """[records]: time records from which responses are estimated."""
-
-    files: Text = Field(description='a path pattern such as "bench/{unit}_H{head}.npz"')
-    sample_period: Positive = Field(description="seconds, above 0")
-    excitation: Text = Field(default="r", description="a channel name")
-    drive: Text | Texts = Field(default="u", description="a channel name, or a list of them")
-    position: Text | Texts = Field(default="y", description="a channel name, or a list of them")
-    method: Text = Field(default="auto", description='"auto" or the name of a method')
-
-
 class ScreenSettings(Table):
     """[screen]: limits beyond which points and responses are marked, and marks that leave out."""
 
@@ -161,7 +135,7 @@ class ScreenSettings(Table):
         default=50,
         description="a whole number, 1 or more; a response with fewer usable points is marked",
     )
-    leave_out: Annotated[tuple[Mark, ...], BeforeValidator(_as_tuple)] = Field(
+    leave_out: Annotated[tuple[Mark, ...], BeforeValidator(as_tuple)] = Field(
         default=(), description='a list of the marks "noise", "outlier", "too-few-points"'
     )
 
@@ -240,7 +214,7 @@ class BoundSettings(Table):
         default=(), description="pairs [Hz, largest weight], both above 0, by increasing frequency"
     )
     radius_floor: Positive = Field(default=0.02, description="a relative radius above 0")
-    remove: Annotated[tuple[Literal["gain"], ...], BeforeValidator(_as_tuple)] = Field(
+    remove: Annotated[tuple[Literal["gain"], ...], BeforeValidator(as_tuple)] = Field(
         default=(), description='a list that is empty or holds "gain"'
     )
     holds: Literal["measured", "population"] = Field(
@@ -256,7 +230,7 @@ class BoundSettings(Table):
         default="auto", description='"auto" or a whole number, 1 or more'
     )
     split: str = Field(default="", description='a label such as "head", or "" for one set')
-    exclude: Annotated[tuple[Exclusion, ...], BeforeValidator(_as_tuple)] = Field(
+    exclude: Annotated[tuple[Exclusion, ...], BeforeValidator(as_tuple)] = Field(
         default=(),
         description='a list of response names or of labels with a reason, such as [{unit = "U13", '
         'reason = "cracked arm"}]',
@@ -266,7 +240,7 @@ class BoundSettings(Table):
 class ExportSettings(Table):
     """[export]: the set files to write."""
 
-    formats: Annotated[tuple[Literal["json", "hdf5"], ...], BeforeValidator(_as_tuple)] = Field(
+    formats: Annotated[tuple[Literal["json", "hdf5"], ...], BeforeValidator(as_tuple)] = Field(
         default=("json", "hdf5"), min_length=1, description='a list of "json" and "hdf5"'
     )
     period: NotNegative = Field(default=0.0, description="seconds, 0 or more (0 = continuous)")
