@@ -13,19 +13,26 @@ from identkit.methods.arrays import FloatArray
 from identkit.methods.level_crossings import LevelCrossings
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import TWO_PI
+from identkit.methods.resonance_grid import resonance_grid
 
 LEVEL_TOLERANCE = 1e-7
 MOST_CLIMBS = 40
 LEAST_LEVEL = 1e-100
+CHECK_LEVEL, CHECK_TOLERANCE = 0.98, 1e-3
+FALLBACK_SHARE = 0.02
 _ZOOMS, _ZOOM_POINTS, _NARROW = 14, 17, 1e-8
 
 
 @dataclass(frozen=True)
 class Peak:
-    """A frequency (Hz) and the ratio there."""
+    """A frequency (Hz) and the ratio there.
+
+    `exact` is False where the level test did not pass its own check and a fine grid stood in.
+    """
 
     frequency: float
     ratio: float
+    exact: bool = True
 
 
 def largest_ratio(comparison: PlantComparison, weight: MagnitudeWeight, start: float) -> Peak:
@@ -54,9 +61,35 @@ def largest_ratio(comparison: PlantComparison, weight: MagnitudeWeight, start: f
         level = top.ratio * (1.0 + LEVEL_TOLERANCE) + LEAST_LEVEL
         higher = _above(comparison, weight, test, level)
         if not higher:
-            return top
+            return top if _passes(test, top) else _by_grid(comparison, weight, test, top)
         top = max(higher, key=lambda peak: peak.ratio)
     raise ArithmeticError(f"the ratio still grows at {top.ratio:.4g} near {top.frequency:g} Hz")
+
+
+def _passes(test: LevelCrossings, top: Peak) -> bool:
+    """Check the test just below the peak found, where it has to find the peak's own flanks."""
+    below = CHECK_LEVEL * top.ratio
+    if below <= LEAST_LEVEL:
+        return True
+    edges = np.array([test.low, test.high])
+    always_above = not test.at(below).size and np.all(test.gain.on_axis(edges) > below**2)
+    return bool(always_above or test.mismatch(below) <= CHECK_TOLERANCE)
+
+
+def _by_grid(
+    comparison: PlantComparison, weight: MagnitudeWeight, test: LevelCrossings, top: Peak
+) -> Peak:
+    """Search a grid that resolves every pole of the ratio; return its top, or `top` if higher."""
+    poles = test.gain.poles[np.isfinite(test.gain.poles) & (test.gain.poles != 0.0)]
+    size = np.abs(poles)
+    common = comparison.common
+    grid = resonance_grid(
+        common.low, common.high, size / TWO_PI, poles.real / size, share=FALLBACK_SHARE
+    )
+    best = int(np.argmax(comparison.ratio(grid, weight)))
+    bracket = np.array([[grid[max(best - 1, 0)], grid[min(best + 1, grid.size - 1)]]])
+    found = max([top, *_zoomed(comparison, weight, bracket)], key=lambda peak: peak.ratio)
+    return Peak(found.frequency, found.ratio, exact=False)
 
 
 def peaks_above(comparison: PlantComparison, weight: MagnitudeWeight, level: float) -> list[Peak]:

@@ -166,7 +166,7 @@ class _Bounding:
             weight=scaled,
             trials=tuple(own if trial.order == own.order else trial for trial in trials) or (own,),
             rule=rule,
-            peaks=tuple(Peak(peak.frequency, peak.ratio / factor) for peak in peaks),
+            peaks=tuple(replace(peak, ratio=peak.ratio / factor) for peak in peaks),
             tolerance=self._tolerance(scaled),
             rounds=rounds,
         )

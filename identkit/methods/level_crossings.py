@@ -73,15 +73,33 @@ class LevelCrossings:
         Zeros within 1e-4 of the axis are reported too: a false hit costs one evaluation, a missed
         one would cost the certificate.
         """
+        squares = self._zeros(level)
+        near = (np.abs(squares.imag) <= NEAR_REAL * np.abs(squares)) & (squares.real < 0.0)
+        return self._inside(np.sqrt(-squares[near].real))
+
+    def mismatch(self, level: float) -> float:
+        """Return how far |G| is from `level`, relative, at the worst crossing in the band.
+
+        A check of the test on itself: small where its digits suffice, infinite where it finds no
+        crossing at all, so ask for a level that is known to be crossed.
+        """
+        squares = self._zeros(level)
+        real = squares[(squares.imag == 0.0) & (squares.real < 0.0)].real
+        omega = self._inside(np.sqrt(-real))
+        if not omega.size:
+            return np.inf
+        return float(np.max(np.abs(np.sqrt(self.gain.on_axis(omega)) / level - 1.0)))
+
+    def _inside(self, omega: FloatArray) -> FloatArray:
+        return np.unique(omega[(omega > self.low) & (omega < self.high)])
+
+    def _zeros(self, level: float) -> ComplexArray:
         if not self.nodes.size:
-            return np.zeros(0)
+            return np.zeros(0, dtype=complex)
         quality = [shifted.quality(level) for shifted in self._shifted]
         best = next((k for k, good in enumerate(quality) if good > GOOD_SHIFT), None)
         chosen = self._shifted[int(np.argmax(quality)) if best is None else best]
-        squares = chosen.zeros(level, self.values)
-        near = (np.abs(squares.imag) <= NEAR_REAL * np.abs(squares)) & (squares.real < 0.0)
-        omega = np.sqrt(-squares[near].real)
-        return np.unique(omega[(omega > self.low) & (omega < self.high)])
+        return chosen.zeros(level, self.values)
 
 
 class _Shifted:

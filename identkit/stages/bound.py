@@ -103,11 +103,16 @@ def bound_spread(
         form=form,
         band=[common.low, common.high],
         order_rule=found.rule,
-        between_grid_method=METHOD,
+        between_grid_method=_method(found),
         refits=found.rounds,
         held=len(plants.names),
         of=modes.sizes["response"],
     )
+
+
+def _method(found: SpreadBound) -> str:
+    searched = sum(not peak.exact for peak in found.peaks)
+    return f"{METHOD}; {searched} of them on a fine grid instead" if searched else METHOD
 
 
 def _counted(plants: FittedPlants, nominal: ModalParameters) -> FittedPlants:

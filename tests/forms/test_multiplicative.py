@@ -13,7 +13,8 @@ from identkit.forms.multiplicative import (
 )
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.magnitude_weight import MagnitudeWeight
-from identkit.methods.modal_model import modal_response
+from identkit.methods.modal_model import ModalParameters, modal_response
+from identkit.methods.resonance_grid import resonance_grid
 from identkit.methods.state_space import frequency_response
 from tests.methods.families import family, plant
 
@@ -100,3 +101,42 @@ def test_only_scalar_plants_are_accepted() -> None:
     accepts(1, 1)
     with pytest.raises(InputError, match="2 outputs and 1 inputs"):
         accepts(2, 1)
+
+
+def hard_pair(rng: np.random.Generator) -> tuple[ModalParameters, ModalParameters]:
+    """Return a nominal with up to 19 modes, damping down to 1e-4, and a plant near it."""
+    modes = int(rng.integers(1, 20))
+    frequency = np.sort(np.exp(rng.uniform(np.log(100.0), np.log(30e3), modes)))
+    damping = 10.0 ** rng.uniform(-4.0, -1.0, modes)
+    size = 10.0 ** rng.uniform(-2.0, 0.5, modes) * damping * frequency**2
+    base = ("pivot", "none")[int(rng.integers(2))]
+    centre = ModalParameters(
+        frequency, damping, rng.normal(size=modes) * size, np.zeros(modes), base,
+        base_frequency=60.0, base_damping_ratio=float(rng.uniform(0.1, 2.0)), base_residue=1e7,
+        feedthrough=10.0 ** rng.uniform(-4.0, 0.0), delay=10.0 ** rng.uniform(-6.0, -4.2),
+    )  # fmt: skip
+    spread = 10.0 ** rng.uniform(-3.0, 0.0)
+    near = replace(
+        centre,
+        modal_frequency=frequency * np.exp(0.02 * spread * rng.normal(size=modes)),
+        residue=centre.residue * (1.0 + 0.2 * spread * rng.normal(size=modes)),
+        delay=centre.delay * (1.0 + 0.1 * spread * rng.normal()),
+    )
+    return centre, near
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("seed", range(6))
+def test_hard_pairs_against_grids_that_resolve_every_resonance(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    for _ in range(60):
+        centre, near = hard_pair(rng)
+        common = CommonPart(NominalPlant(centre, int(rng.integers(1, 6))), *BAND)
+        comparison, weighting = PlantComparison(near, common), sample_weight()
+        zeros = common.zeros[np.isfinite(common.zeros) & (np.abs(common.zeros) > 0.0)]
+        roots = [centre.modal_frequency, near.modal_frequency, np.abs(zeros) / (2.0 * np.pi)]
+        widths = [centre.damping_ratio, near.damping_ratio, zeros.real / np.abs(zeros)]
+        grid = resonance_grid(*BAND, np.concatenate(roots), np.concatenate(widths), share=0.05)
+        ratio = comparison.ratio(grid, weighting)
+        found = largest_ratio(comparison, weighting, float(rng.uniform(*BAND)))
+        assert found.ratio >= ratio.max() * (1.0 - 1e-6)

@@ -64,3 +64,9 @@ def test_edges_of_a_peak_seven_decades_above_its_surroundings(height: float) -> 
 def test_constant_gain_has_no_crossings() -> None:
     nothing = SquaredGain(lambda omega: np.ones(omega.shape), lambda s: 1.0, np.zeros(0))
     assert LevelCrossings(nothing, LOW, HIGH).at(2.0).size == 0
+
+
+def test_the_test_checks_itself_where_it_must_cross() -> None:
+    test = LevelCrossings(gain_of(plant(base="none")), LOW, HIGH)
+    assert test.mismatch(0.1) < 1e-6
+    assert np.isinf(test.mismatch(1e6))
