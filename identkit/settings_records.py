@@ -58,7 +58,7 @@ class RecordSettings(Table):
     )
     frequency: Text | None = Field(
         default=None,
-        description="the channel that holds the driven frequency of a stepped sine, Hz",
+        description="the channel with the driven frequency of a stepped sine, Hz",
     )
     in_phase: Text | None = Field(default=None, description="a channel name")
     quadrature: Text | None = Field(default=None, description="a channel name")
