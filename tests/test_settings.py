@@ -198,7 +198,6 @@ def test_exclusions_take_names_and_labels_with_a_reason(written):
         "[records]\nfiles = 'x'\nsample_period = 1",
         "[responses]\nsample_period = 1e-4",
         "[model]\nsharing = 'unit'",
-        "[nominal]\nchoice = 'tightest'",
         "[bound]\nform = 'additive'",
         "[bound]\nform = 'auto'",
         "[bound]\nremove = ['gain']",
