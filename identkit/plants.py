@@ -3,7 +3,38 @@
 import numpy as np
 import xarray as xr
 
+from identkit.methods.arrays import BoolArray
 from identkit.methods.modal_model import ModalParameters
+from identkit.outcomes import Outcome
+
+MOST_UNEXPLAINED = 0.5
+"""Share of a response that a fit without modes may leave and still be its plant."""
+_NOT_FITTED = (Outcome.TOO_FEW_POINTS, Outcome.NOT_FINITE, Outcome.NOT_FITTED)
+
+
+def lacks_plant(fits: xr.Dataset) -> BoolArray:
+    """Tell which responses have no plant by the outcome of their fit.
+
+    A fit without modes is a plant (base, feedthrough and delay) where it explains its response:
+    where `unexplained_share` is known and at most `MOST_UNEXPLAINED`. Noise has no modes either.
+
+    Parameters
+    ----------
+    fits
+        Fits or paired modes.
+
+    Returns
+    -------
+    BoolArray
+        (responses,).
+    """
+    outcome = fits["fit_outcome"].values
+    unexplained = np.full(outcome.shape, np.inf)
+    if "unexplained_share" in fits:
+        unexplained = fits["unexplained_share"].values
+    # A share that is not known is not small: the comparison is False for NaN.
+    empty = (outcome == Outcome.NO_MODES) & ~(unexplained <= MOST_UNEXPLAINED)
+    return np.asarray(empty | np.isin(outcome, [int(code) for code in _NOT_FITTED]), dtype=bool)
 
 
 def plant_parameters(fits: xr.Dataset, index: int) -> ModalParameters:
@@ -25,8 +56,10 @@ def plant_parameters(fits: xr.Dataset, index: int) -> ModalParameters:
     frequency = np.asarray(one["modal_frequency"].values, dtype=float)
     found = np.isfinite(frequency)
     base = str(fits.attrs["base"])
-    residue = one["residue"].values.reshape(frequency.size, -1)[:, 0]
-    rate = one["residue_rate"].values.reshape(frequency.size, -1)[:, 0]
+    residue, rate = (
+        one[name].transpose("mode", "output", "input").values[:, 0, 0]
+        for name in ("residue", "residue_rate")
+    )
     return ModalParameters(
         frequency[found],
         np.asarray(one["damping_ratio"].values, dtype=float)[found],

@@ -20,6 +20,8 @@ State = TypeVar("State")
 
 DAMPING_START = 1e-3
 DAMPING_LIMIT = 1e14
+SLIGHT_DAMPING = 1e-2
+POLISHING_STEPS = 30
 
 
 @dataclass
@@ -64,6 +66,7 @@ def minimise(
     start: FloatArray,
     *,
     tolerance: float = 1e-10,
+    last_step: float = 0.0,
     step_limit: FloatArray | None = None,
     max_iterations: int = 60,
 ) -> Minimum[State]:
@@ -79,6 +82,9 @@ def minimise(
         (p,) starting point.
     tolerance
         Stop when the predicted decrease is below this share of the cost.
+    last_step
+        Stop after a step that was predicted to bring less than this share of the cost and did:
+        what is left is smaller again by the rate of convergence.
     step_limit
         (p,) largest step per coordinate, or None.
     max_iterations
@@ -95,11 +101,14 @@ def minimise(
         step = _limited(damped_step(hessian, gradient, damping), step_limit)
         predicted = float(step @ (2.0 * gradient - hessian @ step))
         if not predicted > tolerance * cost:
-            return Minimum(point, cost, state, True, tried)
+            settled = _settled(hessian, gradient, damping, tolerance * cost, cost)
+            return Minimum(point, cost, state, settled, tried)
         trial_cost, trial_state = evaluate(point + step)
         ratio = (cost - trial_cost) / predicted if np.isfinite(trial_cost) else -1.0
         if ratio > 1e-4:
             point, cost, state = point + step, trial_cost, trial_state
+            if predicted <= last_step * cost and ratio > 0.8:
+                return Minimum(point, cost, state, True, tried)
             hessian, gradient = normal_equations(state)
             damping *= max(0.1, 1.0 - (2.0 * ratio - 1.0) ** 3)
             growth = 2.0
@@ -108,6 +117,15 @@ def minimise(
             if damping > DAMPING_LIMIT:
                 return Minimum(point, cost, state, False, tried)
     return Minimum(point, cost, state, False, tried)
+
+
+def _settled(
+    hessian: FloatArray, gradient: FloatArray, damping: float, limit: float, cost: float
+) -> bool:
+    """Whether the step is small in itself, not only because it was damped."""
+    if damping <= SLIGHT_DAMPING:
+        return True
+    return float(gradient @ damped_step(hessian, gradient, 0.0)) <= max(100 * limit, 1e-10 * cost)
 
 
 def damped_step(hessian: FloatArray, gradient: FloatArray, damping: float) -> FloatArray:
@@ -170,8 +188,32 @@ def least_squares(
     found = minimise(
         evaluate, normal_equations, start, tolerance=tolerance, max_iterations=max_iterations
     )
-    covariance = _covariance(jacobian(found.point), found.cost)
-    return LeastSquaresFit(found.point, covariance, found.cost, found.converged, found.iterations)
+    point = _polished(residual, jacobian, found.point) if found.converged else found.point
+    error = residual(point)
+    cost = float(error @ error)
+    covariance = _covariance(jacobian(point), cost)
+    return LeastSquaresFit(point, covariance, cost, found.converged, found.iterations)
+
+
+def _polished(
+    residual: Callable[[FloatArray], FloatArray],
+    jacobian: Callable[[FloatArray], FloatArray],
+    point: FloatArray,
+) -> FloatArray:
+    """Undamped steps by orthogonal factorisation, while they shrink.
+
+    Near the minimum the sum of squares no longer tells points apart to rounding; the step does.
+    """
+    size = np.inf
+    for _ in range(POLISHING_STEPS):
+        slope = jacobian(point)
+        scale = np.linalg.norm(slope, axis=0)
+        scaled = np.linalg.lstsq(slope / scale, -residual(point), rcond=None)[0]
+        if not np.linalg.norm(scaled) < size:
+            break
+        size = float(np.linalg.norm(scaled))
+        point = point + scaled / scale
+    return point
 
 
 def _covariance(slope: FloatArray, cost: float) -> FloatArray:

@@ -239,7 +239,7 @@ def scaled_factor(gram: FloatArray) -> tuple[FloatArray, FloatArray]:
     while True:
         matrix.flat[:: len(scale) + 1] = 1.0 + ridge
         factor, failed = lapack.dpotrf(matrix, lower=1)
-        if failed == 0:
+        if failed == 0 and np.isfinite(factor[-1, -1]):
             return factor, scale
         if not np.isfinite(matrix).all() or ridge > 1.0:
             raise np.linalg.LinAlgError("normal equations are not finite")

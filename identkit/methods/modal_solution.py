@@ -22,6 +22,7 @@ from identkit.methods.modal_problem import (
 )
 
 TOLERANCE = 1e-9
+LAST_STEP = 1e-5
 SINGULAR_PIVOT = 1e-5
 VARIANCE_FLOOR = 1e-18
 
@@ -67,6 +68,7 @@ def solve(problem: ModalProblem, start: Poles, *, tolerance: float = TOLERANCE) 
         problem.normal_equations,
         problem.pack(start),
         tolerance=tolerance,
+        last_step=LAST_STEP,
         step_limit=problem.step_limit(),
     )
     return Solution(problem, found.state, found.cost, found.converged)

@@ -32,6 +32,7 @@ RELATIVE_FLOOR = 1e-9
 LARGEST_CORRECTION = 4.0
 SMALLEST_WINDOW = 15
 SMALLEST_WIGGLE = 0.02
+FLOOR_TRIALS = 120
 
 
 def start_variance(frequency: FloatArray, response: ComplexArray) -> FloatArray:
@@ -43,7 +44,7 @@ def start_variance(frequency: FloatArray, response: ComplexArray) -> FloatArray:
     off = response[1:-1] - (1.0 - share) * response[:-2] - share * response[2:]
     gain = 1.0 + share**2 + (1.0 - share) ** 2
     relative = np.abs(off) ** 2 / gain / _power(response)[1:-1]
-    level = median_filter(np.pad(relative, 1, mode="edge"), _window(points), mode="nearest") / LN2
+    level = median_filter(np.pad(relative, 1, mode="edge"), _window(points), mode="reflect") / LN2
     return np.asarray(np.maximum(level, RELATIVE_FLOOR**2) * _power(response), dtype=float)
 
 
@@ -74,8 +75,8 @@ def _from_residuals(error: FloatArray, model: ComplexArray) -> FloatArray:
     power = _power(model)
     relative, floor = _relative_and_floor(error, power, _mean_by_median)
     shape = relative * power + floor
-    level = median_filter(error / shape, _window(error.size), mode="nearest") / LN2
-    level = uniform_filter1d(level, _window(error.size), mode="nearest")
+    level = median_filter(error / shape, _window(error.size), mode="reflect") / LN2
+    level = uniform_filter1d(level, _window(error.size), mode="reflect")
     return np.asarray(shape * np.maximum(level, 1e-3), dtype=float)
 
 
@@ -86,18 +87,15 @@ def _mean_by_median(error: FloatArray) -> float:
 def _relative_and_floor(
     error: FloatArray, power: FloatArray, mean_of: Callable[[FloatArray], float]
 ) -> tuple[float, float]:
-    """Split the error in a part relative to power and a constant, on bins of equal power."""
+    """Split the error in a part relative to power and a constant: bins of equal power, by logs."""
     bins = np.array_split(np.argsort(power), max(2, min(12, error.size // 25)))
     mean = np.array([mean_of(error[part]) for part in bins])
     level = np.array([np.median(power[part]) for part in bins])
-    relative, floor = float(np.median(mean / level)), 0.0
-    for _ in range(20):
-        spread = relative * level + floor + 1e-300
-        design = np.column_stack([level, np.ones_like(level)]) / spread[:, None]
-        scale = np.linalg.norm(design, axis=0)
-        answer = np.linalg.lstsq(design / scale, mean / spread, rcond=None)[0] / scale
-        relative, floor = float(max(answer[0], 0.0)), float(max(answer[1], 0.0))
-    return max(relative, RELATIVE_FLOOR**2), floor
+    ratios = np.concatenate([[0.0], np.geomspace(level[0] / 10.0, level[-1] * 10.0, FLOOR_TRIALS)])
+    off = np.log(np.maximum(mean, 1e-300)) - np.log(level + ratios[:, None])
+    best = int(np.argmin(np.var(off, axis=1)))
+    relative = float(np.exp(np.mean(off[best])))
+    return max(relative, RELATIVE_FLOOR**2), relative * float(ratios[best])
 
 
 def _model_based(variance: FloatArray, response: ComplexArray, model: ComplexArray) -> FloatArray:
@@ -135,10 +133,10 @@ def _smooth(variance: FloatArray, power: FloatArray) -> FloatArray:
     relative, floor = _relative_and_floor(variance, power, np.mean)
     shape = relative * power + floor
     ratio = variance / shape
-    typical = median_filter(ratio, _window(ratio.size), mode="nearest")
+    typical = median_filter(ratio, _window(ratio.size), mode="reflect")
     ratio = np.clip(ratio, typical / 4.0, typical * 4.0)
     return np.asarray(
-        shape * uniform_filter1d(ratio, _window(ratio.size), mode="nearest"), dtype=float
+        shape * uniform_filter1d(ratio, _window(ratio.size), mode="reflect"), dtype=float
     )
 
 
