@@ -179,6 +179,10 @@ PAIR = (
         ("mode_expected_frequency?", "number", "Hz", "Where the population has the mode."),
         ("mode_found_warm_mask?", "flag", "", "Found only when started from the population."),
     ),
+    *_along(
+        ("response",),
+        ("unexplained_share?", "number", "1", "What the fit leaves of the response."),
+    ),
     Variable(
         "residue_standard_error", PER_MODE_CHANNEL, "number", _RESIDUE, "From the fit covariance."
     ),

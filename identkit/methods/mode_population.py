@@ -89,7 +89,7 @@ def find_population_modes(
 def found_share(table: ModeTable, assigned: IntArray, modes: int) -> FloatArray:
     """Return (modes,) share of responses showing each mode, of the head that shows it best."""
     best = np.zeros(modes)
-    found = np.stack([(assigned == m).any(axis=1) for m in range(modes)], axis=1)
+    found = (assigned[:, :, None] == np.arange(modes)).any(axis=1)
     groups = [table.head == h for h in np.unique(table.head)]
     large = [group for group in groups if group.sum() >= 4]
     for group in large or [np.ones(len(table.head), dtype=bool)]:

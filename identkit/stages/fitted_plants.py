@@ -9,14 +9,7 @@ import xarray as xr
 from identkit.errors import InputError, Problem
 from identkit.methods.modal_model import BASES, ModalParameters
 from identkit.outcomes import ADVICE, Outcome, slug
-from identkit.plants import plant_parameters
-
-_WITHOUT_PARAMETERS = (
-    Outcome.TOO_FEW_POINTS,
-    Outcome.NO_MODES,
-    Outcome.NOT_FINITE,
-    Outcome.NOT_FITTED,
-)
+from identkit.plants import lacks_plant, plant_parameters
 
 
 @dataclass(frozen=True)
@@ -62,7 +55,10 @@ def fitted_plants(modes: xr.Dataset) -> FittedPlants:
     _refuse_other_shapes(modes)
     names = [str(name) for name in modes["response"].values]
     plants = [plant_parameters(modes, k) for k in range(len(names))]
-    reasons = [_why_missing(modes, k, plant) for k, plant in enumerate(plants)]
+    lacking = lacks_plant(modes)
+    reasons = [
+        _by_outcome(modes, k) if lacking[k] else _by_value(plant) for k, plant in enumerate(plants)
+    ]
     kept = [k for k, reason in enumerate(reasons) if not reason]
     if not kept:
         raise InputError(Problem("modes", f"none of {len(names)} responses fitted", "at least one"))
@@ -84,10 +80,16 @@ def _refuse_other_shapes(modes: xr.Dataset) -> None:
         raise InputError(Problem("modes, attribute base", repr(base), " or ".join(BASES)))
 
 
-def _why_missing(modes: xr.Dataset, k: int, plant: ModalParameters) -> str:
+def _by_outcome(modes: xr.Dataset, k: int) -> str:
     outcome = Outcome(int(modes["fit_outcome"].values[k]))
-    if outcome in _WITHOUT_PARAMETERS:
-        return f"{slug(outcome)}: {ADVICE[outcome].happened}"
+    left = ""
+    if outcome == Outcome.NO_MODES and "unexplained_share" in modes:
+        share = float(modes["unexplained_share"].values[k])
+        left = f", and the rest of the model leaves {share:.0%} of the response"
+    return f"{slug(outcome)}: {ADVICE[outcome].happened}{left}"
+
+
+def _by_value(plant: ModalParameters) -> str:
     for name, value in vars(plant).items():
         if not isinstance(value, str) and not np.all(np.isfinite(value)):
             return f"its {name.replace('_', ' ')} is missing"

@@ -19,7 +19,7 @@ def mode_table(fits: xr.Dataset, groups: ModeTable | None = None) -> ModeTable:
     frequency = fits["modal_frequency"].values.astype(float)
     damping = fits["damping_ratio"].values.astype(float)
     residue = fits["residue"].transpose(*CHANNEL_DIMS).values.astype(float)
-    channels = residue.reshape(*residue.shape[:2], -1)
+    channels = residue.reshape(*residue.shape[:2], residue.shape[2] * residue.shape[3])
     errors = mode_errors(fits)
     usable = (frequency > 0.0) & np.isfinite(damping) & np.isfinite(channels).all(axis=-1)
     frequency = np.where(usable, frequency, np.nan)

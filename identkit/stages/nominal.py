@@ -149,7 +149,7 @@ def nominal_plant(nominal: xr.Dataset) -> NominalPlant:
 
     def column(name: str) -> FloatArray:
         values = np.asarray(nominal[name].values, dtype=float)
-        return values.reshape(nominal.sizes["mode"], -1)[:, 0]
+        return values[:, 0, 0] if values.ndim == 3 else values
 
     parameters = ModalParameters(
         column("modal_frequency"),

@@ -18,6 +18,7 @@ from identkit.methods.shifted_modes import pair_shifted_modes
 from identkit.methods.template_assignment import assign_all, expected_log_frequency
 from identkit.outcomes import Outcome
 from identkit.stages.mode_tables import CHANNEL_DIMS, mode_errors, mode_table
+from identkit.stages.unexplained import unexplained_share
 from identkit.stages.warm_refit import WarmRefit, find_missing_modes
 
 PER_MODE = ("modal_frequency", "damping_ratio", "mode_significance")
@@ -66,16 +67,19 @@ def pair_modes(
     Dataset
         As `fits`, with modes named M1, M2 ... by population frequency and E1, E2 ... for extra
         ones; ``mode_in_population``, ``mode_outcome``, ``mode_position``, standard errors,
-        ``mode_share``, ``mode_expected_frequency``, ``mode_found_warm_mask``. For scalar plants
+        ``mode_share``, ``mode_expected_frequency``, ``mode_found_warm_mask`` and, where the
+        responses are given, ``unexplained_share``. For scalar plants
         base, delay and covariance are those of the refit where one was kept.
 
     Raises
     ------
     InputError
-        If there is no response or no fitted mode at all.
+        If there is no response.
 
     Notes
     -----
+    A campaign may have no population mode at all: base, feedthrough and delay are a plant too.
+
     Outcomes: DONE, MODE_MISSING, MODE_EXTRA, MODE_SHIFTED (far from where the population has it,
     but the only candidate), MODE_CROSSING, MODE_BELOW_SIGNIFICANCE, MODE_OUT_OF_BAND.
     """
@@ -93,6 +97,8 @@ def pair_modes(
         fits, gained = find_missing_modes(fits, table, template, named, refit, unpaired_cost)
         table = mode_table(fits)
         assigned = assign_all(table, template, unpaired_cost)
+        left = unexplained_share(fits, responses, screening)
+        fits = fits.assign(unexplained_share=("response", left))
     paired = name_modes(fits, table, template, assigned)
     warm = np.zeros(paired["modal_frequency"].shape, dtype=bool)
     warm[:, : gained.shape[1]] = gained
@@ -104,7 +110,7 @@ def name_modes(
 ) -> xr.Dataset:
     """Return the modes dataset for an assignment of fitted modes to population modes."""
     modes = len(template.log_frequency)
-    share = found_share(table, assigned, modes) if modes else np.zeros(0)
+    share = found_share(table, assigned, modes)
     assigned, shifted = pair_shifted_modes(table, template, assigned)
     assigned = _add_extra(table, assigned, modes)
     columns = int(max(assigned.max(initial=-1) + 1, modes))
@@ -123,17 +129,13 @@ def name_modes(
         mode_share=("mode", np.concatenate([share, np.full(columns - modes, np.nan)])),
         mode_expected_frequency=(("response", "mode"), expected),
     )
-    return paired.assign_coords(mode=names)
+    return paired.assign_coords(mode=np.array(names, dtype=str))
 
 
 def _checked_table(fits: xr.Dataset) -> ModeTable:
     if fits.sizes["response"] == 0:
         raise InputError(Problem("fits", "no response", "at least one fitted response"))
-    table = mode_table(fits)
-    if not np.isfinite(table.log_frequency).any():
-        found = f"no mode in any of {fits.sizes['response']} responses"
-        raise InputError(Problem("fits", found, "at least one fitted mode to pair"))
-    return table
+    return mode_table(fits)
 
 
 def _add_extra(table: ModeTable, assigned: IntArray, modes: int) -> IntArray:

@@ -23,6 +23,7 @@ from identkit.stages.population_quantity import (
     QuantitySummary,
     base_quantities,
     mode_quantities,
+    mode_quantity_names,
     summarise,
 )
 from identkit.stages.response_labels import text_label
@@ -60,10 +61,11 @@ def describe_population(
     Raises
     ------
     InputError
-        If no population mode or no response is left.
+        If no response is left.
 
     Notes
     -----
+    There may be no mode at all: the base, the feedthrough and the delay are a plant too.
     Modes that stand far off the population (MODE_SHIFTED) and modes outside the band do not
     count, unless fewer than two others are left; a deviation is that of the units in step.
     Unit effects are best linear unbiased predictions; their correlation is shrunk (Schaefer,
@@ -72,9 +74,9 @@ def describe_population(
     """
     kept = ~np.isin(modes["response"].values.astype(str), list(leave_out))
     population = modes["mode_in_population"].values.astype(bool)
-    if not population.any() or not kept.any():
-        found = f"{int(population.sum())} population modes in {int(kept.sum())} responses"
-        raise InputError(Problem("modes", found, "at least one of each"))
+    if not kept.any():
+        found = f"none left of {len(kept)} responses"
+        raise InputError(Problem("modes", found, "at least one response"))
     modes = modes.isel(response=np.flatnonzero(kept), mode=np.flatnonzero(population))
     design = campaign_design(modes, reference_temperature)
     usable = _counted(modes)
@@ -125,14 +127,17 @@ def _counts(modes: xr.Dataset) -> dict[str, tuple[str, IntArray]]:
 def _mode_part(
     modes: xr.Dataset, design: Design, per_mode: list[list[QuantitySummary]]
 ) -> xr.Dataset:
-    names = [summary.name for summary in per_mode[0]]
+    names = mode_quantity_names(modes)
     dims = ("mode", "quantity")
+    shape = (modes.sizes["mode"], len(names))
+    every = [summary for row in per_mode for summary in row]
     variables = {
-        statistic: (dims, np.array([[s.statistics[statistic] for s in row] for row in per_mode]))
+        statistic: (dims, np.array([s.statistics[statistic] for s in every]).reshape(shape))
         for statistic in STATISTICS
     }
-    head = np.array([[s.head_value for s in row] for row in per_mode])
-    head_error = np.array([[s.head_value_standard_error for s in row] for row in per_mode])
+    by_head = (*shape, len(design.heads))
+    head = np.array([s.head_value for s in every]).reshape(by_head)
+    head_error = np.array([s.head_value_standard_error for s in every]).reshape(by_head)
     return xr.Dataset(
         {
             **variables,

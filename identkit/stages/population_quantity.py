@@ -76,6 +76,14 @@ class QuantitySummary:
     unit_effect: FloatArray
 
 
+def mode_quantity_names(modes: xr.Dataset) -> list[str]:
+    """Return the names of what `mode_quantities` yields, also where there is no mode."""
+    outputs, inputs = modes.sizes["output"], modes.sizes["input"]
+    channels = [(o, i) for o in range(outputs) for i in range(inputs)]
+    residues = [channel_name("residue", (outputs, inputs), o, i) for o, i in channels]
+    return ["modal_frequency", "damping_ratio", *residues]
+
+
 def mode_quantities(modes: xr.Dataset, mode: int, usable: BoolArray) -> Iterator[Quantity]:
     """Yield frequency, damping ratio and the residue of every channel of one mode."""
     one = modes.isel(mode=mode)

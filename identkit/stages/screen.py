@@ -9,6 +9,7 @@ from collections.abc import Sequence
 import numpy as np
 import xarray as xr
 
+from identkit.errors import InputError, Problem
 from identkit.grids import Gridded, datasets, gather
 from identkit.methods.arrays import BoolArray, FloatArray
 from identkit.methods.robust_distance import median_and_scale
@@ -54,8 +55,15 @@ def screen(
         ``missing_mask`` (response, output, input, frequency); ``response_mark``,
         ``response_mark_value``, ``response_mark_limit`` (response, mark). A value is NaN where
         it cannot be known: no variance, or fewer than five peers.
+
+    Raises
+    ------
+    InputError
+        If the band holds no measured point at all.
     """
     parts = datasets(responses)
+    if band is not None:
+        _refuse_empty_band(parts, band)
     masked = [_mark_points(part, band, coherence_limit) for part in parts]
     oddness = odd_responses(parts, [mask["usable_mask"] for mask in masked])
     limits = np.array([noise_limit, outlier_limit, float(fewest_points)])
@@ -103,6 +111,16 @@ def marked_responses(screening: Gridded, marks: Sequence[str]) -> dict[str, str]
                     limit = float(chosen["response_mark_limit"].values[i, k])
                     found.setdefault(str(name), []).append(_reason(str(mark), value, limit))
     return {name: "; ".join(reasons) for name, reasons in found.items()}
+
+
+def _refuse_empty_band(parts: Sequence[xr.Dataset], band: tuple[float, float]) -> None:
+    frequency = np.concatenate([part["frequency"].values for part in parts])
+    if not np.any((frequency >= band[0]) & (frequency <= band[1])):
+        place = f"[responses] band, {band[0]:.6g} to {band[1]:.6g} Hz"
+        found = (
+            f"no point in it: the data run from {frequency.min():.6g} to {frequency.max():.6g} Hz"
+        )
+        raise InputError(Problem(place, found, "a band that holds measured points"))
 
 
 def _mark_points(

@@ -10,13 +10,8 @@ from numpy.typing import NDArray
 from identkit.methods.modal_model import parameter_names
 from identkit.outcomes import ADVICE, Outcome
 from identkit.plant_set.fields import Covariance, FittedPlant, FloatArray, IntArray
+from identkit.plants import lacks_plant
 
-WITHOUT_PARAMETERS = (
-    Outcome.TOO_FEW_POINTS,
-    Outcome.NO_MODES,
-    Outcome.NOT_FINITE,
-    Outcome.NOT_FITTED,
-)
 _PER_MODE = ("response", "mode")
 _PER_MODE_CHANNEL = ("response", "mode", "output", "input")
 _PER_CHANNEL = ("response", "output", "input")
@@ -49,9 +44,12 @@ def set_plants(modes: xr.Dataset) -> tuple[list[FittedPlant], dict[str, str]]:
         covariance), and a reason for every response without a usable fit.
     """
     columns = _columns(modes)
+    lacking = np.zeros(modes.sizes["response"], dtype=bool)
+    if "fit_outcome" in modes:
+        lacking = lacks_plant(modes)
     plants, missing = [], {}
     for index, labels in enumerate(labels_of(modes)):
-        reason = _unusable(columns, index)
+        reason = _unusable(columns, index, bool(lacking[index]))
         if reason:
             missing[str(modes["response"].values[index])] = reason
         else:
@@ -100,14 +98,14 @@ def _columns(modes: xr.Dataset) -> dict[str, Any]:
     return columns
 
 
-def _unusable(columns: dict[str, Any], index: int) -> str:
+def _unusable(columns: dict[str, Any], index: int, lacking: bool) -> str:
     code = Outcome.DONE if columns["fit_outcome"] is None else int(columns["fit_outcome"][index])
     values = [
         columns[name][index]
         for name in ("delay", "base_frequency", "base_gain", "base_residue", "feedthrough")
         if columns[name] is not None
     ]
-    if code not in WITHOUT_PARAMETERS and all(np.isfinite(value).all() for value in values):
+    if not lacking and all(np.isfinite(value).all() for value in values):
         return ""
     happened = ADVICE[Outcome(code)].happened if code != Outcome.DONE else "no finite fit"
     return f"not fitted: {happened}"

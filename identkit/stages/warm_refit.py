@@ -21,6 +21,14 @@ from identkit.outcomes import Outcome
 from identkit.stages.fit import refit_modes
 from identkit.stages.mode_tables import mode_table
 
+SCALARS = (
+    "delay",
+    "feedthrough",
+    "base_gain",
+    "base_frequency",
+    "base_damping_ratio",
+    "base_residue",
+)
 WARM_SIGNIFICANCE = 4.0
 """Residue over its standard error that a mode found by name must reach to be kept."""
 
@@ -73,14 +81,14 @@ def find_missing_modes(
     """
     missing = missing_modes(assigned, len(template.log_frequency))
     gained = np.zeros(missing.shape, dtype=bool)
-    wanted = missing
+    wanted = missing & _can_start(fits)[:, None] & np.isfinite(template.log_damping)
     # Twice: the second round asks only for the modes that the first found significant.
     for _ in range(2):
         rows = np.flatnonzero(wanted.any(axis=1))
         if rows.size == 0:
             break
         starts = {
-            str(fits["response"].values[i]): _start(fits, table, template, wanted[i], int(i))
+            str(fits["response"].values[i]): _start(fits, table, template, wanted[i], i)
             for i in rows.tolist()
         }
         refits = refit_modes(
@@ -110,6 +118,13 @@ def missing_modes(assigned: IntArray, modes: int) -> BoolArray:
     return missing
 
 
+def _can_start(fits: xr.Dataset) -> BoolArray:
+    """Whether a response has a fit to start from: not where every parameter is missing."""
+    names = [name for name in SCALARS if name in fits]
+    values = [fits[name].values.reshape(fits.sizes["response"], -1) for name in names]
+    return np.asarray(np.isfinite(np.concatenate(values, axis=1)).all(axis=1))
+
+
 def _mask(rows: IntArray, size: int) -> BoolArray:
     mask = np.zeros(size, dtype=bool)
     mask[rows] = True
@@ -121,14 +136,13 @@ def _start(
 ) -> ModalParameters:
     """Return the response's own fit with the population's guess of the wanted modes added."""
     own = fits.isel(response=i)
-    known = np.isfinite(table.log_frequency[i])
+    known = np.isfinite(own["modal_frequency"].values)
     one = np.arange(len(table.head)) == i
     frequency = np.exp(expected_log_frequency(table.rows(one), template)[0, wanted])
-    residue = template.residue[table.head[i], wanted, 0]
+    # A head that never showed the mode has no residue to start from; residues are solved for.
+    residue = np.nan_to_num(template.residue[table.head[i], wanted, 0])
     base = str(fits.attrs["base"])
-    scalars = ["delay", "feedthrough"]
-    scalars += ["base_gain"] if base == "free" else []
-    scalars += ["base_frequency", "base_damping_ratio", "base_residue"] if base == "pivot" else []
+    scalars = [name for name in SCALARS if name in fits]
     rate = own["residue_rate"].values[known, 0, 0]
     return ModalParameters(
         modal_frequency=np.concatenate([own["modal_frequency"].values[known], frequency]),

@@ -1,11 +1,14 @@
 """Pairing of labelled fits: names, outcomes, extras, and the warm refit for missing modes."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 import xarray as xr
 
 from identkit.errors import InputError
 from identkit.outcomes import Outcome
+from identkit.stages import warm_refit
 from identkit.stages.fit import fit_modes
 from identkit.stages.pair import pair_modes
 from identkit.synthetic import InventedBench, Story, invent_campaign, to_dataset
@@ -120,10 +123,29 @@ def test_crossings_are_reported():
 def test_nothing_to_pair_is_refused_in_one_sentence(fits):
     with pytest.raises(InputError, match="no response"):
         pair_modes(fits.isel(response=slice(0, 0)))
-    empty = fits.copy(deep=True)
+
+
+@pytest.mark.parametrize("axis", [0, 3])
+def test_no_mode_at_all_is_a_population_of_none(fits, axis):
+    empty = fits.isel(mode=slice(0, axis)).copy(deep=True)
     empty["modal_frequency"][:] = np.nan
-    with pytest.raises(InputError, match="no mode in any of 288 responses"):
-        pair_modes(empty)
+    paired = pair_modes(empty)
+    assert paired.sizes["mode"] == 0
+    assert paired["delay"].equals(fits["delay"])
+
+
+def test_modes_of_single_responses_are_all_extra(fits):
+    """Three responses, a different mode in each: no population, nothing lost."""
+    few = fits.isel(response=[0, 1, 2]).copy(deep=True)
+    keep = np.zeros(few["modal_frequency"].shape, dtype=bool)
+    keep[[0, 1, 2], [0, 3, 6]] = True
+    few["modal_frequency"] = few["modal_frequency"].where(
+        xr.DataArray(keep, dims=few["modal_frequency"].dims)
+    )
+    paired = pair_modes(few)
+    assert not paired["mode_in_population"].any()
+    assert paired["mode"].values.tolist() == ["E1", "E2", "E3"]
+    assert (paired["mode_outcome"].values[[0, 1, 2], [0, 1, 2]] == Outcome.MODE_EXTRA).all()
 
 
 def test_two_outputs_are_paired_on_both_residues():
@@ -174,11 +196,7 @@ def test_a_mode_that_is_not_there_stays_missing():
     responses = to_dataset(campaign)
     fits = fit_modes(responses)
     # the same plant without its second mode, measured without noise
-    plant = campaign.responses[3].plant
-    s = 2j * np.pi * campaign.frequency
-    natural = 2.0 * np.pi * plant.modal_frequency[1]
-    term = plant.residue[1] / (s**2 + 2.0 * plant.damping_ratio[1] * natural * s + natural**2)
-    responses["frequency_response"][3, 0, 0] -= term * np.exp(-s * plant.delay)
+    responses["frequency_response"][3, 0, 0] -= _term(campaign, campaign.responses[3].plant, 1)
     refitted = fit_modes(responses.isel(response=[3]))
     for name in ("modal_frequency", "damping_ratio", "mode_significance"):
         fits[name][3] = np.nan
@@ -189,6 +207,62 @@ def test_a_mode_that_is_not_there_stays_missing():
     paired = pair_modes(fits, responses)
     assert paired["mode_outcome"].sel(mode="M2").values[3] == Outcome.MODE_MISSING
     assert (paired["mode_outcome"] == Outcome.MODE_MISSING).sum() == 1
+
+
+def test_a_second_round_follows_a_first_that_widened_the_fits():
+    """One response gains a ninth mode; another is asked again for the one it really has."""
+    campaign = invent_campaign(
+        seed=6, units=6, heads=2, story=SOUND, bench=InventedBench(points=500)
+    )
+    responses = to_dataset(campaign)
+    values = responses["frequency_response"]
+    plant = campaign.responses[0].plant
+    moved = replace(plant, modal_frequency=plant.modal_frequency * 1.1)
+    values[0, 0, 0] += _term(campaign, moved, 5)
+    values[3, 0, 0] -= _term(campaign, campaign.responses[3].plant, 1)
+    fits = fit_modes(responses)
+    assert fits.sizes["mode"] == 9
+    for row in (0, 3):
+        fifth = campaign.responses[row].plant.modal_frequency[4]
+        _forget(fits, row, int(np.nanargmin(np.abs(fits["modal_frequency"].values[row] - fifth))))
+    narrow = [name for name in fits["parameter"].values if not name.endswith("_9")]
+    fits = fits.isel(mode=slice(0, 8)).sel(parameter=narrow, parameter_other=narrow)
+    paired = pair_modes(fits, responses)
+    assert paired["mode_found_warm_mask"].sel(mode="M5").values[[0, 3]].all()
+    assert paired["mode_outcome"].sel(mode="M2").values[3] == Outcome.MODE_MISSING
+
+
+def test_a_response_without_a_fit_is_not_refitted(monkeypatch):
+    campaign = invent_campaign(
+        seed=6, units=6, heads=1, story=SOUND, bench=InventedBench(points=500)
+    )
+    responses = to_dataset(campaign)
+    fits = fit_modes(responses)
+    for name in fits.data_vars:
+        if fits[name].dtype.kind == "f":
+            fits[name][2] = np.nan
+    fits["fit_outcome"][2] = Outcome.NOT_FINITE
+    asked = []
+    real = warm_refit.refit_modes
+
+    def refit(responses, starts, *arguments, **options):
+        asked.extend(starts)
+        for start in starts.values():
+            values = [value for value in vars(start).values() if not isinstance(value, str)]
+            assert all(np.isfinite(value).all() for value in values)
+        return real(responses, starts, *arguments, **options)
+
+    monkeypatch.setattr(warm_refit, "refit_modes", refit)
+    _forget(fits, 0, 3)
+    pair_modes(fits, responses)
+    assert asked == [str(fits["response"].values[0])]
+
+
+def _term(campaign, plant, mode):
+    s = 2j * np.pi * campaign.frequency
+    natural = 2.0 * np.pi * plant.modal_frequency[mode]
+    term = plant.residue[mode] / (s**2 + 2.0 * plant.damping_ratio[mode] * natural * s + natural**2)
+    return term * np.exp(-s * plant.delay)
 
 
 def _forget(fits, row, place):

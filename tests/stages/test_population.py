@@ -225,5 +225,5 @@ def test_responses_can_be_left_out_by_name(modes):
 
 
 def test_nothing_to_describe_is_refused(modes):
-    with pytest.raises(InputError, match="8 population modes in 0 responses"):
+    with pytest.raises(InputError, match="none left of 288 responses"):
         describe_population(modes, leave_out=modes["response"].values.tolist())

@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 import xarray as xr
 
+from identkit.errors import InputError
 from identkit.grids import gather
 from identkit.stages.screen import mark_sentences, marked_responses, screen
 from identkit.synthetic import InventedBench, InventedSpread, Story, invent_campaign, to_dataset
@@ -20,6 +21,13 @@ def responses(seed=1, **changes):
 def outliers(screening):
     mark = screening["response_mark"].sel(mark="outlier")
     return set(screening["response"].values[mark.values].tolist())
+
+
+def test_a_band_without_points_is_refused_with_the_range_of_the_data():
+    measured = responses(units=2)
+    low, high = measured["frequency"].values[[0, -1]]
+    with pytest.raises(InputError, match=f"band.* the data run from {low:.6g} to {high:.6g} Hz"):
+        screen(measured, band=(1e6, 2e6))
 
 
 @pytest.mark.parametrize("seed", range(3))
