@@ -8,6 +8,7 @@ from importlib.util import find_spec
 from typing import Any
 
 from identkit.errors import InputError, Problem
+from identkit.plant_set.fields import FORMAT
 
 PROBLEMS_SHOWN = 10
 _NUMBER = {"type": "number"}
@@ -41,13 +42,19 @@ def check_schema(document: Any, place: str) -> bool:
     InputError
         With one problem per field that breaks the schema.
     """
+    stated = document.get("format") if isinstance(document, dict) else None
+    if stated != FORMAT:
+        found = "no set file" if stated is None else f"a file of format {stated!r}"
+        raise InputError(Problem(place, found, f"a set file, of format {FORMAT!r}"))
     if find_spec("jsonschema") is None:
         return False
     errors = sorted(
         _validator().iter_errors(document), key=lambda error: list(map(str, error.path))
     )
     if errors:
-        raise InputError([_problem(error, place) for error in errors[:PROBLEMS_SHOWN]])
+        # every missing field of one object is an error of its own with the same sentence
+        problems = dict.fromkeys(_problem(error, place) for error in errors)
+        raise InputError(list(problems)[:PROBLEMS_SHOWN])
     return True
 
 

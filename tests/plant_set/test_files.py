@@ -164,6 +164,24 @@ def test_a_malformed_field_is_named(json_path, field, change):
     assert "set.json" in str(caught.value)
 
 
+@pytest.mark.parametrize("contents", ['{"format": "something"}', '{"a": 1}', "[1, 2]"])
+def test_a_file_that_is_no_set_is_refused_in_one_sentence(tmp_path, contents):
+    (tmp_path / "other.json").write_text(contents)
+    with pytest.raises(InputError, match="other.json: found") as caught:
+        load_set(tmp_path / "other.json")
+    assert len(caught.value.problems) == 1
+
+
+def test_missing_fields_are_told_once(json_path):
+    document = json.loads(json_path.read_text())
+    for name in ("radii", "plants", "attribution"):
+        document.pop(name)
+    json_path.write_text(json.dumps(document))
+    with pytest.raises(InputError, match="the fields") as caught:
+        load_set(json_path)
+    assert len(caught.value.problems) == 1
+
+
 STRUCTURAL = [c for c in CHANGES if c[0] != "attribution[0]"]
 STRUCTURAL = [c for c in STRUCTURAL if c[0] != "plants[0].reach.value"]
 
@@ -181,7 +199,7 @@ def test_the_reader_alone_names_it_too(json_path, monkeypatch, field, change):
 
 def test_without_the_validator_check_schema_says_so(monkeypatch):
     monkeypatch.setattr(schema_module, "find_spec", lambda name: None)
-    assert check_schema({}, "x") is False
+    assert check_schema({"format": f.FORMAT}, "x") is False
 
 
 def test_a_truncated_json_file_is_refused_with_its_line(json_path):
