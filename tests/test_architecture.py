@@ -40,6 +40,11 @@ LEVELS = {
     "plants": 2,
     "not_yet": 3,
     "show": 7,
+    "controller": 3,
+    "set_price": 3,
+    "plant_loops": 4,
+    "controller_check": 7,
+    "set_comparison": 7,
     "set_audit": 7,
     "__init__": 10,
 }

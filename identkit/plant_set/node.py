@@ -41,6 +41,10 @@ class Node:
         if not holds:
             self.at(field).refuse(expected)
 
+    def plain(self) -> Any:
+        """Return the value as JSON has it."""
+        return self._value
+
     def mapping(self) -> dict[str, Any]:
         """Return the value as a mapping."""
         if not isinstance(self._value, Mapping):
