@@ -33,6 +33,8 @@ LARGEST_CORRECTION = 4.0
 SMALLEST_WINDOW = 15
 SMALLEST_WIGGLE = 0.02
 FLOOR_TRIALS = 120
+LARGEST_BINS = 48
+LARGEST_EXCESS = 8.0
 
 
 def start_variance(frequency: FloatArray, response: ComplexArray) -> FloatArray:
@@ -80,6 +82,10 @@ def _from_residuals(error: FloatArray, model: ComplexArray) -> FloatArray:
     return np.asarray(shape * np.maximum(level, 1e-3), dtype=float)
 
 
+def _median(values: FloatArray) -> float:
+    return float(np.median(values))
+
+
 def _mean_by_median(error: FloatArray) -> float:
     return float(np.median(error)) / LN2
 
@@ -88,7 +94,7 @@ def _relative_and_floor(
     error: FloatArray, power: FloatArray, mean_of: Callable[[FloatArray], float]
 ) -> tuple[float, float]:
     """Split the error in a part relative to power and a constant: bins of equal power, by logs."""
-    bins = np.array_split(np.argsort(power), max(2, min(12, error.size // 25)))
+    bins = np.array_split(np.argsort(power), max(2, min(LARGEST_BINS, error.size // 25)))
     mean = np.array([mean_of(error[part]) for part in bins])
     level = np.array([np.median(power[part]) for part in bins])
     ratios = np.concatenate([[0.0], np.geomspace(level[0] / 10.0, level[-1] * 10.0, FLOOR_TRIALS)])
@@ -103,7 +109,11 @@ def _model_based(variance: FloatArray, response: ComplexArray, model: ComplexArr
     rough = np.diff(np.log(np.maximum(variance, 1e-300)))
     follows = np.diff(wiggle)
     energy = float(follows @ follows)
-    if energy == 0.0 or float(rough @ follows) / energy < 0.5:
+    if energy == 0.0:
+        return variance
+    slope = float(rough @ follows) / energy
+    error = float(np.std(rough - slope * follows)) / energy**0.5
+    if slope < max(0.5, 4.0 * error):
         return variance
     factor = np.clip(np.exp(-wiggle), 1.0 / LARGEST_CORRECTION, LARGEST_CORRECTION)
     return np.asarray(variance * factor, dtype=float)
@@ -114,15 +124,14 @@ def _without_scatter(variance: FloatArray, error: FloatArray, model: ComplexArra
     if error.size < 4 * SMALLEST_WINDOW:
         return variance
     smooth = _smooth(variance, _power(model))
-    wiggle = variance / smooth - 1.0
-    if float(np.median(np.abs(wiggle))) < SMALLEST_WIGGLE:
+    ratio = variance / smooth
+    away = np.abs(np.log(ratio))
+    if float(np.median(away)) < SMALLEST_WIGGLE:
         return variance
-    ordinary = np.abs(np.log(variance / smooth)) < 4.0 * np.median(
-        np.abs(np.log(variance / smooth))
-    )
-    excess = error / smooth
-    excess = np.minimum(excess / max(float(np.mean(excess[ordinary])), 1e-300), 8.0) - 1.0
-    wiggle, excess = wiggle[ordinary], excess[ordinary]
+    ordinary = away < 5.0 * np.median(away)
+    wiggle = ratio[ordinary] / np.mean(ratio[ordinary]) - 1.0
+    excess = (error / smooth)[ordinary]
+    excess = np.minimum(excess / max(float(np.mean(excess)), 1e-300), LARGEST_EXCESS) - 1.0
     if float(wiggle @ excess) / float(wiggle @ wiggle) > 0.5:
         return variance
     return np.where(ordinary, smooth, variance)
@@ -130,7 +139,7 @@ def _without_scatter(variance: FloatArray, error: FloatArray, model: ComplexArra
 
 def _smooth(variance: FloatArray, power: FloatArray) -> FloatArray:
     """Return relative part and floor of a variance, times its slow variation."""
-    relative, floor = _relative_and_floor(variance, power, np.mean)
+    relative, floor = _relative_and_floor(variance, power, _median)
     shape = relative * power + floor
     ratio = variance / shape
     typical = median_filter(ratio, _window(ratio.size), mode="reflect")
