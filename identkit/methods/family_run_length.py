@@ -5,11 +5,11 @@ distributions", Journal of the American Statistical Association 62 (1967) 626-63
 simple proof of the Gaussian correlation conjecture extended to some multivariate gamma
 distributions", Far East Journal of Theoretical Statistics 48 (2014) 139-145.
 
-"No signal up to point t" is a convex set, symmetric about zero, of the points of a two-sided
-individuals chart, EWMA, CUSUM or multivariate EWMA. For normal points the chance of several such
-sets together is at least the product of their chances, however the series and the charts depend on
-each other (Royen 2014; for single intervals Šidák 1967). Limits solved for the product therefore
-give a run length of at least what is stated.
+"No signal up to point t" is a convex set, symmetric about zero, of the points of a two-sided chart
+of individuals, of running group means, an EWMA, a CUSUM or a multivariate EWMA. For normal points
+the chance of several such sets together is at least the product of their chances, however the
+series and the charts depend on each other (Royen 2014; for single intervals Šidák 1967). Limits
+solved for the product therefore give a run length of at least what is stated.
 """
 
 import functools
@@ -37,7 +37,8 @@ class ChartFamily:
     Attributes
     ----------
     series
-        Number of series, each on a chart of individuals, an EWMA and a two-sided CUSUM.
+        Number of series, each on a chart of individuals, one of running group means (standard
+        normal at every point, same limit), an EWMA and a two-sided CUSUM.
     joint_series
         Number of series in the multivariate EWMA; 0 for none.
     ewma_weight, joint_weight
@@ -55,7 +56,7 @@ class ChartFamily:
     @property
     def charts(self) -> int:
         """Number of charts."""
-        return 3 * self.series + (self.joint_series > 0)
+        return 4 * self.series + (self.joint_series > 0)
 
 
 @dataclass(frozen=True)
@@ -65,7 +66,7 @@ class FamilyLimits:
     Attributes
     ----------
     individuals
-        Standard deviations of a point.
+        Standard deviations of a point, and of a running group mean.
     ewma
         Asymptotic standard deviations of the average.
     cusum
@@ -130,7 +131,7 @@ def _together(limits: tuple[float, float, float, float], family: ChartFamily) ->
     """Return the run length of the product of the charts' chances of not having signalled."""
     individuals, moving, sums, joint = limits
     points = _EXACT_POINTS
-    chance = individuals_survival(individuals, points)
+    chance = individuals_survival(individuals, points) ** 2
     chance = chance * ewma_chain(family.ewma_weight, moving).survival(points)
     # Both sums seldom near their limits together: Kemp's rule for the two sides says the same.
     chance = chance * cusum_chain(family.cusum_reference, sums).survival(points) ** 2

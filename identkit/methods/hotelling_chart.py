@@ -1,8 +1,8 @@
 """Hotelling's T2 for individual multivariate points, and its limits.
 
 Sources: H. Hotelling, "Multivariate quality control", in *Techniques of Statistical Analysis*,
-1947; N. D. Tracy, J. C. Young and R. L. Mason, "Multivariate control charts for individual observations",
-Journal of Quality Technology 24 (1992) 88-95 (limits with an estimated covariance).
+1947; N. D. Tracy, J. C. Young and R. L. Mason, "Multivariate control charts for individual
+observations", Journal of Quality Technology 24 (1992) 88-95 (limits with an estimated covariance).
 """
 
 import numpy as np

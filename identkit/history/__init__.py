@@ -1,0 +1,1 @@
+"""The store of past measurements and what they were charted by."""
