@@ -65,6 +65,11 @@ def units_of(data: xr.Dataset) -> TextArray:
     return ids if named is None else np.where(named == "", ids, named)
 
 
+def spoken_unit(name: str) -> str:
+    """Return the name of a unit as it may stand in a sentence: 'unit 3' where it is a number."""
+    return name if any(letter.isalpha() for letter in name) else f"unit {name}"
+
+
 def condition_of(data: xr.Dataset) -> TextArray:
     """Return head, temperature and position of every response as one short text."""
     heads, positions = text_label(data, "head"), text_label(data, "position")
@@ -90,7 +95,7 @@ def short_names(data: xr.Dataset) -> TextArray:
         return ids
     conditions = condition_of(data)
     names = [
-        ", ".join(part for part in (unit, condition) if part) or identifier
+        ", ".join(part for part in (unit and spoken_unit(unit), condition) if part) or identifier
         for unit, condition, identifier in zip(named, conditions, ids, strict=True)
     ]
     return np.array(names, dtype=str)

@@ -5,7 +5,7 @@ from collections import defaultdict
 import numpy as np
 import xarray as xr
 
-from identkit.figures.labels import natural_key, nearest_mode, units_of
+from identkit.figures.labels import natural_key, nearest_mode, spoken_unit, units_of
 from identkit.figures.style import frequency_label
 from identkit.methods.arrays import FloatArray
 from identkit.outcomes import Outcome
@@ -122,7 +122,7 @@ def odd_modes_sentence(given: ReportInput) -> str:
         if unit in shifted:
             verb = "stands" if len(shifted[unit]) == 1 else "stand"
             found.append(f"{listed(shifted[unit], 4)} {verb} far from the population's place")
-        parts.append(f"{unit} ({'; '.join(found)})")
+        parts.append(f"{spoken_unit(unit)} ({'; '.join(found)})")
     return f"Inspect {listed(parts, 3)}." if parts else ""
 
 

@@ -3,7 +3,7 @@
 from collections import defaultdict
 from dataclasses import dataclass
 
-from identkit.figures.labels import condition_of, natural_key, units_of
+from identkit.figures.labels import condition_of, natural_key, spoken_unit, units_of
 from identkit.figures.set_plants import labelled
 from identkit.figures.style import frequency_label
 from identkit.plant_set.fields import Attribution, PlantSetFields
@@ -43,7 +43,7 @@ def touching(given: ReportInput) -> list[Touches]:
             unit, condition = names.get(entry.label, (entry.label, ""))
             places[unit].append(_place(given, entry, condition))
     ordered = sorted(places, key=lambda unit: (-len(places[unit]), natural_key(unit)))
-    return [Touches(unit, tuple(places[unit])) for unit in ordered]
+    return [Touches(spoken_unit(unit), tuple(places[unit])) for unit in ordered]
 
 
 def _names(contents: PlantSetFields) -> dict[str, tuple[str, str]]:

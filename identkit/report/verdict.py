@@ -80,16 +80,20 @@ def _held(given: ReportInput) -> str:
     read = sum(part.sizes["response"] for part in datasets(given.responses))
     if given.plant_set is None:
         return f"{counted(read, 'response')} read{_skipped(given)}; no set was made."
-    measured = given.plant_set.certificate.measured
-    return (
-        f"Holds {measured.held} of {measured.of} measured responses used "
-        f"({read} read{_skipped(given)}; {_left_out(given)})."
-    )
+    certificate = given.plant_set.certificate
+    measured, audit = certificate.measured, certificate.audit
+    which = f"({read} read{_skipped(given)}; {_left_out(given)})"
+    if audit is not None and not audit.passed:
+        return (
+            f"Not shown to hold the {counted(measured.of, 'measured response')} used {which}: the "
+            f"audit failed."
+        )
+    return f"Holds {measured.held} of {measured.of} measured responses used {which}."
 
 
 def _skipped(given: ReportInput) -> str:
-    count = len(skipped_files(given))
-    return f", {counted(count, 'file')} skipped as unusable" if count else ""
+    names = [file for file, _ in skipped_files(given)]
+    return f", {counted(len(names), 'file')} skipped as unusable: {listed(names, 3)}" * bool(names)
 
 
 def _left_out(given: ReportInput) -> str:

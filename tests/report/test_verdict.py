@@ -7,7 +7,7 @@ import numpy as np
 from identkit.outcomes import Outcome
 from identkit.plant_set import fields
 from identkit.report.page import ReportInput
-from identkit.report.verdict import headline, verdict
+from identkit.report.verdict import headline, short_verdict, verdict
 
 
 def certificate_of(given, **changes):
@@ -24,8 +24,8 @@ def sentence(given, start):
 
 def test_held_sentence_counts_everything(given):
     assert sentence(given, "Holds") == (
-        "Holds 20 of 20 measured responses used (24 read, 1 file skipped as unusable; "
-        "4 left out, unit U06: dropped on the floor)."
+        "Holds 20 of 20 measured responses used (24 read, 1 file skipped as unusable: "
+        "bench/U01_H0.csv; 4 left out, unit U06: dropped on the floor)."
     )
     assert headline(given).state == "held"
     assert headline(given).sentence == "The set holds all 20 measured responses that were used."
@@ -60,10 +60,33 @@ def test_failed_audit_wins_over_counts(given):
     )
 
 
+def test_the_first_sentence_follows_the_audit(given):
+    audit = fields.AuditVerdict(False, ("reach of U01 is 1.2",), forced=False)
+    changed = certificate_of(given, audit=audit)
+    for sentences in (verdict(changed), short_verdict(changed)):
+        assert sentences[0].startswith("Not shown to hold the 20 measured responses used (24 read")
+        assert sentences[0].endswith("the audit failed.")
+        assert not any(each.startswith("Holds") for each in sentences)
+
+
+def test_a_unit_that_is_only_a_number_is_called_a_unit(given):
+    plants = tuple(
+        replace(plant, labels=plant.labels | {"unit": str(plant.labels["unit"]).strip("U0")})
+        for plant in given.plant_set.plants
+    )
+    entry = fields.Attribution(plants[0].response, 8263.0, 1.0, "M5")
+    numbered = replace(given.plant_set, plants=plants, attribution=(entry,))
+    text = sentence(replace(given, plant_set=numbered), "The bound is set")
+    assert "touches the weight: unit 1 (head 0, 10 °C near 8.26 kHz, M5)." in text
+
+
 def test_no_set_is_said_plainly(given):
     bare = ReportInput("s", given.responses)
     assert headline(bare).state == "no set"
-    assert verdict(bare)[0] == "24 responses read, 1 file skipped as unusable; no set was made."
+    assert (
+        verdict(bare)[0]
+        == "24 responses read, 1 file skipped as unusable: bench/U01_H0.csv; no set was made."
+    )
     assert any("nothing is claimed about the next unit" in each for each in verdict(bare))
 
 

@@ -232,7 +232,38 @@ def test_a_second_round_follows_a_first_that_widened_the_fits():
     assert paired["mode_outcome"].sel(mode="M2").values[3] == Outcome.MODE_MISSING
 
 
-def test_a_response_without_a_fit_is_not_refitted(monkeypatch):
+@pytest.fixture
+def asked(monkeypatch):
+    """Return the names of the responses that are refitted; every start must be finite."""
+    names = []
+    real = warm_refit.refit_modes
+
+    def refit(responses, starts, *arguments, **options):
+        names.extend(starts)
+        for start in starts.values():
+            values = [value for value in vars(start).values() if not isinstance(value, str)]
+            assert all(np.isfinite(value).all() for value in values)
+        return real(responses, starts, *arguments, **options)
+
+    monkeypatch.setattr(warm_refit, "refit_modes", refit)
+    return names
+
+
+def test_a_mode_known_from_one_response_only_gives_a_finite_start(asked, capfd):
+    """What has no estimate yet is NaN; a start of it made LAPACK complain on the terminal."""
+    campaign = invent_campaign(
+        seed=6, units=2, heads=1, temperatures=(25.0,), story=SOUND, bench=InventedBench(points=500)
+    )
+    responses = to_dataset(campaign)
+    fits = fit_modes(responses)
+    _forget(fits, 0, 3)
+    paired = pair_modes(fits, responses)
+    assert paired["mode_in_population"].sum() == 8
+    assert asked
+    assert "DLASCL" not in "".join(capfd.readouterr())
+
+
+def test_a_response_without_a_fit_is_not_refitted(asked):
     campaign = invent_campaign(
         seed=6, units=6, heads=1, story=SOUND, bench=InventedBench(points=500)
     )
@@ -242,17 +273,6 @@ def test_a_response_without_a_fit_is_not_refitted(monkeypatch):
         if fits[name].dtype.kind == "f":
             fits[name][2] = np.nan
     fits["fit_outcome"][2] = Outcome.NOT_FINITE
-    asked = []
-    real = warm_refit.refit_modes
-
-    def refit(responses, starts, *arguments, **options):
-        asked.extend(starts)
-        for start in starts.values():
-            values = [value for value in vars(start).values() if not isinstance(value, str)]
-            assert all(np.isfinite(value).all() for value in values)
-        return real(responses, starts, *arguments, **options)
-
-    monkeypatch.setattr(warm_refit, "refit_modes", refit)
     _forget(fits, 0, 3)
     pair_modes(fits, responses)
     assert asked == [str(fits["response"].values[0])]
