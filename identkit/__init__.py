@@ -13,6 +13,8 @@ _PUBLIC = {
     "bound_spread": "identkit.stages.bound",
     "state_coverage": "identkit.stages.coverage",
     "audit": "identkit.stages.audit",
+    "check_controller": "identkit.controller_check",
+    "read_controller": "identkit.controller",
     "load_set": "identkit.plant_set.files",
     "PlantSet": "identkit.plant_set.model",
     "run_study": "identkit.pipeline",

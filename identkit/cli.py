@@ -116,6 +116,27 @@ def audit(plant_set: Path, responses: tuple[Path, ...], study: Path | None) -> N
         sys.exit(NOT_HELD)
 
 
+_figure = click.option(
+    "--figure",
+    type=click.Path(dir_okay=False, path_type=Path),
+    help="Draw the picture to this .svg or .png file.",
+)
+
+
+@commands.command()
+@click.argument("plant_set", metavar="SET", type=click.Path(dir_okay=False, path_type=Path))
+@click.argument("controller", type=click.Path(dir_okay=False, path_type=Path))
+@_figure
+def check(plant_set: Path, controller: Path, figure: Path | None) -> None:
+    """Say what CONTROLLER does on SET: margins, robust stability, worst plants."""
+    from identkit.controller_answer import check_files
+
+    answer = check_files(plant_set, controller, figure)
+    click.echo(answer.text)
+    if not answer.holds:
+        sys.exit(NOT_HELD)
+
+
 def _run(
     study: Path,
     *,

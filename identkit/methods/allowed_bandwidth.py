@@ -163,8 +163,8 @@ def _least_over_band(size: Size, grid: FloatArray) -> tuple[float, float]:
     best, place = float(values.min()), float(grid[int(values.argmin())])
     padded = np.concatenate([[np.inf], values, [np.inf]])
     lowest = (values <= padded[:-2]) & (values <= padded[2:]) & (values <= REFINED_SHARE * best)
-    for k in np.flatnonzero(lowest):
-        bounds = grid[int(max(k - 1, 0))], grid[int(min(k + 1, grid.size - 1))]
+    for k in np.flatnonzero(lowest).tolist():
+        bounds = grid[max(k - 1, 0)], grid[min(k + 1, grid.size - 1)]
         found = minimize_scalar(
             lambda f: float(limiting_frequency(np.array([f]), size(np.array([f])))[0]),
             bounds=bounds,

@@ -143,8 +143,8 @@ def _least(function: Callable[[FloatArray], FloatArray], grid: FloatArray) -> tu
     padded = np.concatenate([[np.inf], values, [np.inf]])
     lowest = (values <= padded[:-2]) & (values <= padded[2:])
     best, place = float(values.min()), float(grid[int(values.argmin())])
-    for k in np.flatnonzero(lowest & (values <= REFINED_SHARE * best)):
-        left, right = grid[int(max(k - 1, 0))], grid[int(min(k + 1, grid.size - 1))]
+    for k in np.flatnonzero(lowest & (values <= REFINED_SHARE * best)).tolist():
+        left, right = grid[max(k - 1, 0)], grid[min(k + 1, grid.size - 1)]
         found = minimize_scalar(
             lambda f: float(function(np.array([f]))[0]),
             bounds=(left, right),
@@ -176,7 +176,7 @@ def margins_of_loop(
         Hz, where to look; by default a hundredth of the slowest to a hundred times the fastest
         pole.
     """
-    grid = _grid(loop, delay, low, high)
+    grid = loop_grid(loop, delay, low, high)
 
     def respond(frequency: FloatArray) -> ComplexArray:
         rational = frequency_response(loop, frequency)[:, 0, 0]
@@ -191,7 +191,10 @@ def margins_of_loop(
     )
 
 
-def _grid(loop: StateSpace, delay: float, low: float, high: float) -> FloatArray:
+def loop_grid(
+    loop: StateSpace, delay: float = 0.0, low: float = 0.0, high: float = np.inf
+) -> FloatArray:
+    """Return the frequencies (Hz) at which `margins_of_loop` looks; arguments as there."""
     poles = np.concatenate([loop.poles(), _closed_poles(loop)]) / TWO_PI
     poles = poles[np.abs(poles) > 1e-12 * np.max(np.abs(poles), initial=1.0)]
     sizes = np.abs(poles) if poles.size else np.ones(1)
