@@ -206,7 +206,8 @@ class Stage:
         entry = self.study.record["stages"].get(self.name)
         if entry is None or entry["key"] != self.key:
             return False
-        return all(_same_file(self.path(k), entry["files"].get(k)) for k in self.files)
+        known = entry["files"]
+        return all(_same_file(self.path(name), known.get(name)) for name in self.files)
 
     def path(self, name: str) -> Path:
         """Return where one of the stage's files stands."""
@@ -248,7 +249,7 @@ class Stage:
         return {
             "key": self.key,
             "after": list(self.after),
-            "files": {name: self.path(name).stat().st_size for name in self.files},
+            "files": {name: _file_entry(self.path(name)) for name in self.files},
             "seconds": round(self.seconds, 4),
             "finished": datetime.now(UTC).isoformat(timespec="seconds"),
         }
@@ -341,6 +342,12 @@ def _known_or_read(path: Path, known: dict[str, Any] | None) -> dict[str, Any]:
     status = path.stat()
     if known and (known["size"], known["modified_ns"]) == (status.st_size, status.st_mtime_ns):
         return known
+    return _file_entry(path)
+
+
+def _file_entry(path: Path) -> dict[str, Any]:
+    """Return size, time and digest of a file."""
+    status = path.stat()
     with path.open("rb") as file:
         digest = hashlib.file_digest(file, "sha256").hexdigest()
     return {"size": status.st_size, "modified_ns": status.st_mtime_ns, "sha256": digest}
@@ -350,8 +357,13 @@ def _relative(path: Path, folder: Path) -> str:
     return Path(os.path.relpath(path, folder)).as_posix()
 
 
-def _same_file(path: Path, size: int | None) -> bool:
-    return path.is_file() and path.stat().st_size == size
+def _same_file(path: Path, known: Any) -> bool:
+    """Whether a results file has the contents that were written; its time may differ (a copy)."""
+    if not path.is_file() or not isinstance(known, dict):
+        return False
+    if path.stat().st_size != known.get("size"):
+        return False
+    return bool(_file_entry(path)["sha256"] == known.get("sha256"))
 
 
 def _digest(parts: Sequence[str]) -> str:

@@ -1,5 +1,6 @@
 import json
 import os
+import shutil
 import subprocess
 import sys
 import textwrap
@@ -100,6 +101,27 @@ def test_a_lost_or_shortened_file_is_made_again(study_file, harm):
     target.unlink() if harm == "delete" else target.write_text("")
     run(study_file(), done)
     assert done == ["fit"]
+
+
+def test_a_file_edited_at_equal_size_and_time_is_made_again(study_file):
+    path = run(study_file(), []).path("fit.txt")
+    status, contents = path.stat(), bytearray(path.read_bytes())
+    contents[-1] ^= 1
+    path.write_bytes(contents)
+    os.utime(path, ns=(status.st_atime_ns, status.st_mtime_ns))
+    done = []
+    run(study_file(), done)
+    assert done == ["fit"]
+
+
+def test_a_copied_folder_is_still_current(study_file, tmp_path_factory):
+    study = study_file()
+    run(study, [])
+    copy = tmp_path_factory.mktemp("copy") / "study"
+    shutil.copytree(study.parent, copy, copy_function=shutil.copyfile)
+    done = []
+    run(copy / "study.toml", done)
+    assert done == []
 
 
 def test_forget_strikes_a_stage_and_what_follows(study_file):

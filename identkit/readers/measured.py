@@ -8,6 +8,7 @@ import numpy as np
 from identkit.methods.arrays import BoolArray, ComplexArray, FloatArray
 from identkit.methods.coherence_variance import coherence_variance
 
+VARIANCE_SOURCES = ("measured", "coherence", "residuals")
 _ROUNDING = 1e-6  # a coherence printed as 1.0000003 is 1 within its digits
 
 

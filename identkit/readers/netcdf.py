@@ -10,7 +10,7 @@ import xarray as xr
 from identkit.errors import InputError, Problem
 from identkit.grids import datasets, load
 from identkit.methods.arrays import BoolArray, FloatArray
-from identkit.readers.measured import MeasuredResponse, first_fault, with_variance
+from identkit.readers.measured import VARIANCE_SOURCES, MeasuredResponse, first_fault, with_variance
 from identkit.readers.path_pattern import Label, LabelledFile, checked_label
 from identkit.settings import ResponseSettings
 from identkit.units import FREQUENCY_UNITS, hertz_per
@@ -117,18 +117,27 @@ def _responses(
         if name in part
     }
     averages = _averages(part, options)
+    source = _stated_source(part)
     for k in range(part.sizes["response"]):
         labels = _labels_of(part, k, place)
         name = str(labels.pop("response", k + 1))
         measured = _one(
             frequency, {n: v[k] for n, v in points.items()}, f"{place}, response {name}"
         )
+        if source and measured.variance is not None:
+            measured = replace(measured, variance_source=source)
         measured = replace(
             with_variance(measured, averages[k]),
             input_unit=str(part.attrs.get("input_unit", "")),
             output_unit=str(part.attrs.get("output_unit", "")),
         )
         yield LabelledFile(file.path, name, labels | file.labels), measured
+
+
+def _stated_source(part: xr.Dataset) -> str:
+    """Return how the file says its variance is known, "" where it says nothing we know."""
+    source = str(part.attrs.get("variance_source", ""))
+    return source if source in VARIANCE_SOURCES else ""
 
 
 def _averages(part: xr.Dataset, options: ResponseSettings) -> list[float | None]:

@@ -39,6 +39,16 @@ def test_a_file_of_ours_comes_back_as_it_was(tmp_path):
     assert back.attrs["variance_source"] == "measured"
 
 
+@pytest.mark.parametrize("word", ["coherence", "residuals", "measured"])
+def test_a_file_that_says_where_its_variance_is_from_keeps_its_word(tmp_path, word):
+    data = invented(
+        frequency_response_variance=(POINT, np.full((2, 1, 1, 4), 0.1)),
+        coherence=(POINT, np.full((2, 1, 1, 4), 0.9)),
+    )
+    grids.save(data.assign_attrs(variance_source=word), tmp_path / "r.nc")
+    assert read_responses("r.nc", folder=tmp_path).attrs["variance_source"] == word
+
+
 def test_several_grids_stay_several(tmp_path):
     tree = grids.gather([invented(("a", "b"), 4), invented(("c",), 6)])
     grids.save(tree, tmp_path / "r.nc")
