@@ -14,6 +14,7 @@ _PUBLIC = {
     "state_coverage": "identkit.stages.coverage",
     "audit": "identkit.stages.audit",
     "check_controller": "identkit.controller_check",
+    "compare_sets": "identkit.set_comparison",
     "read_controller": "identkit.controller",
     "load_set": "identkit.plant_set.files",
     "PlantSet": "identkit.plant_set.model",

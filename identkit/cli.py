@@ -137,6 +137,20 @@ def check(plant_set: Path, controller: Path, figure: Path | None) -> None:
         sys.exit(NOT_HELD)
 
 
+@commands.command()
+@click.argument("first", metavar="SET", type=click.Path(dir_okay=False, path_type=Path))
+@click.argument("second", metavar="SET", type=click.Path(dir_okay=False, path_type=Path))
+@_figure
+def compare(first: Path, second: Path, figure: Path | None) -> None:
+    """Say whether one SET contains the other, what changed and what it costs."""
+    from identkit.comparison_answer import compare_files
+
+    answer = compare_files(first, second, figure)
+    click.echo(answer.text)
+    if not answer.holds:
+        sys.exit(NOT_HELD)
+
+
 def _run(
     study: Path,
     *,

@@ -18,6 +18,7 @@ from identkit.plant_loops import PlantLoops
 from identkit.plant_set.files import load_set
 from identkit.plant_set.model import PlantSet
 from identkit.plant_set.reach import Surroundings
+from identkit.set_price import setters_between
 from identkit.set_resonances import Resonances, resonances
 
 if TYPE_CHECKING:
@@ -138,19 +139,8 @@ def _lost(plant_set: PlantSet, pair: tuple[float, float], known: Resonances) -> 
     low, high = pair
     middle = low * high if low > 0.0 and np.isfinite(high) else max(low, 1e-9) ** 2
     at = float(np.sqrt(middle))
-    return f"  lost from {low:.5g} to {high:.5g} Hz: {known.nearest(at)}{_setters(plant_set, pair)}"
-
-
-def _setters(plant_set: PlantSet, pair: tuple[float, float]) -> str:
-    """Name the responses that set the radius in an interval, most frequent first."""
-    radii = plant_set.radii
-    inside = (radii.frequency >= pair[0]) & (radii.frequency <= pair[1])
-    names = [name for name, here in zip(radii.set_by, inside, strict=True) if here and name]
-    if not names:
-        return ""
-    ranked = sorted(set(names), key=lambda name: (-names.count(name), name))
-    more = f" and {len(ranked) - 3} more" if len(ranked) > 3 else ""
-    return f"; radius set there by {', '.join(ranked[:3])}{more}"
+    who = setters_between(plant_set, low, high)
+    return f"  lost from {low:.5g} to {high:.5g} Hz: {known.nearest(at)}{who}"
 
 
 def _listed_basis(plant_set: PlantSet, check: ControllerCheck) -> str:

@@ -98,6 +98,21 @@ def _conjugate_closed(roots: ComplexArray) -> ComplexArray:
     return np.asarray(np.concatenate([real, upper, upper.conj()]), dtype=complex)
 
 
+def setters_between(contents: PlantSetFields, low: float, high: float) -> str:
+    """Say which responses set the radius from `low` to `high` Hz, most frequent first, or "".
+
+    For the ends of sentences: it starts with a semicolon.
+    """
+    radii = contents.radii
+    inside = (radii.frequency >= low) & (radii.frequency <= high)
+    names = [name for name, here in zip(radii.set_by, inside, strict=True) if here and name]
+    if not names:
+        return ""
+    ranked = sorted(set(names), key=lambda name: (-names.count(name), name))
+    more = f" and {len(ranked) - 3} more" if len(ranked) > 3 else ""
+    return f"; radius set there by {', '.join(ranked[:3])}{more}"
+
+
 class _Size:
     """|W|, or |W/P0| for additive sets, as a function of frequency."""
 
