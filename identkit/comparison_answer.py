@@ -5,8 +5,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from identkit.controller_answer import Answer
-from identkit.figures_files import refuse_wrong_picture, save_picture
+from identkit.command_answers import Answer, refuse_wrong_picture, save_picture
 from identkit.plant_set.files import load_set
 from identkit.plant_set.model import PlantSet
 from identkit.plant_set.reach import Surroundings

@@ -1,15 +1,14 @@
 """The answer of `identkit check` in words and as a picture."""
 
-from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from identkit.command_answers import Answer, refuse_wrong_picture, save_picture
 from identkit.controller import read_controller
 from identkit.controller_check import ControllerCheck, check_controller, size_at
 from identkit.errors import InputError, Problem
-from identkit.figures_files import refuse_wrong_picture, save_picture
 from identkit.methods.feedback import bent
 from identkit.methods.modal_model import TWO_PI
 from identkit.methods.resonance_grid import resonance_grid
@@ -34,14 +33,6 @@ CAUTION = (
     "This is a computation on a set, no safety certificate: try a new controller with limits on "
     "drive and travel, and a way to stop."
 )
-
-
-@dataclass(frozen=True)
-class Answer:
-    """Words, and whether the answer is yes."""
-
-    text: str
-    holds: bool
 
 
 def check_files(place: Path, controller: Path, figure: Path | None = None) -> Answer:

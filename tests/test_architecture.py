@@ -44,7 +44,7 @@ LEVELS = {
     "set_price": 3,
     "plant_loops": 4,
     "set_resonances": 3,
-    "figures_files": 6,
+    "command_answers": 6,
     "controller_check": 7,
     "controller_answer": 8,
     "comparison_answer": 8,

@@ -1,5 +1,6 @@
-"""Pictures that a command writes where the user asks."""
+"""The answer of a command, and the picture it writes where the user asks."""
 
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -9,6 +10,14 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 SUFFIXES = (".svg", ".png")
+
+
+@dataclass(frozen=True)
+class Answer:
+    """Words, and whether the answer is yes."""
+
+    text: str
+    holds: bool
 
 
 def refuse_wrong_picture(path: Path) -> None:
