@@ -1,7 +1,9 @@
 """Coverage: what may be said about the next unit, and what may not.
 
-Only units kept out of nominal and bound give an exact, distribution-free statement (Wilks 1941,
-methods/tolerance_limits.py). Without them the set holds what was measured, and no more is said.
+Three statements, never mixed. Units kept out of nominal and bound give an exact, distribution-free
+one (Wilks 1941, methods/tolerance_limits.py). Leaving each unit out in turn is an estimate
+(stages/leave_one_out.py). Virtual units of the population model (stages/model_coverage.py) give one
+that stands on assumptions, and only where the measurements do not speak against them.
 """
 
 from collections.abc import Mapping, Sequence
@@ -13,6 +15,9 @@ from identkit.methods.tolerance_limits import (
     tolerance_sample_size,
 )
 from identkit.plant_set.fields import FittedPlant
+from identkit.stages.leave_one_out import LeaveOneOut
+from identkit.stages.model_coverage import METHOD as MODEL_METHOD
+from identkit.stages.model_coverage import ModelStatement
 
 CAUTION = "This figure is no safety certificate."
 
@@ -24,8 +29,10 @@ def state_coverage(
     confidence: float = 0.9,
     exchangeable: str = "unit",
     rejected: Sequence[str] = (),
+    left_out: LeaveOneOut | None = None,
+    model: ModelStatement | None = None,
 ) -> dict[str, object]:
-    """State the share of future units that the set holds (Wilks 1941).
+    """State the share of future units that the set holds: exact, by leaving out, by a model.
 
     Parameters
     ----------
@@ -38,12 +45,18 @@ def state_coverage(
         What the next draw is, "unit" or "lot".
     rejected
         Held-out units (or lots) left out by screening; each counts as not held.
+    left_out
+        Reach of every unit from the set of the others.
+    model
+        What virtual units say; it is about units, so it is not used where lots are drawn.
 
     Returns
     -------
     dict
         ``content`` (share reached; None where nothing is claimed), ``confidence``, ``units``,
-        ``held``, ``method``, ``assumptions`` (list), ``sentence``, ``units_needed``.
+        ``held``, ``method``, ``assumptions`` (list), ``sentence``, ``units_needed``: the exact
+        statement where units were held out, else the model's where its checks pass, else none.
+        ``exact``, ``leave_one_out``, ``model_based``: each statement on its own, or None.
 
     Raises
     ------
@@ -65,11 +78,31 @@ def state_coverage(
         "95/95": tolerance_sample_size(0.95, 0.95),
         "wanted": tolerance_sample_size(content, confidence),
     }
+    if exchangeable != "unit":
+        left_out = model = None
     reach = dict(largest_reach or {})
-    if not reach and not rejected:
-        return _no_claim(content, confidence, exchangeable, needed)
     reach.update({name: float("inf") for name in rejected})
-    return _claim(reach, content, confidence, exchangeable, needed)
+    exact = _claim(reach, content, confidence, exchangeable, needed) if reach else None
+    tried = _tried(left_out) if left_out is not None else None
+    predicted = _predicted(model, content, confidence) if model is not None else None
+    if exact is not None:
+        chosen = exact
+    elif predicted is not None and predicted["trusted"]:
+        chosen = predicted
+    else:
+        chosen = _no_claim(content, confidence, exchangeable, needed)
+    fields = ("content", "confidence", "units", "held", "method", "assumptions")
+    said = [part["sentence"] for part in (chosen, tried) if part is not None]
+    if predicted is not None and chosen is not predicted:
+        said.append(predicted["sentence"])
+    return {
+        **{name: chosen[name] for name in fields},
+        "sentence": " ".join([*map(str, said), CAUTION]),
+        "units_needed": needed,
+        "exact": exact,
+        "leave_one_out": tried,
+        "model_based": predicted,
+    }
 
 
 def largest_reach_by_group(
@@ -100,7 +133,7 @@ def _no_claim(
         f"The set holds the plants that were measured; nothing is claimed about the next "
         f"{exchangeable}. A distribution-free statement needs {exchangeable}s held out from "
         f"nominal and bound: {needed['90/90']} for 90 % content at 90 % confidence, "
-        f"{needed['95/95']} for 95 % at 95 %{_also(content, confidence, needed)}. {CAUTION}"
+        f"{needed['95/95']} for 95 % at 95 %{_also(content, confidence, needed)}."
     )
     return {
         "content": None,
@@ -110,7 +143,6 @@ def _no_claim(
         "method": "none: no units held out",
         "assumptions": [],
         "sentence": sentence,
-        "units_needed": needed,
     }
 
 
@@ -137,7 +169,7 @@ def _claim(
         + (f" (not held: {', '.join(outside)})" if outside else "")
         + f": with {100 * confidence:g} % confidence the set holds at least "
         f"{100 * reached:.1f} % of all {exchangeable}s; the {100 * content:g} % asked for is "
-        f"{verdict} ({needed['wanted']} held-out {exchangeable}s, all held, are needed). {CAUTION}"
+        f"{verdict} ({needed['wanted']} held-out {exchangeable}s, all held, are needed)."
     )
     return {
         "content": reached,
@@ -153,7 +185,6 @@ def _claim(
             f"{exchangeable}s excluded by hand are no part of the population",
         ],
         "sentence": sentence,
-        "units_needed": needed,
     }
 
 
@@ -161,3 +192,77 @@ def _also(content: float, confidence: float, needed: dict[str, int]) -> str:
     if (content, confidence) in ((0.9, 0.9), (0.95, 0.95)):
         return ""
     return f", {needed['wanted']} for the {100 * content:g} % at {100 * confidence:g} % asked for"
+
+
+def _tried(left_out: LeaveOneOut) -> dict[str, object]:
+    """Return what leaving each unit out says."""
+    tried = len(left_out.reach)
+    held = sum(1 for value in left_out.reach.values() if value <= 1.0)
+    which = "each unit" if tried == left_out.units else f"each of {tried} units drawn"
+    assumptions = [
+        "approximate: every unit is judged by another set, made of the others",
+        "weight refitted on the points of the bound to the radius of the others, same order",
+        "nominal made without the unit, at the population's own variances"
+        if left_out.nominal_refitted
+        else "the nominal was searched with the unit and is kept",
+    ]
+    return {
+        "content": held / tried,
+        "confidence": None,
+        "units": tried,
+        "held": held,
+        "method": "leave one unit out (Stone 1974), approximate",
+        "assumptions": assumptions,
+        "sentence": f"Leaving {which} out in turn, {held} of {tried} would have been held "
+        "(approximate: each time by another set).",
+        "reach": dict(left_out.reach),
+    }
+
+
+def _predicted(model: ModelStatement, content: float, confidence: float) -> dict[str, object]:
+    """Return what virtual units say, and whether it may be believed."""
+    reached = model.shares.quantile(1.0 - confidence)
+    failed = [check for check in model.checks if not check.passed]
+    if failed:
+        reasons = "; ".join(f"that {check.name} ({check.finding})" for check in failed)
+        sentence = (
+            f"The population model would say at least {100 * reached:.1f} % of all units, but that "
+            f"must not be trusted: the measurements speak against the assumption {reasons}."
+        )
+    else:
+        verdict = "reached" if reached >= content else "not reached"
+        sentence = (
+            f"If the population is as modelled, the set holds at least {100 * reached:.1f} % of "
+            f"all units with {100 * confidence:g} % confidence ({100 * model.shares.mean:.1f} % "
+            f"expected; {model.virtual_units} virtual units from a model of {model.units}); the "
+            f"{100 * content:g} % asked for is {verdict}."
+        )
+    return {
+        "content": reached,
+        "confidence": confidence,
+        "units": model.units,
+        "held": 0,
+        "method": f"{MODEL_METHOD} ({model.virtual_units} virtual units)",
+        "assumptions": _model_assumptions(model),
+        "sentence": sentence,
+        "expected": model.shares.mean,
+        "virtual_units": model.virtual_units,
+        "trusted": model.trusted,
+        "checks": [
+            {"assumption": check.name, "passed": check.passed, "finding": check.finding}
+            for check in model.checks
+        ],
+    }
+
+
+def _model_assumptions(model: ModelStatement) -> list[str]:
+    return [
+        "units are independent draws of one population, the next one too",
+        "unit effects on log frequency, log damping ratio and relative residue are normal, with "
+        "the correlation estimated from the units and shrunk",
+        "effects of heads within units, and what is left, are normal and independent of each other",
+        "the trend over temperature is linear",
+        f"a unit counts as held when its plants at all {model.conditions} measured conditions are",
+        "every unit has the population's modes and no others",
+        "units left out by screening or by hand are no part of the population",
+    ]

@@ -79,7 +79,7 @@ def describe_population(
         raise InputError(Problem("modes", found, "at least one response"))
     modes = modes.isel(response=np.flatnonzero(kept), mode=np.flatnonzero(population))
     design = campaign_design(modes, reference_temperature)
-    usable = _counted(modes)
+    usable = counted_modes(modes)
     per_mode = [
         [summarise(q, design) for q in mode_quantities(modes, m, usable[:, m])]
         for m in range(modes.sizes["mode"])
@@ -106,7 +106,7 @@ def describe_population(
     return result
 
 
-def _counted(modes: xr.Dataset) -> BoolArray:
+def counted_modes(modes: xr.Dataset) -> BoolArray:
     """Return which modes count; all that were found where too few would be left."""
     found = np.isfinite(modes["modal_frequency"].transpose("response", "mode").values)
     outcome = modes["mode_outcome"].transpose("response", "mode").values

@@ -124,7 +124,7 @@ def summarise(quantity: Quantity, design: Design) -> QuantitySummary:
     rows = quantity.rows & np.isfinite(quantity.value)
     if rows.sum() < 2:
         return _single(quantity, design, rows)
-    scale = _working_scale(quantity, design, rows)
+    scale = working_scale(quantity, design, rows)
     value, error = quantity.value[rows], quantity.error[rows]
     known = np.isfinite(error)
     error = np.where(known, error, np.median(error[known]) if known.any() else 0.0)
@@ -138,7 +138,7 @@ def summarise(quantity: Quantity, design: Design) -> QuantitySummary:
     return _natural(quantity, design, rows, scale, fixed, fit, fit_deviation)
 
 
-def _working_scale(quantity: Quantity, design: Design, rows: BoolArray) -> FloatArray:
+def working_scale(quantity: Quantity, design: Design, rows: BoolArray) -> FloatArray:
     """Return (heads,) signed typical size of each head; ones on a logarithmic scale."""
     heads = len(design.heads)
     if quantity.logarithmic:
