@@ -72,7 +72,7 @@ def run_study(
     kept: dict[str, Any] = {}
     with StudyFolder(settings) as folder:
         if redo is not None:
-            folder.forget(redo)
+            folder.forget({"estimate": "read"}.get(redo, redo))
         for step in _steps_until(until):
             stage = folder.stage(
                 step.name,
@@ -90,7 +90,6 @@ def run_study(
 
 def _steps_until(until: str | None) -> tuple[Step, ...]:
     names = [step.name for step in STEPS]
-    # time records come with a later version; until then there is nothing to estimate
     last = {"estimate": "read"}.get(until or "", until)
     return STEPS[: names.index(last) + 1] if last is not None else STEPS
 

@@ -48,7 +48,9 @@ class RecordSettings(Table):
     resolution: Positive | None = Field(
         default=None, description="the distance of lines in Hz, above 0"
     )
-    hold: Literal["divided", "kept"] = Field(default="divided", description='"divided" or "kept"')
+    hold: Literal["modelled", "divided", "kept"] = Field(
+        default="modelled", description='"modelled", "divided" or "kept"'
+    )
     computational_delay: NotNegative = Field(default=0.0, description="seconds, 0 or more")
     drive_updates: Count = Field(
         default=1, description="a whole number, 1 or more: drive values per position sample"

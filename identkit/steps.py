@@ -104,7 +104,24 @@ class Step:
 
 
 def _read(work: Work) -> None:
-    work.save(read(work.settings, work.found, work.progress), "responses.nc")
+    """Read measured responses, or estimate them where the study has time records instead."""
+    records, model = work.settings.records, work.settings.model
+    if records is None:
+        work.save(read(work.settings, work.found, work.progress), "responses.nc")
+        return
+    from identkit.stages.estimate import estimate_campaign
+    from identkit.stages.record_sampling import PlantModel
+
+    estimated = estimate_campaign(
+        work.found,
+        records,
+        work.settings.responses,
+        folder=work.settings.folder,
+        model=PlantModel(model.base, model.residues),
+        jobs=work.jobs,
+        progress=work.progress,
+    )
+    work.save(estimated, "responses.nc")
 
 
 def _screen(work: Work) -> None:
@@ -209,15 +226,22 @@ def _origin(study: StudyFolder) -> SetOrigin:
 
 
 def _coverage(work: Work) -> None:
-    from identkit.stages.coverage import largest_reach_by_group, state_coverage
+    from identkit.stages.coverage import cover
 
     asked = work.settings.bound
-    draft = load_set(work.study.path("draft.h5"))
-    coverage = state_coverage(
-        largest_reach_by_group(draft.plants, work.held_out),
+    coverage = cover(
+        load_set(work.study.path("draft.h5")),
+        work.dataset("modes.nc"),
+        work.dataset("population.nc"),
+        work.dataset("nominal.nc"),
+        work.dataset("bound.nc"),
+        held_out=work.held_out,
+        left_out=work.left_out,
         content=asked.content,
         confidence=asked.confidence,
         exchangeable=asked.exchangeable,
+        radius_floor=asked.radius_floor,
+        seed=work.settings.study.seed,
     )
     write_text(work.stage.path("coverage.json"), json.dumps(coverage, indent=1))
 
@@ -310,8 +334,8 @@ STEPS = (
         "coverage",
         _coverage,
         ("coverage.json",),
-        ("bound",),
-        ("bound.content", "bound.confidence"),
+        ("screen", "pair", "population", "nominal", "bound"),
+        ("bound.content", "bound.confidence", "study.seed"),
     ),
     Step("audit", _audit, ("audit.nc", "audit.csv"), ("read", "screen", "pair", "bound")),
     Step("export", _export, ("certificate.json",), ("coverage", "audit"), ("export",)),

@@ -98,6 +98,31 @@ READ = (
         ("usable_mask?", "flag", "", "Points that may be used."),
     ),
     Variable("averages", ("response",), "number", "1", "Number of averages.", True),
+    Variable("image_error", POINT, "number", _RATIO, "What images may still add.", True),
+    *_along(
+        ("response",),
+        ("estimator?", "text", "", "How it was estimated from time records."),
+        ("estimator_reason?", "text", "", "Why so."),
+        ("hold_treatment?", "text", "", "What was done about hold and images."),
+        ("direct_bias_over_error?", "number", "1", "Bias of the direct estimate over its error."),
+        ("runout?", "number", "output unit", "Repeatable runout taken out, peak to peak."),
+    ),
+    Variable("runout_harmonic", ("frequency",), "flag", "", "Line on a turn harmonic.", True),
+    Variable(
+        "line_correlation",
+        ("response", "line_distance"),
+        "number",
+        "1",
+        "Correlation of the errors of lines this far apart, from 0 on.",
+        True,
+    ),
+    Variable("record_check", ("record_check",), "text", "", "What records are judged by.", True),
+    *_along(
+        ("response", "record_check"),
+        ("record_mark?", "flag", "", "Whether the record is marked."),
+        ("record_value?", "number", "1", "What the mark is judged by."),
+        ("record_limit?", "number", "1", "The limit it is held to."),
+    ),
 )
 
 SCREEN = (

@@ -58,6 +58,10 @@ class SpectrumAverager:
         A name of `spectral_windows`.
     overlap
         Share of a segment that the next one repeats, 0 to below 1.
+
+    Notes
+    -----
+    Segments with a sample that is no finite number are left out and counted in `left_out`.
     """
 
     def __init__(
@@ -79,6 +83,7 @@ class SpectrumAverager:
         self._sum = np.zeros((channels, channels, segment // 2 + 1), dtype=complex)
         self._rest = np.empty((channels, 0))
         self._counts = [0]
+        self.left_out = 0
 
     def add(self, chunk: FloatArray) -> None:
         """Take (channels, samples) that follow on those added before."""
@@ -92,7 +97,6 @@ class SpectrumAverager:
         for start in range(0, count, at_once):
             stop = min(count, start + at_once)
             self._add_segments(views[:, start * self.hop : (stop - 1) * self.hop + 1 : self.hop])
-        self._counts[-1] += count
         self._rest = np.array(joined[:, count * self.hop :])
 
     def end_record(self) -> None:
@@ -124,7 +128,13 @@ class SpectrumAverager:
 
     def _add_segments(self, segments: FloatArray) -> None:
         """Add (channels, segments, samples), each without its mean."""
-        tapered = segments - segments.mean(axis=-1, keepdims=True)
+        mean = segments.mean(axis=-1, keepdims=True)
+        good = np.isfinite(mean).all(axis=(0, 2))
+        if not good.all():
+            segments, mean = segments[:, good], mean[:, good]
+            self.left_out += int(np.count_nonzero(~good))
+        self._counts[-1] += segments.shape[1]
+        tapered = segments - mean
         tapered *= self.window
         lines = rfft(tapered, axis=-1, overwrite_x=True)
         conjugate = lines.conj()

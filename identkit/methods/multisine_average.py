@@ -13,8 +13,10 @@ import numpy as np
 from identkit.methods.arrays import ComplexArray, FloatArray
 from identkit.methods.instrumental_response import EstimatedResponse
 
-_EXCITED = 1e-6
+_EXCITED = 1e-12
 _STANDS_OUT = 30.0
+_FREEDOM_WANTED = 50
+_WIDEST = 3
 
 
 @dataclass(frozen=True)
@@ -87,7 +89,9 @@ def periodic_response(
 
     Notes
     -----
-    The variance has sum(periods - 1) degrees of freedom. Errors are circular; those of different
+    The variance has sum(periods - 1) degrees of freedom, times the lines it is averaged over: where
+    they are fewer than 50, up to three lines on either side, since noise that owes nothing to the
+    input changes little from line to line. Errors are circular; those of different
     lines are uncorrelated. Noise that rings on from one period into the next makes the stated
     variance somewhat large, by about the ringing's share of a period. Distortion that repeats with
     the excitation is not seen in one experiment; with several it shows in their scatter.
@@ -102,7 +106,7 @@ def periodic_response(
     mixing = adjoint @ np.linalg.inv(u @ adjoint)
     response = y @ mixing
     covariance, freedom = _pooled(experiments)
-    noise = _equation_noise(covariance, response, inputs, outputs)
+    noise = _smoothed(_equation_noise(covariance, response, inputs, outputs), freedom)
     share = np.einsum("keu,e->ku", np.abs(mixing) ** 2, 1.0 / weight)
     signal = np.einsum("kye,e->ky", np.abs(y) ** 2, weight) / weight.sum()
     outer = np.einsum("kii->ki", covariance[:, outputs][:, :, outputs]).real
@@ -123,6 +127,17 @@ def _pooled(experiments: list[PeriodicLines]) -> tuple[ComplexArray, int]:
         count * each.covariance for count, each in zip(freedom, experiments, strict=True)
     ) / sum(freedom)
     return np.asarray(total), sum(freedom)
+
+
+def _smoothed(noise: FloatArray, freedom: int) -> FloatArray:
+    """Average (lines, outputs) variances of few degrees of freedom over neighbouring lines."""
+    half = min(_WIDEST, -(-(_FREEDOM_WANTED // freedom - 1) // 2), (len(noise) - 1) // 2)
+    if half < 1:
+        return noise
+    width = 2 * half + 1
+    padded = np.concatenate([noise[half:0:-1], noise, noise[-2 : -2 - half : -1]])
+    summed = np.cumsum(np.concatenate([np.zeros((1, noise.shape[1])), padded]), axis=0)
+    return np.asarray((summed[width:] - summed[:-width]) / width)
 
 
 def _equation_noise(

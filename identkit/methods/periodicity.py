@@ -64,9 +64,13 @@ def settled_period(lines: ComplexArray) -> int:
     periods = lines.shape[1]
     half = periods // 2
     last = lines[:, half:]
-    noise = last.var(axis=1, ddof=1).mean(axis=-1)
+    each = last.var(axis=1, ddof=1)
+    noise = each.mean(axis=-1)
+    # lines with more noise weigh more: what the sum is worth in equal lines
+    worth = noise**2 * lines.shape[-1] / np.maximum(np.mean(each**2, axis=-1), np.finfo(float).tiny)
     distance = np.mean(np.abs(lines - last.mean(axis=1, keepdims=True)) ** 2, axis=-1)
     expected = noise[:, None] * (1.0 + 1.0 / last.shape[1])
-    limit = expected * (1.0 + 4.0 / np.sqrt(lines.shape[-1])) + 1e-20 * np.mean(np.abs(lines) ** 2)
+    spread = 4.0 / np.sqrt(np.maximum(worth, 1.0))
+    limit = expected * (1.0 + spread[:, None]) + 1e-20 * np.mean(np.abs(lines) ** 2)
     late = np.flatnonzero((distance[:, :half] > limit).any(axis=0))
     return int(late[-1]) + 1 if late.size else 0

@@ -16,7 +16,9 @@ def schroeder_phases(power: FloatArray) -> FloatArray:
     return np.asarray(-2.0 * np.pi * np.concatenate([[0.0], np.cumsum(np.cumsum(share))[:-1]]))
 
 
-def multisine(lines: FloatArray, amplitude: FloatArray, samples: int) -> FloatArray:
+def multisine(
+    lines: FloatArray, amplitude: FloatArray, samples: int, phase: FloatArray | None = None
+) -> FloatArray:
     """Return one period of a sum of cosines with low peaks.
 
     Parameters
@@ -27,6 +29,9 @@ def multisine(lines: FloatArray, amplitude: FloatArray, samples: int) -> FloatAr
         Of each cosine.
     samples
         Samples per period.
+    phase
+        Of each cosine, rad; by default those that keep the peaks of this signal low. For low peaks
+        at the output of a system take its own phases off those of the output wanted.
 
     Raises
     ------
@@ -38,7 +43,8 @@ def multisine(lines: FloatArray, amplitude: FloatArray, samples: int) -> FloatAr
         raise ValueError(f"found lines {lines} of {samples} samples; expected 1 to below half")
     spectrum = np.zeros(samples // 2 + 1, dtype=complex)
     amplitude = np.broadcast_to(amplitude, place.shape)
-    spectrum[place] = amplitude * np.exp(1j * schroeder_phases(amplitude**2))
+    turned = schroeder_phases(amplitude**2) if phase is None else phase
+    spectrum[place] = amplitude * np.exp(1j * turned)
     return np.asarray(np.fft.irfft(spectrum, samples) * samples / 2.0)
 
 

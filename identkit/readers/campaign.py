@@ -282,7 +282,7 @@ def _dataset(
             "frequency": measured[0].frequency,
         },
     )
-    return data.assign_coords(_labels(files, folder))
+    return data.assign_coords(response_labels(files, folder))
 
 
 def _channel(files: Sequence[LabelledFile], name: str) -> str:
@@ -294,7 +294,7 @@ def _channel(files: Sequence[LabelledFile], name: str) -> str:
     return found[0]
 
 
-def _labels(files: Sequence[LabelledFile], folder: Path) -> dict[str, Any]:
+def response_labels(files: Sequence[LabelledFile], folder: Path) -> dict[str, Any]:
     """Return the labels as coordinates along `response`; a missing text is empty, a number NaN."""
     names = dict.fromkeys(name for file in files for name in file.labels)
     labels: dict[str, Any] = {}

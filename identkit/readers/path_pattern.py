@@ -24,7 +24,7 @@ Label: TypeAlias = str | float
 NUMBER_LABELS = ("temperature", "position")
 TEXT_LABELS = ("unit", "head", "lot", "measured_at", "repeat", "fixture", "output", "input")
 _TAKEN = ("response", "frequency", "source", "mode", "parameter", "frequency_response", "coherence")
-_SUFFIXES = (".csv", ".txt", ".tsv", ".dat", ".nc", ".h5", ".hdf5")
+_SUFFIXES = (".csv", ".txt", ".tsv", ".dat", ".nc", ".h5", ".hdf5", ".npz")
 
 
 @dataclass(frozen=True)

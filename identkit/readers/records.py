@@ -60,6 +60,10 @@ class RecordFile:
             found = f"a file that cannot be read ({getattr(error, 'strerror', None) or words[0]})"
             raise InputError(Problem(self.place, found, _EXPECTED)) from None
 
+    def samples(self, name: str) -> int:
+        """Return the length of a channel; errors as in `chunks`."""
+        return sum(chunk.shape[1] for chunk in self.chunks([name], size=1 << 20))
+
     def whole(self, names: Sequence[str]) -> FloatArray:
         """Return (channels, samples) of the whole record; errors as in `chunks`."""
         return np.concatenate(list(self.chunks(names)), axis=1)

@@ -5,22 +5,31 @@ from identkit.grids import Gridded
 from identkit.readers.campaign import CampaignFiles, Progress, find_files, read_campaign
 from identkit.settings import Settings
 
-READ_SETTINGS = tuple(
-    f"responses.{name}"
-    for name in ("files", "averages", "sample_period", "bad_files", "columns", "units")
+READ_SETTINGS = (
+    *(
+        f"responses.{name}"
+        for name in ("files", "averages", "sample_period", "bad_files", "columns", "units")
+    ),
+    "records",
 )
 """What the stage depends on; the band is not among them, it only marks."""
 
 
 def find_measurements(settings: Settings) -> CampaignFiles:
-    """Find the files of ``[responses] files``, relative to the study file.
+    """Find the files of ``[responses]`` or ``[records]``, relative to the study file.
 
     Raises
     ------
     InputError
-        If the study names no files, the pattern matches none, or two carry the same labels.
+        If the study names no files or both kinds, the pattern matches none, or two carry the same
+        labels.
     """
     pattern = settings.responses.files
+    if settings.records is not None:
+        if pattern is not None:
+            place = f"{settings.path}, [responses] files"
+            raise InputError(Problem(place, f'"{pattern}" beside [records]', "one of the two"))
+        return find_files(settings.records.files, folder=settings.folder)
     if pattern is None:
         place = f"{settings.path}, [responses] files"
         expected = 'a path pattern such as "bench/{unit}/H{head}_{temperature:g}C.csv"'
