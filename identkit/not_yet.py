@@ -29,7 +29,7 @@ def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
     model, nominal, history = settings.model, settings.nominal, settings.history
     ready = HistorySettings().url
     return [
-        ("[records]", settings.records is not None, "time records", "[responses] files"),
+        *_of_records(settings),
         _row("[responses] sample_period", responses.sample_period, 0.0),
         _row("[model] sharing", model.sharing, "auto", "none"),
         _row("[nominal] choice", nominal.choice, "centre", "tightest"),
@@ -40,6 +40,22 @@ def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
         _row("[bound] split", bound.split, ""),
         _row("[export] period", export.period, 0.0),
         _row("[history] url", history.url, ready),
+    ]
+
+
+def _of_records(settings: Settings) -> list[tuple[str, bool, str, str]]:
+    """List what is missing behind time records: fits of sampled responses, and matrix plants."""
+    records = settings.records
+    if records is None:
+        return []
+    several = [
+        name
+        for name in ("drive", "position")
+        if not isinstance(getattr(records, name), str) and len(getattr(records, name)) > 1
+    ]
+    return [
+        _row("[records] hold", records.hold, "modelled", "divided"),
+        *((f"[records] {name}", True, "several channels", "one channel") for name in several),
     ]
 
 
