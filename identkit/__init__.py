@@ -19,6 +19,7 @@ _PUBLIC = {
     "load_set": "identkit.plant_set.files",
     "PlantSet": "identkit.plant_set.model",
     "run_study": "identkit.pipeline",
+    "track_drift": "identkit.drift",
 }
 
 __all__ = sorted(_PUBLIC)

@@ -151,6 +151,48 @@ def compare(first: Path, second: Path, figure: Path | None) -> None:
         sys.exit(NOT_HELD)
 
 
+@commands.command()
+@click.argument("history", metavar="HISTORY")
+@click.argument("folders", nargs=-1, metavar="[FOLDER]...", type=_folder())
+@click.option(
+    "--set",
+    "plant_set",
+    type=click.Path(dir_okay=False, path_type=Path),
+    help="Set file to release; default the one released before, or the first folder's.",
+)
+@click.option(
+    "--run-length", type=float, help="Units between false alarms of all charts; default 500."
+)
+@click.option("--baseline", type=int, help="Units that make the baseline; default 12.")
+@click.option("--report", type=_folder(), help="Folder for the page; default beside HISTORY.")
+@_quiet
+def drift(
+    history: str,
+    folders: tuple[Path, ...],
+    plant_set: Path | None,
+    run_length: float | None,
+    baseline: int | None,
+    report: Path | None,
+    quiet: bool,
+) -> None:
+    """Add results folders to HISTORY (a file, folder or database URL), chart and judge."""
+    from identkit.drift import track_drift
+
+    result = track_drift(
+        history,
+        folders,
+        plant_set=plant_set,
+        run_length=run_length,
+        baseline=baseline,
+        report=report,
+    )
+    for sentence in result.verdict[: 1 if quiet else None]:
+        click.echo(sentence)
+    click.echo(f"Report: {result.report}")
+    if result.signal:
+        sys.exit(NOT_HELD)
+
+
 def _run(
     study: Path,
     *,

@@ -50,6 +50,7 @@ LEVELS = {
     "comparison_answer": 8,
     "set_comparison": 7,
     "set_audit": 7,
+    "drift": 7,
     "__init__": 10,
 }
 HEAVY = {"cvxpy", "matplotlib", "numba", "statsmodels", "sippy_unipi", "control", "slycot"}
