@@ -1,6 +1,7 @@
 """Fixtures that several folders of tests share."""
 
 import importlib.util
+import shutil
 import subprocess
 import sys
 from pathlib import Path
@@ -47,3 +48,20 @@ def small_results(tmp_path_factory):
     script = MAKERS.with_name("small_study.py")
     subprocess.run([sys.executable, str(script), str(folder)], check=True)
     return folder / "results"
+
+
+@pytest.fixture(scope="session")
+def results_in_form(small_results, tmp_path_factory):
+    """Return the results folder of the small campaign bounded in a form, report and all."""
+    known = {}
+
+    def run(form):
+        if form not in known:
+            folder = tmp_path_factory.mktemp(form) / "study"
+            shutil.copytree(small_results.parent, folder)
+            script = MAKERS.with_name("small_study.py")
+            subprocess.run([sys.executable, str(script), str(folder), form], check=True)
+            known[form] = folder / "results"
+        return known[form]
+
+    return run

@@ -198,7 +198,7 @@ def test_exclusions_take_names_and_labels_with_a_reason(written):
         "[records]\nfiles = 'x'\nsample_period = 1\nhold = 'kept'",
         "[responses]\nsample_period = 1e-4",
         "[model]\nsharing = 'unit'",
-        "[bound]\nform = 'additive'",
+        "[bound]\nform = 'parametric'",
         "[bound]\nform = 'auto'",
         "[bound]\nremove = ['gain']",
         "[bound]\nholds = 'population'",

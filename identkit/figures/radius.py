@@ -67,6 +67,10 @@ class RadiusWeight:
         Hz, in which everything is claimed.
     mode_names, mode_frequency
         Population modes, to read frequencies by.
+    error
+        What the radius measures, with its unit.
+    whole
+        (points,) radius at which the error is as large as the nominal: 1, or its magnitude.
     """
 
     frequency: FloatArray
@@ -82,6 +86,8 @@ class RadiusWeight:
     band: tuple[float, float]
     mode_names: tuple[str, ...]
     mode_frequency: FloatArray
+    error: str
+    whole: FloatArray
 
 
 def pick_radius(
@@ -129,7 +135,19 @@ def pick_radius(
         band=contents.band,
         mode_names=mode_names,
         mode_frequency=np.zeros(0) if mode_frequency is None else mode_frequency,
+        error=error_label(contents),
+        whole=np.abs(nominal) if contents.form == "additive" else np.ones(frequency.size),
     )
+
+
+def error_label(contents: PlantSetFields) -> str:
+    """Return what the radius of a scalar set measures, with its unit."""
+    if contents.form == "additive":
+        units = [channel.unit for channel in (*contents.outputs[:1], *contents.inputs[:1])]
+        return f"error, {units[0]}/{units[1]}" if all(units) else "error, output/input"
+    if contents.form == "inverse-multiplicative":
+        return "error relative to the plant, 1 = 100 %"
+    return "relative error, 1 = 100 %"
 
 
 def readable_names(contents: PlantSetFields) -> dict[str, str]:
@@ -211,8 +229,8 @@ def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     if over.any():
         axes.plot(f[over], picked.radius[over], ".", color=INK, ms=3, label="not held")
     _touches(axes, picked, layout)
-    axes.axhline(1.0, color=SOFT_INK, lw=0.7)
-    axes.set_ylabel("relative error, 1 = 100 %")
+    axes.plot(f, picked.whole, color=SOFT_INK, lw=0.7)
+    axes.set_ylabel(clipped(picked.error, 40))
     curves = np.concatenate([picked.radius, picked.weight])
     ratio_axis(axes, bottom, 1.6 * float(np.nanmax(curves)))
     axes.legend(loc="upper left", ncols=1)

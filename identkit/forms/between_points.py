@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from identkit.forms.multiplicative import PlantComparison
+from identkit.forms.comparison import PlantComparison
 from identkit.methods.arrays import FloatArray
 from identkit.methods.level_crossings import LevelCrossings
 from identkit.methods.magnitude_weight import MagnitudeWeight
@@ -36,7 +36,7 @@ class Peak:
 
 
 def largest_ratio(comparison: PlantComparison, weight: MagnitudeWeight, start: float) -> Peak:
-    """Return the supremum of |P - P0| / |W P0| over the band, to a relative 1e-7.
+    """Return the supremum of |error| / |W| over the band, to a relative 1e-7.
 
     Parameters
     ----------

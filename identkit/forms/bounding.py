@@ -15,11 +15,7 @@ import numpy as np
 
 from identkit.errors import InfeasibleError, InputError, Problem
 from identkit.forms.between_points import LEVEL_TOLERANCE, Peak, largest_ratio, peaks_above
-from identkit.forms.multiplicative import (
-    CommonPart,
-    PlantComparison,
-    relative_errors,
-)
+from identkit.forms.comparison import CommonPart, PlantComparison
 from identkit.forms.radius_curve import RadiusCurve, interpolated
 from identkit.methods.arrays import FloatArray
 from identkit.methods.magnitude_weight import MagnitudeWeight, fit_magnitude_weight
@@ -51,7 +47,7 @@ class BoundOptions:
     cap
         Pairs (Hz, largest |W|), likewise; empty for none.
     radius_floor
-        Smallest radius bounded.
+        Smallest radius bounded, as a share of the form's error of 100 %.
     jobs
         Threads; results do not depend on it.
     """
@@ -116,7 +112,7 @@ def bound_plants(
     plants
         Plants to hold.
     common
-        Nominal and band.
+        Nominal, band and form.
     frequency
         (points,) Hz to begin with, inside the band.
     options
@@ -189,7 +185,7 @@ class _Bounding:
         def of_block(rows: range) -> RadiusCurve:
             best = RadiusCurve(frequency, np.zeros(len(frequency)), np.full(len(frequency), -1))
             for k in rows:
-                error = np.abs(relative_errors(frequency, [self.plants[k]], self.common.nominal)[0])
+                error = np.abs(self.common.error(frequency, self.plants[k]))
                 best = best.larger(RadiusCurve(frequency, error, np.full(len(frequency), k)))
             return best
 
@@ -197,7 +193,8 @@ class _Bounding:
         starts = range(0, len(self.plants), share)
         blocks = [range(k, min(k + share, len(self.plants))) for k in starts]
         curves = self.each(of_block, blocks)
-        return reduce(RadiusCurve.larger, curves).with_floor(self.options.radius_floor)
+        floor = self.options.radius_floor * self.common.reference(frequency)
+        return reduce(RadiusCurve.larger, curves).with_floor(floor)
 
     def _first_weight(self) -> tuple[MagnitudeWeight, tuple[OrderTrial, ...], str]:
         if self.order_given is not None:
@@ -287,7 +284,7 @@ class _Bounding:
         frequency, magnitude = self.curve.frequency, weight.magnitude(self.curve.frequency)
 
         def best(k: int) -> float:
-            error = relative_errors(frequency, [self.plants[k]], self.common.nominal)[0]
+            error = self.common.error(frequency, self.plants[k])
             return float(frequency[np.argmax(np.abs(error) / magnitude)])
 
         return np.array(self.each(best, range(len(self.plants))))
@@ -312,6 +309,7 @@ class _Bounding:
 
     def _tolerance(self, weight: MagnitudeWeight) -> float:
         """Level tolerance plus what the stand-ins for the delays can hide."""
-        smallest = float(np.min(weight.magnitude(self.curve.frequency)))
+        reference = self.common.reference(self.curve.frequency)
+        smallest = float(np.min(weight.magnitude(self.curve.frequency) / reference))
         delay = max(comparison.delay_error for comparison in self.comparisons)
         return LEVEL_TOLERANCE + delay * (1.0 / smallest + 1.0)

@@ -31,8 +31,8 @@ class RadiusCurve:
     required: FloatArray
     setter: IntArray
 
-    def with_floor(self, floor: float) -> "RadiusCurve":
-        """Return the curve raised to the smallest radius ever bounded."""
+    def with_floor(self, floor: FloatArray) -> "RadiusCurve":
+        """Return the curve raised to the smallest radius ever bounded, (points,)."""
         below = self.required < floor
         return RadiusCurve(
             self.frequency,

@@ -119,7 +119,7 @@ def check_radii(contents: PlantSetFields) -> list[FailedCheck]:
         failed.append(FailedCheck("radii.set_by", found, f"at most {cut} of them unlisted"))
     errors = errors_at(contents, radii.frequency)
     held = np.array([name not in _excluded(contents) for name in listed], dtype=bool)
-    largest = np.max(errors[held], axis=0, initial=radii.floor)
+    largest = np.max(np.vstack([errors[held], floor_at(contents, radii.frequency)]), axis=0)
     tolerance = _tolerance(contents)
     over = largest / radii.required_radius - 1.0
     if over.max() > tolerance:
@@ -154,23 +154,30 @@ def check_optimality(contents: PlantSetFields) -> list[FailedCheck]:
 
 def check_interconnection(contents: PlantSetFields) -> list[FailedCheck]:
     """Check with random members that the interconnection makes the plants of the form."""
-    if contents.form != "multiplicative" or contents.weights.left is None:
+    if contents.form not in MEMBERS:
         return []
     frequency = np.geomspace(*_positive(contents.band), 40)
     points = set_points(contents, frequency)
     nominal = np.moveaxis(nominal_response(contents, frequency), -1, 0)
-    left = _side(contents.weights.left, points)
-    right = _side(contents.weights.right, points) if contents.weights.right else np.eye(1)
+    _, left, right = Surroundings(contents).at(frequency)
     worst = 0.0
     for member in draw_members(contents, _TRIALS, seed=0):
         delta = _side(member.delta[0], points)
-        direct = nominal + left @ delta @ right @ nominal
+        direct = MEMBERS[contents.form](nominal, left @ delta @ right)
         made = np.moveaxis(member.frequency_response(frequency), -1, 0)
         size = np.abs(direct).max(axis=(1, 2), keepdims=True)
         worst = max(worst, float((np.abs(made - direct) / size).max()))
     if worst > ROUNDING:
-        return [FailedCheck("interconnection", f"members off by {worst:.2g}", "(I + L Delta R) P0")]
+        expected = f"those of form {contents.form}"
+        return [FailedCheck("interconnection", f"members off by {worst:.2g}", expected)]
     return []
+
+
+MEMBERS: dict[str, Callable[[ComplexArray, ComplexArray], ComplexArray]] = {
+    "additive": lambda nominal, error: nominal + error,
+    "multiplicative": lambda nominal, error: nominal + error @ nominal,
+}
+"""The plant that L Delta R makes of the nominal, by form; (points, outputs, inputs)."""
 
 
 def check_reach(contents: PlantSetFields, reach: Reach) -> list[FailedCheck]:
@@ -226,6 +233,14 @@ def errors_at(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
         response = plants_at(some, frequency, contents.time.period)
         pieces.append(pointwise_reach(contents.form, response, nominal, one, one))
     return np.concatenate(pieces)
+
+
+def floor_at(contents: PlantSetFields, frequency: FloatArray) -> FloatArray:
+    """Return the smallest radius ever bounded, (points,): of an additive set a share of |P0|."""
+    share = np.full(frequency.size, contents.radii.floor)
+    if contents.form != "additive" or not contents.is_scalar:
+        return share
+    return np.asarray(share * np.abs(nominal_response(contents, frequency)[0, 0]))
 
 
 def excess_db(contents: PlantSetFields) -> float:

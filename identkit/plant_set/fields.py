@@ -153,7 +153,9 @@ class FittedPlant:
 
 @dataclass(frozen=True, eq=False)
 class Extension:
-    """How the weight goes on outside its points: within `factor` of the nearest end.
+    """How the weight goes on outside its points, beside what is asked at the nearest end.
+
+    It stays below `factor` times what is allowed and above what is asked over its cube.
 
     Attributes
     ----------

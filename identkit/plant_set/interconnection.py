@@ -48,6 +48,33 @@ def output_multiplicative(nominal: Matrices, left: Matrices, right: Matrices) ->
     return Interconnection(drift, driven, seen, feed, blocks=(block,))
 
 
+def additive(nominal: Matrices, left: Matrices, right: Matrices) -> Interconnection:
+    """Return the interconnection of P0 + L Delta R: z = R u, y = P0 u + L w.
+
+    Parameters
+    ----------
+    nominal
+        P0, outputs x inputs.
+    left, right
+        L (outputs x rows of Delta) and R (columns of Delta x inputs).
+    """
+    n, w, r = nominal.states, left.states, right.states
+    rows, columns = left.D.shape[1], right.D.shape[0]
+    outputs, inputs = nominal.D.shape
+    driven = np.zeros((n + w + r, rows + inputs))
+    driven[n : n + w, :rows] = left.B
+    driven[:n, rows:], driven[n + w :, rows:] = nominal.B, right.B
+    seen = np.zeros((columns + outputs, n + w + r))
+    seen[:columns, n + w :] = right.C
+    seen[columns:, :n], seen[columns:, n : n + w] = nominal.C, left.C
+    feed = np.zeros((columns + outputs, rows + inputs))
+    feed[:columns, rows:] = right.D
+    feed[columns:, :rows], feed[columns:, rows:] = left.D, nominal.D
+    block = Block("complex-full", rows, columns)
+    drift = _diagonal3(nominal.A, left.A, right.A)
+    return Interconnection(drift, driven, seen, feed, blocks=(block,))
+
+
 def _diagonal3(first: FloatArray, second: FloatArray, third: FloatArray) -> FloatArray:
     sizes = [part.shape[0] for part in (first, second, third)]
     whole = np.zeros((sum(sizes), sum(sizes)))

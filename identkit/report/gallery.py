@@ -24,6 +24,7 @@ from identkit.plant_set.response import nominal_response
 from identkit.report.bound_curves import order_tradeoff, pointwise_floor
 from identkit.report.captions import CAPTIONS, Caption
 from identkit.report.contents import ReportInput
+from identkit.report.form_words import radius_is_relative
 from identkit.report.pictures import InlinePicture, picture
 from identkit.report.verdict import excluded_names
 
@@ -107,7 +108,7 @@ def _radius(given: ReportInput) -> Any:
     contents = given.plant_set
     if contents is None or not contents.is_scalar or not contents.radii.frequency.size:
         return None
-    floor = pointwise_floor(given.nominal)
+    floor = pointwise_floor(given.nominal) if radius_is_relative(contents) else None
     curves: dict[str, Any] = (
         {} if floor is None else {"floor_frequency": floor.frequency, "floor": floor.radius}
     )

@@ -5,13 +5,12 @@ import re
 from collections import Counter, defaultdict
 from dataclasses import dataclass
 
-import numpy as np
-
 from identkit.figures.labels import natural_key, units_of
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.plant_set.fields import Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
+from identkit.report.form_words import limit_of_control, radius_is_relative
 from identkit.report.mode_findings import (
     label_spread_sentence,
     lots_sentence,
@@ -159,6 +158,8 @@ def _marked_but_kept(given: ReportInput) -> str:
 def _nominal(given: ReportInput) -> str:
     if given.nominal is None or "floor_distance_mean_db" not in given.nominal:
         return ""
+    if given.plant_set is not None and not radius_is_relative(given.plant_set):
+        return ""
     mean = float(given.nominal["floor_distance_mean_db"].values)
     peak = float(given.nominal["floor_distance_peak_db"].values)
     return (
@@ -214,20 +215,7 @@ def _setters(given: ReportInput) -> str:
 
 
 def _limit_of_control(given: ReportInput) -> str:
-    contents = given.plant_set
-    if contents is None or "multiplicative" not in contents.form:
-        return ""
-    radii = contents.radii
-    above = np.flatnonzero(radii.weight_magnitude >= 1.0)
-    if contents.form == "inverse-multiplicative":
-        return ""
-    if not above.size:
-        return "The weight stays below 1 (100 %) over the whole band."
-    return (
-        f"The weight first passes 1 (100 %) at {frequency_label(radii.frequency[above[0]])}: a "
-        f"loop that rests on this set alone must keep its complementary sensitivity below 1 "
-        f"there (|W T| < 1, Doyle and Stein 1981)."
-    )
+    return "" if given.plant_set is None else limit_of_control(given.plant_set)
 
 
 def _coverage(given: ReportInput) -> str:

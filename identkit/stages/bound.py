@@ -8,7 +8,9 @@ from threadpoolctl import threadpool_limits
 
 from identkit.errors import InputError, Problem
 from identkit.forms.bounding import BoundOptions, SpreadBound, bound_plants
-from identkit.forms.multiplicative import NAME, CommonPart, accepts
+from identkit.forms.catalogue import form_named
+from identkit.forms.comparison import CommonPart
+from identkit.forms.multiplicative import NAME
 from identkit.forms.radius_curve import interpolated
 from identkit.methods.modal_model import ModalParameters
 from identkit.stages.attribution import attribution_table, nearest_modes
@@ -36,8 +38,8 @@ def bound_spread(
     """Bound the spread of all fitted plants around the nominal by one weight of least excess.
 
     The weight is globally optimal for its order on the points (linear programs); between the points
-    the exact norm of (P - P0)/(W P0) of every plant is computed and points are added until every
-    plant is held.
+    the exact norm of error / W of every plant is computed and points are added until every plant
+    is held.
 
     Parameters
     ----------
@@ -46,7 +48,7 @@ def bound_spread(
     nominal
         As `choose_nominal` wrote it.
     form
-        "multiplicative": P = P0 (1 + W Delta).
+        "multiplicative": P = P0 (1 + W Delta); "additive": P = P0 + W Delta.
     order
         "auto", or the order of the weight.
     profile
@@ -55,7 +57,7 @@ def bound_spread(
     cap
         Pairs (Hz, largest |W|), likewise.
     radius_floor
-        Smallest radius ever bounded.
+        Smallest radius ever bounded; of an additive set, as a share of |P0| at each frequency.
     left_out
         Reasons by response id of what stays out; nothing else does.
     jobs
@@ -81,12 +83,11 @@ def bound_spread(
     InputError
         If the form or the shape is not covered, or no plant is left.
     """
-    if form != NAME:
-        raise InputError(Problem("[bound] form", repr(form), f'"{NAME}"'))
-    accepts(modes.sizes["output"], modes.sizes["input"])
+    chosen = form_named(form)
+    chosen.accepts(modes.sizes["output"], modes.sizes["input"], str(modes.attrs["base"]))
     centre = nominal_plant(nominal)
     band = nominal.attrs["band"]
-    common = CommonPart(centre, float(band[0]), float(band[1]))
+    common = CommonPart(centre, float(band[0]), float(band[1]), chosen)
     plants = _counted(fitted_plants(modes).without(left_out or {}), centre.parameters)
     options = BoundOptions(order, tuple(profile), tuple(cap), radius_floor, jobs)
     # Many small matrices: threads inside the linear algebra would only wait for each other.

@@ -15,11 +15,11 @@ import numpy as np
 import xarray as xr
 
 from identkit.errors import InputError, Problem
+from identkit.forms.catalogue import form_named
 from identkit.methods.radius_problem import TWO_PI, radius_problem
 from identkit.plant_set import fields as f
 from identkit.plant_set.claims import ROUNDING
 from identkit.plant_set.document import plain
-from identkit.plant_set.interconnection import output_multiplicative
 from identkit.plant_set.json_file import write_json
 from identkit.plant_set.model import PlantSet
 from identkit.plant_set.reach import reach_of_plants
@@ -81,14 +81,12 @@ def build_set(
         If the form has no export yet.
     """
     origin = SetOrigin() if origin is None else origin
-    form = str(bound.attrs["form"])
-    if form != "multiplicative":
-        raise InputError(Problem("[bound] form", repr(form), '"multiplicative"'))
+    form = form_named(str(bound.attrs["form"]))
     centre = f.Nominal(**vars(_matrices(nominal, "nominal")))
     left, right = _matrices(bound, "weight"), static(np.eye(centre.D.shape[0]))
     low, high = (float(hertz) for hertz in bound.attrs["band"])
     contents = PlantSet(
-        form=form,
+        form=form.name,
         time=f.TimeBase(),
         inputs=_channels(modes, "input"),
         outputs=_channels(modes, "output"),
@@ -96,7 +94,7 @@ def build_set(
         nominal=centre,
         weights=f.Weights(left, right),
         parameters=(),
-        interconnection=output_multiplicative(centre, left, right),
+        interconnection=form.interconnection(centre, left, right),
         plants=(),
         radii=_radii(bound, origin),
         certificate=_certificate(bound, modes),

@@ -5,7 +5,8 @@ import pytest
 
 from identkit.errors import InfeasibleError, InputError
 from identkit.forms.bounding import BoundOptions, bound_plants
-from identkit.forms.multiplicative import CommonPart, PlantComparison
+from identkit.forms.comparison import CommonPart, PlantComparison
+from identkit.forms.multiplicative import MULTIPLICATIVE
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.forms.radius_curve import interpolated
 from identkit.methods.magnitude_weight import fit_magnitude_weight
@@ -19,7 +20,7 @@ COARSE = np.geomspace(*BAND, 300)
 
 def common(scale: float = 1.0) -> CommonPart:
     nominal = scaled(plant(), scale, 1.0)
-    return CommonPart(NominalPlant(nominal, 3), BAND[0] * scale, BAND[1] * scale)
+    return CommonPart(NominalPlant(nominal, 3), BAND[0] * scale, BAND[1] * scale, MULTIPLICATIVE)
 
 
 def scaled(parameters: ModalParameters, time: float, unit: float) -> ModalParameters:
@@ -82,7 +83,9 @@ def test_independent_of_units_and_of_the_number_of_threads() -> None:
     profile = [(0.1, 1.0), (1.0, 3.0)]
     other = bound_plants(
         [scaled(one, 1e-3, 1e6) for one in PLANTS],
-        CommonPart(NominalPlant(scaled(plant(), 1e-3, 1e6), 3), kilo.low, kilo.high),
+        CommonPart(
+            NominalPlant(scaled(plant(), 1e-3, 1e6), 3), kilo.low, kilo.high, MULTIPLICATIVE
+        ),
         COARSE * 1e-3,
         BoundOptions(order=4, profile=profile),
     )

@@ -5,12 +5,8 @@ import pytest
 
 from identkit.errors import InputError
 from identkit.forms.between_points import largest_ratio, peaks_above
-from identkit.forms.multiplicative import (
-    CommonPart,
-    PlantComparison,
-    accepts,
-    relative_errors,
-)
+from identkit.forms.comparison import CommonPart, PlantComparison
+from identkit.forms.multiplicative import MULTIPLICATIVE, accepts, relative_errors
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import ModalParameters, modal_response
@@ -50,7 +46,7 @@ def test_relative_errors_are_plain_ratios_with_exact_delays() -> None:
 
 @pytest.mark.parametrize("base", ["pivot", "free", "none"])
 def test_largest_ratio_against_a_dense_grid(base: str) -> None:
-    common = CommonPart(NominalPlant(plant(base=base), 3), *BAND)
+    common = CommonPart(NominalPlant(plant(base=base), 3), *BAND, MULTIPLICATIVE)
     weighting = sample_weight()
     dense = np.geomspace(*BAND, 40001)
     for one in family(6, 3, base=base):
@@ -66,7 +62,7 @@ def test_largest_ratio_against_a_dense_grid(base: str) -> None:
 
 @pytest.mark.parametrize("level", [0.2, 1.0, 3.0])
 def test_one_peak_for_every_interval_above_a_level(level: float) -> None:
-    common = CommonPart(NominalPlant(plant(), 3), *BAND)
+    common = CommonPart(NominalPlant(plant(), 3), *BAND, MULTIPLICATIVE)
     weighting = sample_weight()
     dense = np.geomspace(*BAND, 60001)
     for one in family(6, 8):
@@ -81,7 +77,7 @@ def test_one_peak_for_every_interval_above_a_level(level: float) -> None:
 
 def test_plant_equal_to_the_nominal_but_for_the_stand_in_of_its_delay() -> None:
     # What is left is the all-pass error of the nominal alone, far below the weight.
-    common = CommonPart(NominalPlant(plant(), 5), *BAND)
+    common = CommonPart(NominalPlant(plant(), 5), *BAND, MULTIPLICATIVE)
     weighting = sample_weight()
     found = largest_ratio(PlantComparison(plant(), common), weighting, 1000.0)
     assert found.ratio < 1e-4
@@ -89,7 +85,7 @@ def test_plant_equal_to_the_nominal_but_for_the_stand_in_of_its_delay() -> None:
 
 def test_right_half_plane_delay_and_overdamped_pivot_are_fine() -> None:
     odd = replace(plant(), delay=-2e-6, base_damping_ratio=1.0)
-    common = CommonPart(NominalPlant(plant(), 3), *BAND)
+    common = CommonPart(NominalPlant(plant(), 3), *BAND, MULTIPLICATIVE)
     weighting = sample_weight()
     comparison = PlantComparison(odd, common)
     dense = np.geomspace(*BAND, 40001)
@@ -131,9 +127,10 @@ def test_hard_pairs_against_grids_that_resolve_every_resonance(seed: int) -> Non
     rng = np.random.default_rng(seed)
     for _ in range(60):
         centre, near = hard_pair(rng)
-        common = CommonPart(NominalPlant(centre, int(rng.integers(1, 6))), *BAND)
+        common = CommonPart(NominalPlant(centre, int(rng.integers(1, 6))), *BAND, MULTIPLICATIVE)
         comparison, weighting = PlantComparison(near, common), sample_weight()
-        zeros = common.zeros[np.isfinite(common.zeros) & (np.abs(common.zeros) > 0.0)]
+        zeros = common.roots.zeros
+        zeros = zeros[np.isfinite(zeros) & (np.abs(zeros) > 0.0)]
         roots = [centre.modal_frequency, near.modal_frequency, np.abs(zeros) / (2.0 * np.pi)]
         widths = [centre.damping_ratio, near.damping_ratio, zeros.real / np.abs(zeros)]
         grid = resonance_grid(*BAND, np.concatenate(roots), np.concatenate(widths), share=0.05)

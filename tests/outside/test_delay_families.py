@@ -5,11 +5,8 @@ import pytest
 
 from identkit.forms.between_points import largest_ratio
 from identkit.forms.bounding import BoundOptions, bound_plants
-from identkit.forms.multiplicative import (
-    CommonPart,
-    PlantComparison,
-    relative_errors,
-)
+from identkit.forms.comparison import CommonPart, PlantComparison
+from identkit.forms.multiplicative import MULTIPLICATIVE, relative_errors
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import ModalParameters
@@ -54,7 +51,7 @@ def test_first_order_delay_weight_does_not_cover() -> None:
     # Same source: theta s/(theta s/2 + 1) falls short by a factor 1.2157293 at omega theta = 2.5711
     # (values computed from the formula). Found here between points, from a start far away.
     high = np.pi / THETA / (2.0 * np.pi)
-    common = CommonPart(NOMINAL, 0.01 * high, high)
+    common = CommonPart(NOMINAL, 0.01 * high, high, MULTIPLICATIVE)
     weight = MagnitudeWeight(
         1, 0.0, 0.0, 0.0, 0.0, np.array([-2.0 / THETA + 0j]), np.zeros(1, dtype=complex), 2.0, 0
     )
@@ -69,7 +66,10 @@ def test_bound_of_a_delay_family_lies_above_the_textbook_radius() -> None:
     plants = [gain_and_delay(k, t) for k in (0.8, 1.2) for t in (0.0, 0.5 * THETA, THETA)]
     grid = np.geomspace(0.01 * high, high, 40)
     found = bound_plants(
-        plants, CommonPart(NOMINAL, grid[0], high), grid, BoundOptions(order=3, profile=[(1, 1)])
+        plants,
+        CommonPart(NOMINAL, grid[0], high, MULTIPLICATIVE),
+        grid,
+        BoundOptions(order=3, profile=[(1, 1)]),
     )
     dense = np.geomspace(grid[0], high, 5000)
     x = 2.0 * np.pi * dense * THETA

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 
 from identkit.forms.between_points import largest_ratio
-from identkit.forms.multiplicative import CommonPart, PlantComparison
+from identkit.forms.comparison import CommonPart, PlantComparison
+from identkit.forms.multiplicative import MULTIPLICATIVE
 from identkit.forms.nominal_plant import NominalPlant
 from identkit.methods.magnitude_weight import MagnitudeWeight
 from identkit.methods.modal_model import ModalParameters
@@ -47,7 +48,7 @@ def test_largest_ratio_against_slycot(seed: int) -> None:
         "C", "I", "S", "D", states, 1, 1,
         whole.A, np.eye(states), whole.B, whole.C, whole.D, tol=1e-9,
     )  # fmt: skip
-    common = CommonPart(NominalPlant(nominal, 0), 1.0, 1e6)
+    common = CommonPart(NominalPlant(nominal, 0), 1.0, 1e6, MULTIPLICATIVE)
     comparison = PlantComparison(one, common)
     found = largest_ratio(comparison, WEIGHT, 1e3)
     assert found.ratio == pytest.approx(expected, rel=1e-6)

@@ -1,6 +1,7 @@
 """Run a small invented campaign to a set file: ``python small_study.py FOLDER``.
 
-Sixteen responses of four units, one of them cracked and left out with its reason.
+Sixteen responses of four units, one of them cracked and left out with its reason. With the name of
+a form behind it, the study that stands in FOLDER is run again in that form.
 """
 
 import sys
@@ -39,5 +40,15 @@ def run(folder: Path) -> None:
     run_study(folder / "study.toml", until="export", jobs=1)
 
 
+def run_again(folder: Path, form: str) -> None:
+    """Bound the campaign of a study that was run before in another form."""
+    study = STUDY.replace("[bound]", f'[bound]\nform = "{form}"')
+    (folder / "study.toml").write_text(study, encoding="utf-8")
+    run_study(folder / "study.toml", jobs=1)
+
+
 if __name__ == "__main__":
-    run(Path(sys.argv[1]))
+    if len(sys.argv) > 2:
+        run_again(Path(sys.argv[1]), sys.argv[2])
+    else:
+        run(Path(sys.argv[1]))

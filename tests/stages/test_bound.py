@@ -123,8 +123,8 @@ def test_threads_change_nothing(modes: xr.Dataset, nominal: xr.Dataset, bound: x
 
 
 def test_other_forms_and_empty_sets_are_refused(modes: xr.Dataset, nominal: xr.Dataset) -> None:
-    with pytest.raises(InputError, match="additive"):
-        bound_spread(modes, nominal, form="additive")
+    with pytest.raises(InputError, match="parametric"):
+        bound_spread(modes, nominal, form="parametric")
     everyone = {str(name): "" for name in modes["response"].values[:11]}
     with pytest.raises(InputError, match="no plant left"):
         bound_spread(modes, nominal, left_out=everyone)

@@ -192,8 +192,8 @@ def test_a_cap_becomes_the_ceiling(stages):
 
 
 def test_other_forms_are_refused(stages):
-    bound = stages["bound"].assign_attrs(form="additive")
-    with pytest.raises(InputError, match="'additive'"):
+    bound = stages["bound"].assign_attrs(form="parametric")
+    with pytest.raises(InputError, match="'parametric'"):
         build_set(stages["nominal"], bound, stages["modes"])
 
 
