@@ -20,8 +20,18 @@ from identkit.settings import Settings, load_settings
 from identkit.stages.audit import all_held, audit, failed_sentences
 from identkit.stages.fit import fit_modes
 from identkit.stages.screen import screen
+from identkit.stages.unexplained import unexplained_share
 
 ROWS_SHOWN = 40
+_COLUMNS = (
+    "response",
+    "verdict",
+    "reach",
+    "at Hz",
+    "mode",
+    "points, noise and all",
+    "left out of the set",
+)
 ORDER = {"not held": 0, "cannot tell": 1, "not judged": 2, "held": 3}
 
 
@@ -86,6 +96,8 @@ def _audit_new(plant_set: PlantSet, files: Sequence[Path], study: Path | None) -
     )
     model = settings.model.model_dump(exclude={"sharing"})
     fits = fit_modes(responses, screening, **model)
+    left = unexplained_share(fits, responses, screening)
+    fits = fits.assign(unexplained_share=("response", left))
     table = audit(plant_set, fits, responses, screening)
     # files named one by one are asked about one by one, whatever the set left out when it was made
     return table.assign(excluded=("response", np.zeros(table.sizes["response"], dtype=bool)))
@@ -103,7 +115,7 @@ def _text(table: xr.Dataset) -> str:
         range(table.sizes["response"]),
         key=lambda k: (ORDER.get(str(table["verdict"].values[k]), 0), -_reach(table, k)),
     )
-    grid = Table("response", "verdict", "reach", "at Hz", "mode", "left out of the set", box=None)
+    grid = Table(*_COLUMNS, box=None)
     for k in rows[:ROWS_SHOWN]:
         grid.add_row(*_cells(table, k))
     out = Console(file=StringIO(), width=120)
@@ -118,13 +130,14 @@ def _text(table: xr.Dataset) -> str:
 def _cells(table: xr.Dataset, k: int) -> list[str]:
     row = table.isel(response=k)
     by_fit = "no fit" not in str(row["fit_verdict"].values)
-    hertz = float(row["fit_reach_frequency" if by_fit else "raw_reach_with_allowance_frequency"])
+    hertz = float(row["fit_reach_frequency" if by_fit else "raw_reach_frequency"])
     return [
         str(row["response"].values),
         str(row["verdict"].values),
         f"{_reach(table, k):.3f}",
         f"{hertz:.5g}",
         _named_mode(str(row["nearest_mode"].values)),
+        f"{float(row['raw_reach']):.3f}",
         str(row["reason"].values),
     ]
 
@@ -135,10 +148,10 @@ def _named_mode(name: str) -> str:
 
 
 def _reach(table: xr.Dataset, k: int) -> float:
-    """Return the reach of the fit, or where there is none that of the points less their noise."""
+    """Return the reach of the fit, or where there is none that of the points, noise and all."""
     row = table.isel(response=k)
     by_fit = float(row["fit_reach"])
-    return by_fit if by_fit == by_fit else float(row["raw_reach_with_allowance"])
+    return by_fit if by_fit == by_fit else float(row["raw_reach"])
 
 
 def _unheld_claims(table: xr.Dataset) -> list[str]:

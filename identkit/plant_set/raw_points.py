@@ -24,6 +24,8 @@ from identkit.plant_set.reach import Surroundings
 
 HELD, NOT_HELD, CANNOT_TELL, NO_POINTS = "held", "not held", "cannot tell", "no points"
 FALSE_ALARM = 0.05
+_WINDOW = 21
+_FEWEST_POINTS = 5
 
 
 @dataclass(frozen=True, eq=False)
@@ -106,6 +108,46 @@ def judge_points(
         left_out=(~good & inside).sum(axis=1),
         outside_band=np.full(len(measured), int(np.sum(~inside))),
     )
+
+
+def neighbour_variance(
+    frequency: FloatArray, measured: ComplexArray, usable: BoolArray | None = None
+) -> FloatArray:
+    """Return a variance read off a response itself, where none was measured and nothing fitted.
+
+    How far each usable point lies off the line through its usable neighbours, relative to its
+    size, as a median over 21 points, or over all where that is larger: |error|^2 of circular
+    Gaussian noise is exponential, so its median is ln 2 times its mean. Curvature between the
+    points counts as noise, never the reverse.
+
+    Parameters
+    ----------
+    frequency
+        (points,) Hz, increasing.
+    measured
+        (points,); NaN points are left out.
+    usable
+        (points,) points to use; None for all.
+
+    Returns
+    -------
+    FloatArray
+        (points,) E|error|^2, total of both parts; NaN at points left out, and everywhere where
+        fewer than five are usable.
+    """
+    good = np.isfinite(measured) if usable is None else np.isfinite(measured) & usable
+    variance = np.full(measured.shape, np.nan)
+    if good.sum() < _FEWEST_POINTS:
+        return variance
+    hertz, value = frequency[good], measured[good]
+    share = (hertz[1:-1] - hertz[:-2]) / (hertz[2:] - hertz[:-2])
+    off = value[1:-1] - (1.0 - share) * value[:-2] - share * value[2:]
+    square = np.abs(off / value[1:-1]) ** 2 / (1.0 + share**2 + (1.0 - share) ** 2)
+    padded = np.pad(square, (_WINDOW // 2 + 1, _WINDOW // 2 + 1), constant_values=np.nan)
+    windows = np.lib.stride_tricks.sliding_window_view(padded, _WINDOW)
+    level = np.maximum(np.nanmedian(windows, axis=1), np.median(square)) / np.log(2.0)
+    variance[good] = level * np.abs(value) ** 2
+    return variance
 
 
 def _reaches(

@@ -31,6 +31,7 @@ from identkit.plant_set.raw_points import (
     NOT_HELD,
     RawReach,
     judge_points,
+    neighbour_variance,
 )
 from identkit.plant_set.reach import reach_of_plants
 from identkit.plant_set.stacked import plants_at
@@ -74,8 +75,8 @@ def audit(
     A fitted plant is held if its reach over the band is at most 1 (within the tolerance the set
     states between grid points). Measured points are judged with an allowance for their noise, see
     `plant_set.raw_points`. Where the variance of the points is not known, the relative residuals
-    of the fit around each point stand in; without a fit either, nothing beyond the weight is called
-    "not held".
+    of the fit around each point stand in; without a fit either, how far each point lies off its
+    neighbours.
 
     Parameters
     ----------
@@ -298,18 +299,22 @@ def _variance(
     usable: BoolArray | None,
     plants: list[FittedPlant | None],
 ) -> FloatArray:
-    """Return the stated variance of the points, or that of residuals around each point."""
-    if "frequency_response_variance" in part:
-        return np.asarray(_channel(part["frequency_response_variance"], plant_set), dtype=float)
+    """Return the stated variance of the points, or one read off residuals or neighbours."""
     frequency = part["frequency"].values
     result = np.full(measured.shape, np.nan)
-    for index, plant in enumerate(plants):
+    if "frequency_response_variance" in part:
+        stated = _channel(part["frequency_response_variance"], plant_set)
+        result = np.array(stated, dtype=float)
+    for index in np.flatnonzero(~np.isfinite(result).any(axis=1)).tolist():
+        plant = plants[index]
+        good = None if usable is None else usable[index]
         if plant is None:
+            result[index] = neighbour_variance(frequency, measured[index], good)
             continue
         fitted = plants_at([plant], frequency, plant_set.time.period)[0, :, 0, 0]
         square = np.abs(measured[index] / fitted - 1.0) ** 2
-        good = np.isfinite(square) if usable is None else np.isfinite(square) & usable[index]
-        result[index] = _moving_mean(square, good) * np.abs(fitted) ** 2
+        known = np.isfinite(square) if good is None else np.isfinite(square) & good
+        result[index] = _moving_mean(square, known) * np.abs(fitted) ** 2
     return result
 
 

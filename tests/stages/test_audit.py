@@ -225,6 +225,24 @@ def test_residuals_stand_in_for_a_missing_variance(bounded, makers):
     assert set(without["raw_verdict"].values) <= {"held", "cannot tell"}
 
 
+def test_a_gross_error_is_told_without_variance_and_without_fit(bounded, makers):
+    plants = all_plants(makers)[:4]
+    data = responses_of(plants, noise=0.002, variance=False)
+    good = audit(bounded, None, data)
+    assert set(good["verdict"].values) <= {"held", "cannot tell"}
+    assert (good["raw_reach_with_allowance"] > 0.1).any()
+    data["frequency_response"] *= 10.0
+    assert (audit(bounded, None, data)["verdict"] == "not held").all()
+
+
+def test_a_response_whose_variance_is_missing_is_judged_by_its_neighbours(bounded, makers):
+    data = responses_of(all_plants(makers)[:2])
+    data["frequency_response_variance"][1] = np.nan
+    data["frequency_response"][1] *= 10.0
+    table = audit(bounded, None, data)
+    assert str(table["raw_verdict"].values[1]) == "not held"
+
+
 def test_screening_and_several_grids(bounded, makers):
     plants = all_plants(makers)[:6]
     first = responses_of(plants[:4])
