@@ -8,7 +8,7 @@ introduction to disk margins", IEEE Control Systems Magazine 40(5), 2020, 78-95 
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import linalg
@@ -185,10 +185,11 @@ def margins_of_loop(
     found = margins_from_response(respond, grid)
     if delay or abs(1.0 + loop.D[0, 0]) < 1e-9:
         return found
+    # The exact norm finds the right valley; the refinement is the finer of the two inside it.
     peak = band_norm(sensitivity(loop), float(grid[0]), float(grid[-1]))
-    return StabilityMargins(
-        **{**vars(found), "modulus": 1.0 / peak.norm, "modulus_frequency": peak.frequency}
-    )
+    if found.modulus <= 1.0 / peak.norm:
+        return found
+    return replace(found, modulus=1.0 / peak.norm, modulus_frequency=peak.frequency)
 
 
 def loop_grid(
