@@ -1,16 +1,17 @@
 r"""Whether many correlated quantities of few units can be normal.
 
-Three statistics of the standardised quantities, each against what samples of the same size from a
+Four statistics of the standardised quantities, each against what samples of the same size from a
 normal law of the same correlation give (Monte Carlo test): the mean squared skewness, the mean
 squared departure of kurtosis from that law, and how well two groups explain a leading principal
-score. Skewed spreads show in the first two, lots that stand apart in the last.
+score, and any single quantity. Skewed spreads show in the first two, lots that stand apart in the
+last two.
 
 Sources: K. V. Mardia, "Measures of multivariate skewness and kurtosis with applications",
 Biometrika 57 (1970) 519-530, restricted here to the margins, because fewer units than quantities
 leave no inverse covariance; L. Engelman and J. A. Hartigan, "Percentage points of a test for
 clusters", Journal of the American Statistical Association 64 (1969) 1647-1648, on principal scores;
 G. A. Barnard, discussion, Journal of the Royal Statistical Society B 25 (1963) 294 (Monte Carlo
-test); C. E. Bonferroni (1936) for the three together.
+test); C. E. Bonferroni (1936) for the four together.
 """
 
 from dataclasses import dataclass
@@ -19,7 +20,7 @@ import numpy as np
 
 from identkit.methods.arrays import FloatArray
 
-STATISTICS = ("skewness", "kurtosis", "two groups")
+STATISTICS = ("skewness", "kurtosis", "two groups of units", "two groups in one quantity")
 FEWEST_UNITS = 8
 _LEADING = 3
 _SIMULATED = 999
@@ -32,7 +33,7 @@ class NormalityTest:
     Attributes
     ----------
     probability
-        Chance of such a sample under the normal law, all three statistics together; NaN where
+        Chance of such a sample under the normal law, all statistics together; NaN where
         there are too few units to tell.
     statistic
         Name of the statistic that stands out most; "" where nothing could be tested.
@@ -91,7 +92,7 @@ def _standardised(samples: FloatArray) -> FloatArray:
 def _statistics(
     samples: FloatArray, moments: tuple[FloatArray, FloatArray], expected: FloatArray
 ) -> FloatArray:
-    """Return (sets, 3) statistics; `expected` is the mean kurtosis under the normal law."""
+    """Return (sets, 4) statistics; `expected` is the mean kurtosis under the normal law."""
     skewness, kurtosis = moments
     scaled = _standardised(samples)
     _, _, axes = np.linalg.svd(scaled, full_matrices=False)
@@ -101,6 +102,7 @@ def _statistics(
             (skewness**2).mean(axis=1),
             ((kurtosis - expected) ** 2).mean(axis=1),
             _two_groups(scores).max(axis=1),
+            _two_groups(scaled).max(axis=1),
         ],
         axis=1,
     )

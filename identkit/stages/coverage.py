@@ -6,7 +6,9 @@ one (Wilks 1941, methods/tolerance_limits.py). Leaving each unit out in turn is 
 that stands on assumptions, and only where the measurements do not speak against them.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
+
+import xarray as xr
 
 from identkit.errors import InputError, Problem
 from identkit.methods.tolerance_limits import (
@@ -14,10 +16,11 @@ from identkit.methods.tolerance_limits import (
     tolerance_content,
     tolerance_sample_size,
 )
-from identkit.plant_set.fields import FittedPlant
-from identkit.stages.leave_one_out import LeaveOneOut
+from identkit.plant_set.fields import FittedPlant, PlantSetFields
+from identkit.stages.leave_one_out import LeaveOneOut, leave_one_unit_out
+from identkit.stages.model_coverage import FEWEST_UNITS, ModelStatement, model_statement
 from identkit.stages.model_coverage import METHOD as MODEL_METHOD
-from identkit.stages.model_coverage import ModelStatement
+from identkit.stages.population_model import population_model
 
 CAUTION = "This figure is no safety certificate."
 
@@ -103,6 +106,71 @@ def state_coverage(
         "leave_one_out": tried,
         "model_based": predicted,
     }
+
+
+def cover(
+    draft: PlantSetFields,
+    modes: xr.Dataset,
+    population: xr.Dataset,
+    nominal: xr.Dataset,
+    bound: xr.Dataset,
+    *,
+    held_out: Mapping[str, str],
+    left_out: Collection[str],
+    content: float = 0.9,
+    confidence: float = 0.9,
+    exchangeable: str = "unit",
+    radius_floor: float = 0.02,
+    seed: int = 1,
+) -> dict[str, object]:
+    """Return all that can be said of the next unit, from the datasets of the stages.
+
+    Parameters
+    ----------
+    draft
+        The set.
+    modes, population, nominal, bound
+        As the stages wrote them.
+    held_out
+        Unit (or lot) by response id of what was held out.
+    left_out
+        Every response that population, nominal and bound did not see, the held-out ones included.
+    content, confidence, exchangeable
+        As in `state_coverage`.
+    radius_floor
+        As the bound had it.
+    seed
+        Of the draws.
+
+    Returns
+    -------
+    dict
+        As `state_coverage` returns it.
+    """
+    groups = largest_reach_by_group(draft.plants, held_out)
+    tried = predicted = None
+    if exchangeable == "unit" and _is_covered(draft):
+        model = population_model(modes, population, leave_out=left_out)
+        if len(model.units) >= FEWEST_UNITS:
+            tried = leave_one_unit_out(
+                modes, nominal, bound, model, radius_floor=radius_floor, seed=seed
+            )
+            predicted = model_statement(
+                draft, model, population, modes, left_out_reach=tried.reach, seed=seed
+            )
+    return state_coverage(
+        groups,
+        content=content,
+        confidence=confidence,
+        exchangeable=exchangeable,
+        left_out=tried,
+        model=predicted,
+    )
+
+
+def _is_covered(draft: PlantSetFields) -> bool:
+    """Whether leaving out and virtual units know this kind of set."""
+    return draft.form == "multiplicative" and draft.is_scalar and draft.time.period <= 0.0
 
 
 def largest_reach_by_group(

@@ -25,6 +25,8 @@ from identkit.stages.virtual_units import draw_parameters, draw_plants
 
 POPULATIONS = 60
 UNITS_EACH = 40
+UNITS_OF_MANY_CONDITIONS = 20
+MANY_CONDITIONS = 5
 POPULATIONS_AT_ONCE = 12
 FEWEST_UNITS = 8
 CHANCE = 0.05
@@ -113,17 +115,18 @@ def model_statement(
         return None
     generator = np.random.default_rng(seed)
     shrinkage = float(population["unit_effect_shrinkage"])
+    each = UNITS_EACH if len(model.head) < MANY_CONDITIONS else UNITS_OF_MANY_CONDITIONS
     held = np.concatenate(
         [
-            _held_counts(contents, model, shrinkage, generator)
+            _held_counts(contents, model, each, shrinkage, generator)
             for _ in range(POPULATIONS // POPULATIONS_AT_ONCE)
         ]
     )
-    shares = fit_beta_binomial(held, UNITS_EACH)
+    shares = fit_beta_binomial(held, each)
     return ModelStatement(
         shares,
         len(model.units),
-        POPULATIONS * UNITS_EACH,
+        POPULATIONS * each,
         len(model.head),
         _checks(model, population, modes, shares, left_out_reach or {}, seed),
     )
@@ -132,6 +135,7 @@ def model_statement(
 def _held_counts(
     contents: PlantSetFields,
     model: PopulationModel,
+    units: int,
     shrinkage: float,
     generator: np.random.Generator,
 ) -> IntArray:
@@ -139,8 +143,8 @@ def _held_counts(
     plants: list[FittedPlant] = []
     for _ in range(POPULATIONS_AT_ONCE):
         drawn = draw_parameters(model, shrinkage, generator)
-        plants += draw_plants(model, drawn, UNITS_EACH, generator)
-    inside = plants_inside(contents, plants).reshape(POPULATIONS_AT_ONCE, UNITS_EACH, -1)
+        plants += draw_plants(model, drawn, units, generator)
+    inside = plants_inside(contents, plants).reshape(POPULATIONS_AT_ONCE, units, -1)
     return np.asarray(inside.all(axis=2).sum(axis=1), dtype=np.int64)
 
 
