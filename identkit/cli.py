@@ -55,13 +55,14 @@ _quiet = click.option("--quiet", is_flag=True, help="Print the verdict only.")
 
 @commands.command()
 @click.argument("folder", type=_folder(), default="identkit-demo")
+@click.option("--records", is_flag=True, help="Closed-loop time records of an invented bench.")
 @_jobs
 @_quiet
-def demo(folder: Path, jobs: int | None, quiet: bool) -> None:
+def demo(folder: Path, records: bool, jobs: int | None, quiet: bool) -> None:
     """Write an invented campaign to FOLDER and run its study."""
     from identkit.demo import write_demo
 
-    study = write_demo(folder)
+    study = write_demo(folder, records=records)
     if not quiet:
         click.echo(f"Wrote an invented campaign and its study to {folder}")
     _finish(_run(study, jobs=jobs, quiet=quiet))

@@ -6,9 +6,10 @@ from pathlib import Path
 from identkit.errors import InputError, Problem
 from identkit.synthetic import invent_campaign
 from identkit.synthetic_files import write_campaign
+from identkit.synthetic_record_files import invent_bench_campaign, write_records
 
 
-def write_demo(folder: Path) -> Path:
+def write_demo(folder: Path, *, records: bool = False) -> Path:
     """Write the invented campaign and its study file.
 
     Parameters
@@ -16,6 +17,8 @@ def write_demo(folder: Path) -> Path:
     folder
         Made if it does not exist. A folder that already holds the demo is used as it is, so that
         the study resumes; a folder with anything else in it is refused.
+    records
+        Write closed-loop time records of an invented bench in place of measured responses.
 
     Returns
     -------
@@ -27,14 +30,18 @@ def write_demo(folder: Path) -> Path:
     InputError
         If the folder holds something else, or cannot be written.
     """
-    study, text = folder / "study.toml", _packaged("demo_study.toml")
+    packaged = "demo_records_study.toml" if records else "demo_study.toml"
+    study, text = folder / "study.toml", _packaged(packaged)
     if study.exists() and study.read_text(encoding="utf-8") == text:
         return study
     if folder.exists() and any(folder.iterdir()):
         raise InputError(Problem(str(folder), "a folder with other files in it", "an empty folder"))
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        write_campaign(folder, invent_campaign())
+        if records:
+            write_records(folder, invent_bench_campaign())
+        else:
+            write_campaign(folder, invent_campaign())
         study.write_text(text, encoding="utf-8")
     except OSError as error:
         raise InputError(_unwritable(folder, error)) from error

@@ -55,10 +55,10 @@ class InventedRecorder:
     periods: int = 9
     lines: int = 900
     band: tuple[float, float] = (60.0, 23_000.0)
-    motion: float = 6.0
+    motion: float = 5.0
     windage: float = 1.0
     sensor_noise: float = 0.5
-    runout: float = 3.0
+    runout: float = 2.0
     steps_per_track: int = 2048
     crossover: float = 500.0
 

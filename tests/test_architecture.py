@@ -33,6 +33,7 @@ LEVELS = {
     "settings_types": 0,
     "settings_records": 1,
     "synthetic_records": 2,
+    "synthetic_record_files": 3,
     "progress": 1,
     "not_yet": 3,
     "demo": 4,
