@@ -8,7 +8,7 @@ import numpy as np
 import xarray as xr
 
 from identkit.errors import InputError, Problem
-from identkit.history.adding import add_folders, release_set
+from identkit.history.adding import Added, add_folders, release_set
 from identkit.history.entries import Folder, read_folder
 from identkit.history.reading import History, fill_reach, read_history
 from identkit.history.store import Store
@@ -86,7 +86,7 @@ def track_drift(
     _refuse_rules(run_length, baseline)
     read = [read_folder(Path(folder)) for folder in folders]
     with Store(str(history)) as store:
-        added = add_folders(store, read, code_version()) if read else []
+        added = add_folders(store, read, code_version()) if read else Added()
         _keep_rules(store, run_length, baseline)
         _release(store, plant_set, read)
         fill_reach(store)
@@ -95,7 +95,7 @@ def track_drift(
         name = store.name
     if not stored.measurements.sizes["measurement"]:
         raise InputError(Problem(name, "an empty history", "results folders to add to it"))
-    given = judge(stored, name, sum(len(folder.entries) for folder in read), added)
+    given = judge(stored, name, added)
     try:
         page = write_drift_report(given, target)
     except OSError as error:
@@ -106,7 +106,7 @@ def track_drift(
     return Drift((headline, *drift_sentences(given)), given.signalled, page)
 
 
-def judge(history: History, name: str, added: int, said: Sequence[str] = ()) -> DriftInput:
+def judge(history: History, name: str, added: Added) -> DriftInput:
     """Chart a history and gather what its page shows."""
     correction = history.correction
     points = unit_points(history.measurements, correction)
@@ -132,8 +132,8 @@ def judge(history: History, name: str, added: int, said: Sequence[str] = ()) -> 
         apart=units_apart(charted) if charted is not None else (),
         exit=time_to_exit(charted) if charted is not None else None,
         left_out=_left_out(history.measurements),
-        notes=(*_notes(points, charted), *(said or history.notes)),
-        added=added,
+        notes=(*_notes(points, charted), *(added.notes or history.notes)),
+        additions=added.numbers,
     )
 
 

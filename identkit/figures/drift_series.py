@@ -146,7 +146,7 @@ def draw_drift_series(picked: DriftSeries, layout: Layout = WIDE) -> Figure:
     for axes in (top, bottom):
         shade_baseline(axes, picked.baseline.tolist())
         axes.grid(axis="x", visible=False)
-    _draw_values(top, picked, at)
+    _draw_values(top, picked, at, layout)
     mark_lots(top, picked.lots)
     for name, share in picked.shares.items():
         colour, style = _LINES[name]
@@ -155,13 +155,13 @@ def draw_drift_series(picked: DriftSeries, layout: Layout = WIDE) -> Figure:
             bottom.plot(at, inside, color=colour, ls=style, lw=1.4, label=name)
     bottom.axhline(1.0, color=ALARM, lw=1.2)
     bottom.set_ylabel("share of its limit")
-    bottom.set_ylim(0.0, None)
+    bottom.set_ylim(0.0, 1.3 * max(bottom.get_ylim()[1], 1.0))
     bottom.legend(loc="upper left", ncols=2 if layout.is_narrow else 4)
     mark_units(bottom, picked.units, layout)
     return figure
 
 
-def _draw_values(axes: Any, picked: DriftSeries, at: IntArray) -> None:
+def _draw_values(axes: Any, picked: DriftSeries, at: IntArray, layout: Layout) -> None:
     first, last = picked.candidates
     if first >= 0 and picked.change >= 0:
         axes.axvspan(first - 0.9, last - 0.1, color=WEIGHT, alpha=0.22, lw=0, label="change, 95 %")
@@ -169,6 +169,15 @@ def _draw_values(axes: Any, picked: DriftSeries, at: IntArray) -> None:
     for limit in (picked.low, picked.high):
         if np.isfinite(limit):
             axes.axhline(limit, color=ALARM, lw=1.2)
+            axes.annotate(
+                "limit of a single unit",
+                (0.0, limit),
+                xycoords=("axes fraction", "data"),
+                xytext=(4, 3 if limit < picked.centre else -10),
+                textcoords="offset points",
+                color=ALARM,
+                fontsize="small",
+            )
     stop = picked.until if picked.until >= 0 else len(at)
     moved = (at >= picked.change) & (at < stop) if picked.change >= 0 else at < 0
     kept = ~picked.left_out & ~moved
@@ -185,5 +194,6 @@ def _draw_values(axes: Any, picked: DriftSeries, at: IntArray) -> None:
             label="not of the baseline",
         )
     axes.set_ylabel(picked.quantity)
-    axes.set_title(picked.title, pad=16)
-    axes.legend(loc="best")
+    axes.margins(y=0.12)
+    columns = 2 if layout.is_narrow else 4
+    axes.legend(loc="lower center", bbox_to_anchor=(0.5, 1.06), ncols=columns)

@@ -2,6 +2,7 @@
 
 import json
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -33,7 +34,15 @@ _SAME_MODE = {"modal_frequency": 0.02, "damping_ratio": 0.5, "residue": 0.5}
 _UNPAIRED_COST = 8.0
 
 
-def add_folders(store: Store, folders: Sequence[Folder], version: str) -> list[str]:
+@dataclass(frozen=True)
+class Added:
+    """What was added: the numbers of the additions, and what must be said about them."""
+
+    numbers: tuple[int, ...] = ()
+    notes: tuple[str, ...] = ()
+
+
+def add_folders(store: Store, folders: Sequence[Folder], version: str) -> Added:
     """Add every measurement of the folders in one transaction.
 
     Parameters
@@ -47,8 +56,8 @@ def add_folders(store: Store, folders: Sequence[Folder], version: str) -> list[s
 
     Returns
     -------
-    list of str
-        What a reader should know: modes that could not be matched.
+    Added
+        Numbers of the additions, and what a reader should know: modes that could not be matched.
 
     Raises
     ------
@@ -57,16 +66,16 @@ def add_folders(store: Store, folders: Sequence[Folder], version: str) -> list[s
         written then.
     """
     _refuse_doubles(folders)
-    notes = []
+    notes, numbers = [], []
     with store.transaction() as connection:
         _refuse_known(store, connection, folders)
         for folder in folders:
             if not store.rule(connection, "reference_temperature"):
                 _set_corrections(store, connection, folder)
             names, said = _mode_names(connection, folder.population)
-            _insert(connection, folder, names, version, said)
+            numbers.append(_insert(connection, folder, names, version, said))
             notes += [f"{folder.path}: {sentence}" for sentence in said]
-    return notes
+    return Added(tuple(numbers), tuple(notes))
 
 
 def release_set(store: Store, path: Path) -> str:
@@ -195,7 +204,7 @@ def _insert(
     names: Mapping[str, str],
     version: str,
     notes: Sequence[str],
-) -> None:
+) -> int:
     addition = connection.execute(
         insert(tables.ADDITION).values(
             added_at=_now(), folder=folder.path.name, version=version, notes="\n".join(notes)
@@ -219,6 +228,7 @@ def _insert(
             if e.mode in names
         ]
     insert_rows(connection, tables.ESTIMATE, estimates)
+    return int(addition[0])
 
 
 def _measurement(entry: Entry, set_digest: str) -> dict[str, Any]:

@@ -172,10 +172,14 @@ def _measurements(connection: Connection, correction: xr.Dataset, digest: str) -
         name: ("measurement", np.array([str(row[name]) for row in rows], dtype=str))
         for name in ("response", "measured_at", "unit", "lot", "head", "excluded", "labels")
     }
-    numbers = {
+    numbers: dict[str, Any] = {
         name: ("measurement", np.array([_float(row[name]) for row in rows], dtype=float))
         for name in ("temperature", "position")
     }
+    numbers["addition"] = (
+        "measurement",
+        np.array([row["addition_id"] for row in rows], dtype=np.int64),
+    )
     return xr.Dataset(
         {"value": (dims, value), "standard_error": (dims, error)}
         | _reach_columns(connection, rows, digest),

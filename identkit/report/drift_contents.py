@@ -51,8 +51,8 @@ class DriftInput:
         (response, reason) of measurements that are not charted.
     notes
         What else must be said.
-    added
-        Measurements added by this call.
+    additions
+        Numbers of the additions of this call; empty where nothing was added.
     """
 
     history: str
@@ -68,7 +68,7 @@ class DriftInput:
     exit: Exit | None
     left_out: Sequence[tuple[str, str]]
     notes: Sequence[str]
-    added: int
+    additions: Sequence[int]
 
     @property
     def is_judged(self) -> bool:
@@ -77,26 +77,48 @@ class DriftInput:
 
     @property
     def signalled(self) -> bool:
-        """Whether anything moved or is no longer held."""
-        moved = bool(self.signals) or bool(self.again_signals) or self.joint_at >= 0
-        return moved or bool(self.outside)
+        """Whether anything is no longer held, has moved in what was added, or is still off.
+
+        A call that adds nothing judges the whole record.
+        """
+        moved = any(self.is_open(self.charted, one) for one in self.signals)
+        again = any(self.is_open(self.again, one) for one in self.again_signals)
+        return moved or again or self.joint_is_open or bool(self.outside)
+
+    @property
+    def joint_is_open(self) -> bool:
+        """Whether the multivariate chart signals in what was added, or still."""
+        if self.charted is None or self.joint_at < 0:
+            return False
+        beyond = self.charted["joint_signal"].values
+        return bool(beyond[-1]) or self.is_new(self.charted, self.joint_at)
+
+    def is_open(self, charted: xr.Dataset | None, one: Signal) -> bool:
+        """Whether a series is still off, or was first seen so in what was added."""
+        return charted is not None and (one.until < 0 or self.is_new(charted, one.seen_at))
+
+    def is_new(self, charted: xr.Dataset, visit: int) -> bool:
+        """Whether a visit was added by this call, or the call judges the whole record."""
+        return not self.additions or int(charted["addition"].values[visit]) in self.additions
 
 
 def drift_state(given: DriftInput) -> tuple[str, str]:
     """Return the state and one sentence: "signal", "no signal" or "baseline"."""
     units = given.points.sizes["visit"]
-    moved = [one.series for one in (*given.signals, *given.again_signals)]
+    moved = [one.series for one in given.signals if given.is_open(given.charted, one)]
+    moved += [one.series for one in given.again_signals if given.is_open(given.again, one)]
     if given.outside:
         names = _units(given.points, given.outside)
         return "signal", f"The released set no longer holds {counted(len(names), 'unit')}"
     if moved:
         words = listed([series_words(name) for name in dict.fromkeys(moved)], 4)
         return "signal", f"{words} moved{_held_words(given)}"
-    if given.joint_at >= 0:
+    if given.joint_is_open:
         return "signal", f"The modal frequencies moved together{_held_words(given)}"
     if not given.is_judged:
         return "baseline", f"{counted(units, 'unit')} in the history: the baseline is being built"
-    return "no signal", f"Nothing moved beyond chance{_held_words(given)}"
+    past = " in what was added" if given.signals or given.again_signals else ""
+    return "no signal", f"Nothing moved beyond chance{past}{_held_words(given)}"
 
 
 def drift_sentences(given: DriftInput) -> list[str]:

@@ -10,6 +10,7 @@ from identkit.report.table import Table, table_of
 from identkit.stages.drift_charts import CHARTS
 from identkit.stages.drift_signals import Signal, natural
 
+_CHARTS = {"individuals": "single", "lot": "lot mean", "ewma": "average", "cusum": "sum"}
 _UNIT_COLUMNS = (
     ("unit", "text"),
     ("lot", "text"),
@@ -55,7 +56,7 @@ def moved_table(given: DriftInput) -> Table | None:
     """Return what moved, with its size and place."""
     rows = []
     for charted, signals, kind in (
-        (given.charted, given.signals, "new units"),
+        (given.charted, given.signals, ""),
         (given.again, given.again_signals, "measured again"),
     ):
         rows += [_moved_row(charted, one, kind) for one in signals if charted is not None]
@@ -65,11 +66,13 @@ def moved_table(given: DriftInput) -> Table | None:
         ("until", "text"),
         ("before", "number"),
         ("after", "number"),
-        ("own standard deviations", "number"),
-        ("units", "text"),
+        ("own deviations", "number"),
         ("charts", "text"),
     )
-    note = "Values at the reference temperature; residues relative to their usual size."
+    note = (
+        "Values at the reference temperature; residues relative to their usual size. The change is "
+        "in standard deviations of a unit of that series."
+    )
     return table_of("What moved", columns, rows, note)
 
 
@@ -86,8 +89,7 @@ def _moved_row(charted: xr.Dataset, one: Signal, kind: str) -> tuple[str, ...]:
         f"{number(before, 4)}{unit}",
         f"{number(after, 4)}{unit}",
         f"{number(one.deviations, 2)} ± {number(one.deviations_standard_error, 1)}",
-        kind,
-        ", ".join(one.charts),
+        ", ".join(_CHARTS[name] for name in one.charts) + (f" ({kind})" if kind else ""),
     )
 
 

@@ -49,8 +49,8 @@ def unit_points(measurements: xr.Dataset, correction: xr.Dataset) -> xr.Dataset:
     Dataset
         Along `visit`: unit, lot, measured_at, time (days), visit_number (1 for a unit's first),
         responses, largest_reach, reach_frequency, in_set (whether the set was made from it: then
-        its reach is no sample of what comes, and the deviation of reach is missing). Along
-        `visit, series`: deviation (log for frequency, damping ratio and reach; relative for
+        its reach is no sample of what comes, and the deviation of reach is missing), addition.
+        Along `visit, series`: deviation (log for frequency, damping ratio and reach; relative for
         residues), error_variance (fits and slope), sampling_variance (heads and temperatures not
         measured). Along `series`: mode, quantity, reference_value, unit_variance,
         residual_variance. Attribute ``ordered_by``: "measured_at", or "entry" where a date is
@@ -159,12 +159,14 @@ def _labels(
         name: ("visit", measurements[name].values[first].astype(str))
         for name in ("unit", "lot", "measured_at")
     }
+    additions = measurements["addition"].values
     time = days[first] if dated else np.arange(len(first), dtype=float)
     return xr.Dataset(
         {
             "visit_number": ("visit", np.array([number for number, _ in visits], dtype=int)),
             "responses": ("visit", np.array([len(rows) for _, rows in visits], dtype=int)),
             "time": ("visit", time),
+            "addition": ("visit", np.array([additions[rows].max() for _, rows in visits], int)),
         },
         coords=coords,
     )
