@@ -122,17 +122,24 @@ def with_marks(data: xr.Dataset, results: Sequence[RecordEstimate]) -> xr.Datase
     ).assign_coords(record_check=[check.name for check in CHECKS])
 
 
-def record_sentences(responses: Gridded) -> list[str]:
-    """Return one sentence with advice for every marked record; none where there are no records."""
-    sentences = []
-    for part in datasets(responses):
-        if "record_mark" not in part:
-            continue
+def mark_words(part: xr.Dataset) -> list[tuple[int, str, str, str]]:
+    """Return (place of the response, check, sentence, advice) of every mark of one grid."""
+    found = []
+    if "record_mark" in part:
         for i, k in np.argwhere(part["record_mark"].values):
             check = next(c for c in CHECKS if c.name == str(part["record_check"].values[k]))
             said = check.says.format(float(part["record_value"].values[i, k]))
-            sentences.append(f"{part['response'].values[i]}: {said}; {check.advice}")
-    return sentences
+            found.append((int(i), check.name, said, check.advice))
+    return found
+
+
+def record_sentences(responses: Gridded) -> list[str]:
+    """Return one sentence with advice for every marked record; none where there are no records."""
+    return [
+        f"{part['response'].values[at]}: {said}; {advice}"
+        for part in datasets(responses)
+        for at, _, said, advice in mark_words(part)
+    ]
 
 
 def method_sentences(responses: Gridded) -> list[str]:
