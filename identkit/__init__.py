@@ -5,6 +5,7 @@ from typing import Any
 
 _PUBLIC = {
     "read_responses": "identkit.readers.campaign",
+    "estimate_responses": "identkit.stages.estimate",
     "screen": "identkit.stages.screen",
     "fit_modes": "identkit.stages.fit",
     "pair_modes": "identkit.stages.pair",

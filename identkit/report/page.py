@@ -11,7 +11,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined, select_autoescap
 from identkit.atomic import write_text
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
-from identkit.report import measurement_tables, mode_tables, set_tables
+from identkit.report import measurement_tables, mode_tables, record_tables, set_tables
 from identkit.report.contents import ReportInput
 from identkit.report.gallery import Exhibit, hang, population_modes
 from identkit.report.numbers import counted, number
@@ -154,6 +154,8 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
         "marks": measurement_tables.marks_table(given),
         "skipped": measurement_tables.skipped_table(given),
         "excluded": measurement_tables.excluded_table(given),
+        "estimates": record_tables.estimates_table(given),
+        "record_marks": record_tables.record_marks_table(given),
         "orders": set_tables.order_table(given),
         "audit": set_tables.audit_table(given),
     }
