@@ -59,7 +59,8 @@ def density_centres(
     bandwidth
         Width of the density kernel in log frequency.
     share
-        Smallest share of the responses that a group must appear in.
+        Smallest share of the responses that a group must appear in; two of them at the least,
+        where there are two.
 
     Returns
     -------
@@ -82,7 +83,7 @@ def _group_centres(
 ) -> FloatArray:
     counts = np.bincount(owner, minlength=responses)
     seen = counts[counts > 0]
-    if len(seen) < share * responses:
+    if len(seen) < max(share * responses, min(2, responses)):
         return np.zeros(0)
     tally = np.bincount(seen)
     many = int(np.flatnonzero(tally == tally.max())[-1])

@@ -28,6 +28,7 @@ from identkit.methods.template_estimate import estimate_template
 
 _MOST_ROUNDS = 20
 _MOST_RESPONSES = 2000
+_WIDER = (3.0 * BANDWIDTH, 9.0 * BANDWIDTH)
 _CLEAR = 4.0  # spreads between neighbouring modes that no start can mix up
 
 
@@ -164,11 +165,14 @@ def _revise(
     keep = found_share(table, assigned, modes) >= share
     left = np.isfinite(table.log_frequency) & (assigned == UNPAIRED)
     owner = np.broadcast_to(np.arange(len(left))[:, None], left.shape)[left]
-    head_share = 1.0 / table.heads
-    added = density_centres(
-        table.log_frequency[left], owner, len(left), BANDWIDTH, share * head_share
-    )
-    if keep.all() and added.size == 0:
-        return None
+    position, least = table.log_frequency[left], share / table.heads
+    added = density_centres(position, owner, len(left), BANDWIDTH, least)
+    if keep.all():
+        # A mode that differs much between responses is a group only to a wider kernel.
+        for bandwidth in _WIDER:
+            if added.size == 0:
+                added = density_centres(position, owner, len(left), bandwidth, least)
+        if added.size == 0:
+            return None
     fresh = blank_template(table, added, template.temperature)
     return sort_modes(join_templates(select_modes(template, keep), fresh))

@@ -46,6 +46,27 @@ def test_a_moved_mode(bounded):
     assert all("reach" in item or "radii" in item for item in found)
 
 
+@pytest.mark.parametrize(("change", "fails"), [(5e-5, False), (3e-4, True), (-3e-4, True)])
+def test_a_reach_far_below_one_may_differ_a_little(bounded, change, fails):
+    far = [plant.reach < 0.9 for plant in bounded.plants]
+    assert any(far)
+    plants = tuple(
+        replace(plant, reach=plant.reach * (1.0 + change)) if away else plant
+        for plant, away in zip(bounded.plants, far, strict=True)
+    )
+    assert any(item.endswith("reach") for item in claims(replace(bounded, plants=plants))) == fails
+
+
+def test_a_reach_at_the_bound_may_not(bounded):
+    touching = [plant.reach >= 0.99 for plant in bounded.plants]
+    assert any(touching)
+    plants = tuple(
+        replace(plant, reach=plant.reach * (1.0 - 5e-5)) if near else plant
+        for plant, near in zip(bounded.plants, touching, strict=True)
+    )
+    assert any(item.endswith("reach") for item in claims(replace(bounded, plants=plants)))
+
+
 def test_a_plant_taken_out(bounded):
     found = check_claims(replace(bounded, plants=bounded.plants[1:]))
     assert any(bounded.plants[0].response in str(failure) for failure in found)
