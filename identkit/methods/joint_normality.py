@@ -2,7 +2,7 @@ r"""Whether many correlated quantities of few units can be normal.
 
 Four statistics of the standardised quantities, each against what samples of the same size from a
 normal law of the same correlation give (Monte Carlo test): the mean squared skewness, the mean
-squared departure of kurtosis from that law, and how well two groups explain a leading principal
+squared departure of kurtosis from that law, and how well two groups explain the first principal
 score, and any single quantity. Skewed spreads show in the first two, lots that stand apart in the
 last two.
 
@@ -22,7 +22,6 @@ from identkit.methods.arrays import FloatArray
 
 STATISTICS = ("skewness", "kurtosis", "two groups of units", "two groups in one quantity")
 FEWEST_UNITS = 8
-_LEADING = 3
 _SIMULATED = 999
 
 
@@ -60,7 +59,7 @@ def normality_test(samples: FloatArray, correlation: FloatArray, *, seed: int = 
     Few units hide much: at a dozen only strong skewness or well separated lots are seen. A sample
     that passes is not thereby normal.
     """
-    varies = samples.std(axis=0) > 1e-12 * max(float(np.abs(samples).max(initial=0.0)), 1e-300)
+    varies = samples.std(axis=0) > 1e-12 * np.abs(samples).max(axis=0, initial=1e-300)
     units, quantities = len(samples), int(varies.sum())
     if units < FEWEST_UNITS or quantities == 0:
         return NormalityTest(float("nan"), "")
@@ -96,7 +95,7 @@ def _statistics(
     skewness, kurtosis = moments
     scaled = _standardised(samples)
     _, _, axes = np.linalg.svd(scaled, full_matrices=False)
-    scores = scaled @ np.swapaxes(axes[:, : min(_LEADING, axes.shape[1])], 1, 2)
+    scores = scaled @ np.swapaxes(axes[:, :1], 1, 2)
     return np.stack(
         [
             (skewness**2).mean(axis=1),

@@ -11,7 +11,13 @@ from jinja2 import Environment, PackageLoader, StrictUndefined, select_autoescap
 from identkit.atomic import write_text
 from identkit.figures.style import frequency_label
 from identkit.grids import datasets
-from identkit.report import measurement_tables, mode_tables, record_tables, set_tables
+from identkit.report import (
+    coverage_tables,
+    measurement_tables,
+    mode_tables,
+    record_tables,
+    set_tables,
+)
 from identkit.report.contents import ReportInput
 from identkit.report.gallery import Exhibit, hang, population_modes
 from identkit.report.numbers import counted, number
@@ -145,6 +151,8 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
     names, frequency = population_modes(given)
     found = {
         "claims": set_tables.claims_table(given),
+        "coverage": coverage_tables.coverage_table(given),
+        "coverage_checks": coverage_tables.coverage_checks_table(given),
         "attribution": set_tables.attribution_table(given),
         "worst": set_tables.worst_table(given, names, frequency),
         "population": mode_tables.population_table(given),

@@ -31,7 +31,7 @@ POPULATIONS = ("normal", "skewed", "lot-mixed", "slightly skewed")
 UNITS, SHARE_HELD_OUT, POINTS = 24, 1.0 / 3.0, 250
 BAND = (50.0, 15000.0)
 CONTENT = CONFIDENCE = 0.9
-FRESH = 4000
+FRESH = 2000
 ORDER = 5
 
 FREQUENCY = np.array([1240.0, 3420.0, 6310.0, 10650.0])
@@ -57,7 +57,7 @@ class CampaignOutcome:
     population, seed
         Which campaign.
     true_content
-        Share of 4000 fresh units that the set holds.
+        Share of the fresh units that the set holds.
     exact_content, exact_held, exact_units
         The statement from units held out.
     model_content, model_mean
