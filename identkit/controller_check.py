@@ -26,6 +26,7 @@ from identkit.methods.stability_margins import (
 from identkit.methods.state_space import StateSpace, frequency_response, series
 from identkit.plant_loops import (
     PlantLoops,
+    balanced,
     continuous_image,
     delayed,
     largest_real_part,
@@ -152,7 +153,7 @@ def _closed(
         around = _delay_behind(around, delay, high)
     try:
         poles = close_lower(delayed(nominal, delay, high), control).poles()
-        return poles, close_lower(around, control)
+        return poles, balanced(close_lower(around, control))
     except np.linalg.LinAlgError as error:
         expected = "a loop gain other than -1 at infinite frequency"
         raise InputError(Problem("controller", "a loop not well posed", expected)) from error

@@ -23,7 +23,7 @@ from identkit.methods.state_space import StateSpace, series
 from identkit.plant_set.fields import FittedPlant, Matrices, PlantSetFields
 from identkit.plant_set.peaks import clustered, even_grid, highest
 from identkit.plant_set.reach import Surroundings, folded
-from identkit.plant_set.response import evaluation_points, member_response
+from identkit.plant_set.response import balance, evaluation_points, member_response
 from identkit.plant_set.sample import Member
 from identkit.plant_set.schur import SchurResponse, plant_matrices, plant_poles
 from identkit.plant_set.stacked import stack
@@ -72,6 +72,12 @@ def continuous_image(system: Matrices | StateSpace, period: float) -> StateSpace
     """Return a system as it is, or the bilinear image of a sampled one."""
     plain = StateSpace(system.A, system.B, system.C, system.D)
     return sampled_to_continuous(plain, period) if period > 0.0 else plain
+
+
+def balanced(system: StateSpace) -> StateSpace:
+    """Return a system with its states scaled to rows and columns of A of equal size."""
+    even = balance(Matrices(system.A, system.B, system.C, system.D))
+    return StateSpace(even.A, even.B, even.C, even.D)
 
 
 def largest_real_part(poles: ComplexArray, period: float) -> float:
@@ -204,7 +210,7 @@ def held_plant(plant: Matrices, delay: float, period: float) -> Matrices:
     delay, period
         s.
     """
-    whole, fraction = (float(part) for part in split_delay(np.array([delay]), period))
+    whole, fraction = (float(part.item()) for part in split_delay(np.array([delay]), period))
     now = _step(plant, period - fraction)
     early = _step(plant, fraction)
     drift = now[0] @ early[0]
