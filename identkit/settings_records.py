@@ -68,6 +68,7 @@ class RecordSettings(Table):
     linear_range: Positive | None = Field(
         default=None, description="half the range in which position is linear, above 0"
     )
+    second_opinion: bool = Field(default=False, description="true or false")
     drive_limit: Positive | None = Field(
         default=None, description="the largest drive the amplifier gives, above 0"
     )

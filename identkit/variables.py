@@ -107,6 +107,13 @@ READ = (
         ("direct_bias_over_error?", "number", "1", "Bias of the direct estimate over its error."),
         ("runout?", "number", "output unit", "Repeatable runout taken out, peak to peak."),
     ),
+    Variable("second_opinion", ("response",), "text", "", "What became of it.", True),
+    *_along(
+        ("response", "subspace_mode"),
+        ("subspace_frequency?", "number", "Hz", "A mode found by subspace identification."),
+        ("subspace_damping_ratio?", "number", "1", "Its damping ratio."),
+        ("subspace_frequency_error?", "number", "Hz", "Standard error of its frequency."),
+    ),
     Variable("runout_harmonic", ("frequency",), "flag", "", "Line on a turn harmonic.", True),
     Variable(
         "line_correlation",

@@ -1,11 +1,13 @@
 """Tables of how responses came from time records, and what the records were marked for."""
 
 from identkit.figures.labels import condition_of, natural_key, units_of
+from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.report.contents import ReportInput
 from identkit.report.numbers import listed
 from identkit.report.table import Table, table_of
 from identkit.stages.record_screening import mark_words
+from identkit.stages.second_opinion import disagreements
 
 
 def estimates_table(given: ReportInput) -> Table | None:
@@ -55,3 +57,24 @@ def record_marks_table(given: ReportInput) -> Table | None:
     )
     note = "Marked only: nothing is left out of the bound for these."
     return table_of("Records that deserve a look", columns, rows, note)
+
+
+def second_opinion_table(given: ReportInput) -> Table | None:
+    """Return the modes that subspace identification of the records contradicts; None if none."""
+    if given.modes is None:
+        return None
+    rows = [
+        (name, mode, frequency_label(fitted), frequency_label(other))
+        for name, mode, fitted, other in disagreements(given.responses, given.modes)
+    ]
+    columns = (
+        ("response", "text"),
+        ("mode", "text"),
+        ("fitted", "number"),
+        ("from the record itself", "number"),
+    )
+    note = (
+        "Subspace identification of the time records, with no frequency-domain step, has its "
+        "nearest mode farther off than both errors and half the bandwidth of the resonance."
+    )
+    return table_of("Modes on which the second opinion differs", columns, rows, note)

@@ -25,6 +25,7 @@ from identkit.stages.record_estimate import RecordEstimate, RecordTask, estimate
 from identkit.stages.record_sampling import Filter, PlantModel
 from identkit.stages.record_screening import as_json, with_marks
 from identkit.stages.record_signals import Channels
+from identkit.stages.second_opinion import with_opinions
 
 _POINT = ("response", "output", "input", "frequency")
 _RATE_TOLERANCE = 1e-3
@@ -284,6 +285,8 @@ def _dataset(
         width = float(np.median(np.diff(frequency)))
         on = harmonic_lines(frequency, records.spindle_speed / 60.0, width)
         data["runout_harmonic"] = ("frequency", on)
+    if records.second_opinion:
+        data = with_opinions(data, [result.opinion for result in results])
     return with_marks(data, results)
 
 

@@ -5,7 +5,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from identkit.errors import InputError, Problem
-from identkit.methods.arrays import ComplexArray
+from identkit.methods.arrays import BoolArray, ComplexArray
 from identkit.methods.averaged_spectra import AveragedSpectra, SpectrumAverager
 from identkit.methods.direct_bias import DirectBias, direct_bias
 from identkit.methods.direct_response import input_noise_response, output_noise_response
@@ -15,6 +15,7 @@ from identkit.methods.local_polynomial import local_polynomial_response
 from identkit.methods.multisine_average import excited_lines, periodic_lines, periodic_response
 from identkit.methods.periodicity import excitation_period, settled_period
 from identkit.methods.stepped_sine import dwells, sine_phasors
+from identkit.methods.subspace_opinion import SubspaceModes, subspace_modes
 from identkit.readers.records import RecordFile
 from identkit.settings_records import RecordSettings
 from identkit.stages.record_sampling import Filter, PlantEstimate, PlantModel, plant_estimate
@@ -57,6 +58,8 @@ class RecordEstimate:
         Share of segments or periods left out for dropouts and excursions.
     runout
         Repeatable runout taken out, peak to peak.
+    opinion
+        Modes found in the first record without a frequency-domain step, or why there are none.
     problems
         What is wrong with the records.
     """
@@ -69,6 +72,7 @@ class RecordEstimate:
     left_out: float = 0.0
     runout: float = 0.0
     plant: PlantEstimate | None = None
+    opinion: SubspaceModes | str = "not asked for"
     problems: tuple[Problem, ...] = ()
 
 
@@ -80,12 +84,35 @@ def estimate_record(task: RecordTask) -> RecordEstimate:
         found = _Estimator(task).run()
         assert found.estimate is not None
         plant = plant_estimate(found.estimate, task.options, task.model, task.anti_alias)
-        return replace(found, plant=plant)
+        return replace(found, plant=plant, opinion=_second_opinion(task))
     except InputError as error:
         return RecordEstimate(None, "", "", Tally(), problems=error.problems)
     except (ValueError, np.linalg.LinAlgError) as error:
         problem = Problem(task.files[0].place, *_two_parts(str(error)))
         return RecordEstimate(None, "", "", Tally(), problems=(problem,))
+
+
+def _second_opinion(task: RecordTask) -> SubspaceModes | str:
+    if not task.options.second_opinion:
+        return "not asked for"
+    signals = Signals(task.files[0], task.options)
+    places = signals.channels
+    if len(places.inputs) != 1 or len(places.outputs) != 1:
+        return "made for one drive and one position only"
+    record = np.concatenate(list(signals.chunks()), axis=1)
+    pair = record[[places.inputs[0], places.outputs[0]]]
+    whole = pair[:, _longest_whole(np.isfinite(pair).all(axis=0))]
+    return subspace_modes(whole[0], whole[1], task.options.sample_period)
+
+
+def _longest_whole(good: BoolArray) -> slice:
+    """Return the longest stretch without a gap."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], good, [False]]).astype(int)))
+    starts, stops = edges[::2], edges[1::2]
+    if starts.size == 0:
+        return slice(0, 0)
+    longest = int(np.argmax(stops - starts))
+    return slice(int(starts[longest]), int(stops[longest]))
 
 
 def _two_parts(message: str) -> tuple[str, str]:

@@ -4,7 +4,11 @@ from dataclasses import replace
 
 import numpy as np
 
-from identkit.report.record_tables import estimates_table, record_marks_table
+from identkit.report.record_tables import (
+    estimates_table,
+    record_marks_table,
+    second_opinion_table,
+)
 from identkit.stages.record_screening import CHECKS
 
 
@@ -42,3 +46,23 @@ def test_marks_say_what_happened_and_what_to_try(given):
 def test_without_records_there_are_no_such_tables(given):
     assert estimates_table(given) is None
     assert record_marks_table(given) is None
+    assert second_opinion_table(given) is None
+
+
+def test_a_mode_the_record_contradicts_is_listed(given):
+    modes = given.modes
+    frequency = modes["modal_frequency"].values.copy()
+    for row in frequency:
+        row[~np.isfinite(row)] = 1.0
+    frequency[3, 1] *= 1.07
+    damping = np.full(frequency.shape, 0.01)
+    dims = ("response", "subspace_mode")
+    responses = given.responses.assign(
+        subspace_frequency=(dims, frequency),
+        subspace_damping_ratio=(dims, damping),
+        subspace_frequency_error=(dims, np.full(frequency.shape, 0.1)),
+    )
+    table = second_opinion_table(replace(given, responses=responses))
+    assert [row[:2] for row in table.rows] == [
+        (str(modes["response"].values[3]), str(modes["mode"].values[1]))
+    ]
