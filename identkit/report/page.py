@@ -164,6 +164,7 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
         "excluded": measurement_tables.excluded_table(given),
         "estimates": record_tables.estimates_table(given),
         "record_marks": record_tables.record_marks_table(given),
+        "second_opinion": record_tables.second_opinion_table(given),
         "orders": set_tables.order_table(given),
         "audit": set_tables.audit_table(given),
     }
