@@ -23,7 +23,13 @@ from identkit.methods.state_space import StateSpace, series
 from identkit.plant_set.fields import FittedPlant, Matrices, PlantSetFields
 from identkit.plant_set.peaks import clustered, even_grid, highest
 from identkit.plant_set.reach import Surroundings, folded
-from identkit.plant_set.response import balance, evaluation_points, member_response
+from identkit.plant_set.response import (
+    balance,
+    block_diagonal,
+    delay_factor,
+    evaluation_points,
+    upper_lft,
+)
 from identkit.plant_set.sample import Member
 from identkit.plant_set.schur import SchurResponse, plant_matrices, plant_poles
 from identkit.plant_set.stacked import stack
@@ -283,9 +289,7 @@ def virtual_loops(
     found = [_member_poles(member, control, period, delay, around.band[1]) for member in members]
     grid = np.unique(np.concatenate([around.common_grid, even_grid(around.band)]))
     controlled = respond(grid)
-    loops = np.array(
-        [member_response(contents, grid, member.delta)[0, 0] * controlled for member in members]
-    )
+    loops = _member_responses(contents, members, grid) * controlled
     distance = _distance(loops)
     best = distance.argmin(axis=1)
     stable = np.array([is_stable(poles) for poles in found])
@@ -297,6 +301,21 @@ def virtual_loops(
         distance[np.arange(len(members)), best],
         grid[best],
     )
+
+
+def _member_responses(
+    contents: PlantSetFields, members: Sequence[Member], frequency: FloatArray
+) -> ComplexArray:
+    """Return (members, points) responses; what stands around the blocks is evaluated once."""
+    points = evaluation_points(frequency, contents.time.period)
+    around = SchurResponse(contents.interconnection)(points)
+    late = delay_factor(frequency, contents.nominal.delay)
+    rows = []
+    for member in members:
+        blocks = [np.moveaxis(SchurResponse(block)(points), 0, -1) for block in member.delta]
+        delta = np.moveaxis(block_diagonal(blocks), -1, 0)
+        rows.append(upper_lft(around, delta)[:, 0, 0] * late)
+    return np.array(rows)
 
 
 def _member_poles(

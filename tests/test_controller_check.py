@@ -12,7 +12,7 @@ from identkit.errors import InputError
 from identkit.methods.bounded_real_norm import band_norm
 from identkit.methods.feedback import bent, close_lower
 from identkit.methods.state_space import StateSpace
-from identkit.plant_loops import held_plant, listed_loops
+from identkit.plant_loops import held_plant, listed_loops, virtual_loops
 from identkit.plant_set import fields as f
 from identkit.plant_set.interconnection import output_multiplicative
 from identkit.plant_set.model import PlantSet
@@ -58,6 +58,22 @@ def test_the_loop_the_block_sees_is_minus_w_t(small_set):
     expected = np.abs(weight * loop / (1 + loop))
     np.testing.assert_allclose(size_at(check.seen, GRID), expected, rtol=1e-7)
     assert check.robust.peak >= expected.max() * (1 - 1e-9)
+
+
+def test_virtual_loops_are_those_of_the_drawn_members(small_set):
+    controller = shaped(small_set, 250.0)
+    members = small_set.sample(6, seed=2)
+    found = virtual_loops(small_set, controller, members)
+    system = controller.system
+    k = control.ss(system.A, system.B, system.C, system.D)
+    for row, member in enumerate(members):
+        at = np.array([found.frequency[row]])
+        loop = member.frequency_response(at)[0, 0] * respond(system, at)
+        assert found.modulus[row] == pytest.approx(abs(1 + loop[0]), rel=1e-9)
+        m = member.state_space()
+        poles = control.feedback(control.ss(m.A, m.B, m.C, m.D) * k, 1).poles()
+        assert found.stable[row] == (poles.real.max() < 0.0)
+        assert found.decay[row] == pytest.approx(poles.real.max(), rel=1e-4)
 
 
 def test_a_slow_loop_holds_and_a_fast_one_does_not(small_set):
