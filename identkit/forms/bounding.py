@@ -104,6 +104,7 @@ def bound_plants(
     common: CommonPart,
     frequency: FloatArray,
     options: BoundOptions,
+    names: Sequence[str] = (),
 ) -> SpreadBound:
     """Return the tightest weight over the band of `common`, certified between the points.
 
@@ -117,6 +118,8 @@ def bound_plants(
         (points,) Hz to begin with, inside the band.
     options
         Order, profile, cap, floor.
+    names
+        What to call the plants in messages; their numbers from 1 where empty.
 
     Raises
     ------
@@ -125,7 +128,7 @@ def bound_plants(
     InputError
         If a plant's delay is too long for a rational stand-in over the band.
     """
-    return _Bounding(plants, common, frequency, options).run()
+    return _Bounding(plants, common, frequency, options, names).run()
 
 
 class _Bounding:
@@ -137,7 +140,9 @@ class _Bounding:
         common: CommonPart,
         frequency: FloatArray,
         options: BoundOptions,
+        names: Sequence[str],
     ) -> None:
+        self.names = names or [f"plant {k + 1}" for k in range(len(plants))]
         self.plants, self.common, self.options = plants, common, options
         self.order_given = None if options.order == "auto" else int(options.order)
         self.comparisons = self.each(self._comparison, range(len(plants)))
@@ -179,7 +184,7 @@ class _Bounding:
             return PlantComparison(self.plants[k], self.common)
         except ValueError as error:
             expected = "a delay short enough over the band; lower its upper end"
-            raise InputError(Problem(f"plant {k}", str(error), expected)) from error
+            raise InputError(Problem(self.names[k], str(error), expected)) from error
 
     def _curve_at(self, frequency: FloatArray) -> RadiusCurve:
         def of_block(rows: range) -> RadiusCurve:

@@ -92,7 +92,8 @@ def bound_spread(
     options = BoundOptions(order, tuple(profile), tuple(cap), radius_floor, jobs)
     # Many small matrices: threads inside the linear algebra would only wait for each other.
     with threadpool_limits(limits=1):
-        found = bound_plants(plants.parameters, common, nominal["frequency"].values, options)
+        lines = nominal["frequency"].values
+        found = bound_plants(plants.parameters, common, lines, options, plants.names)
     return xr.merge(
         [
             _curves(found, plants, options),

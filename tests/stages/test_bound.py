@@ -80,6 +80,15 @@ def test_who_counts_and_why_not(bound: xr.Dataset) -> None:
     assert (bound.attrs["held"], bound.attrs["of"]) == (9, 12)
 
 
+def test_a_delay_too_long_to_bound_is_told_by_the_name_of_the_response() -> None:
+    late = replace(plant(), delay=1e-3)
+    modes = modes_dataset([plant(), late])
+    names = modes["response"].values.astype(str)
+    nominal = choose_nominal(modes, population_dataset(plant()), lines=LINES)
+    with pytest.raises(InputError, match=f"^{names[1]}: found a delay of"):
+        bound_spread(modes, nominal, order=2)
+
+
 def test_extra_mode_sets_the_bound_where_it_stands(bound: xr.Dataset) -> None:
     at = int(np.argmin(np.abs(bound["frequency"].values - 15e3)))
     assert bound["radius_setter"].values[at] == "r09"
