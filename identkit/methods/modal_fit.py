@@ -20,6 +20,8 @@ from scipy.stats import chi2
 
 from identkit.errors import InputError, Problem
 from identkit.methods.arrays import ComplexArray, FloatArray
+from identkit.methods.delay_minima import best_delay
+from identkit.methods.long_delay import long_delay
 from identkit.methods.modal_least_squares import (
     ModalFit,
     as_fit,
@@ -36,6 +38,12 @@ from identkit.methods.starting_poles import starting_point
 from identkit.outcomes import Outcome
 
 LIKELIHOOD_RATIO_LEVEL = 1e-3
+VARIANCE_PASSES, VARIANCE_SETTLED = 6, 0.05
+POOR = 2.0
+"""Noise ratio above which a fit may sit in the wrong minimum over the delay."""
+LEFT = 0.1
+"""Share of the response left unexplained above which trial delays are worth whole fits."""
+HELD_DELAYS = (0.0, 6.0, 12.0, 18.0, 24.0, 30.0)
 RESIDUES = ("real", "general", "auto")
 
 Measured: TypeAlias = tuple[FloatArray, ComplexArray, FloatArray]
@@ -97,14 +105,69 @@ def fit_modal_model(
     if refused is not None:
         return empty_fit(request.shape(0), refused, int(use.sum()), variance is None)
     frequency, response = frequency[use], response[use]
+    turn = long_delay(frequency, response) if delay else 0.0
+    response = response * np.exp(2j * np.pi * frequency * turn)
     spread = start_variance(frequency, response) if variance is None else variance[use]
     data = (frequency, response, spread)
-    if residues == "auto":
-        solution = _fit_either(data, request, variance is None)
-    else:
-        solution = _fit(data, request, variance is None)
+    either = residues == "auto"
+    solution = _causal(_fitted(data, request, variance is None, either), request, turn)
     capped = number is None and solution.shape.modes >= mode_cap(frequency.size)
-    return as_fit(solution, variance is None, Outcome.MODE_LIMIT if capped else Outcome.DONE)
+    fit = as_fit(solution, variance is None, Outcome.MODE_LIMIT if capped else Outcome.DONE)
+    return _delayed(fit, turn)
+
+
+def _fitted(measured: Measured, request: Request, estimated: bool, either: bool) -> Solution:
+    """Fit; where residuals stay above the variance, look at the other minima over the delay."""
+    solution = (_fit_either if either else _fit)(measured, request, estimated)
+    if not request.delay or not (estimated or _noise(solution) > POOR):
+        return solution
+    best = best_delay(solution)
+    if _left(best) > LEFT:
+        best = min([best, *_from_held_delays(best, request)], key=lambda one: one.cost)
+    if best is solution:
+        return solution
+    return settle(best, replace(request, general=best.shape.general), 1.0)
+
+
+def _from_held_delays(poor: Solution, request: Request) -> list[Solution]:
+    """Fit with the delay held at trial values, then set it free: poles cannot absorb a turn."""
+    data, found = poor.problem.data, []
+    held = replace(request, delay=False, general=poor.shape.general)
+    for delay in HELD_DELAYS:
+        turned = replace(data, target=data.target * np.exp(1j * delay * data.x))
+        start, modes, _ = starting_point(turned, held)
+        fixed = solve(ModalProblem(turned, held.shape(modes)), start)
+        fixed = settle(fixed, held, _noise(poor))
+        free = ModalProblem(data, replace(fixed.shape, delay=True))
+        found.append(solve(free, replace(fixed.poles, delay=delay)))
+    return found
+
+
+def _left(solution: Solution) -> float:
+    """Return the share of the weighted response that the model does not explain."""
+    return solution.cost / float(np.sum(np.abs(solution.problem.data.target) ** 2))
+
+
+def _noise(solution: Solution) -> float:
+    freedom = 2 * solution.problem.data.x.size - solution.shape.parameters
+    return solution.cost / max(freedom, 1)
+
+
+def _causal(solution: Solution, request: Request, turn: float) -> Solution:
+    """Hold a delay that came out negative at zero: a plant does not answer before it is asked."""
+    data = solution.problem.data
+    if not request.delay or solution.poles.delay + turn * data.reference >= 0.0:
+        return solution
+    if turn > 0.0:
+        return solution
+    shape = replace(solution.shape, delay=False)
+    held = solve(ModalProblem(data, shape), replace(solution.poles, delay=0.0))
+    return settle(held, replace(request, delay=False, general=shape.general), 1.0)
+
+
+def _delayed(fit: ModalFit, turn: float) -> ModalFit:
+    parameters = replace(fit.parameters, delay=fit.parameters.delay + turn)
+    return replace(fit, parameters=parameters)
 
 
 def _check(
@@ -146,11 +209,14 @@ def _settled(
 ) -> Solution:
     frequency, response, variance = measured
     solution = settle(solution, request, scale)
-    for _ in range(2 if estimated else 1):
+    for _ in range(VARIANCE_PASSES if estimated else 1):
+        before = variance
         variance = updated_variance(solution, response, variance, estimated)
         data = scale_data(frequency, response, variance)
         again = solve(ModalProblem(data, solution.shape), solution.poles)
         solution = settle(again, request, 1.0 if estimated else scale)
+        if np.max(np.abs(np.log(variance / before))) < VARIANCE_SETTLED:
+            break
     return solution
 
 

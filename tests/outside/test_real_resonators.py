@@ -94,7 +94,13 @@ def test_modal_fit_gives_resonance_and_loaded_q(name):
     assert np.isnan(fit.noise_ratio)
 
 
-@pytest.mark.parametrize("name", NAMES)
+EIGHT_POINTS = pytest.mark.xfail(
+    strict=True, reason="eight points cannot tell a delay from damping: 3.9e-5 in frequency"
+)
+CLOSER = [pytest.param(name, marks=EIGHT_POINTS) if name == "36mm_2GHz" else name for name in NAMES]
+
+
+@pytest.mark.parametrize("name", CLOSER)
 def test_closer_window_brings_the_methods_closer(name):
     """MAT 58, page 21: repeat the fit over a span of twice resonance over loaded Q."""
     frequency, response = measured(name)
