@@ -5,6 +5,8 @@ import json
 from identkit.errors import InputError, Problem
 from identkit.settings import HistorySettings, Settings
 
+SCALAR_FORMS = ("multiplicative", "input-multiplicative", "additive", "inverse-multiplicative")
+
 
 def refuse_unavailable(settings: Settings) -> None:
     """Refuse what the schema knows but this version cannot do yet; nothing is silently ignored.
@@ -33,7 +35,7 @@ def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
         _row("[responses] sample_period", responses.sample_period, 0.0),
         _row("[model] sharing", model.sharing, "auto", "none"),
         _row("[nominal] choice", nominal.choice, "centre", "tightest"),
-        _row("[bound] form", bound.form, "multiplicative", "additive"),
+        _row("[bound] form", bound.form, *SCALAR_FORMS),
         _row("[bound] remove", list(bound.remove), []),
         _row("[bound] holds", bound.holds, "measured"),
         _row("[bound] factors", bound.factors, "auto"),

@@ -52,7 +52,7 @@ def small_results(tmp_path_factory):
 
 @pytest.fixture(scope="session")
 def results_in_form(small_results, tmp_path_factory):
-    """Return the results folder of the small campaign bounded in a form, report and all."""
+    """Return the results folder of the small campaign bounded in a form."""
     known = {}
 
     def run(form):

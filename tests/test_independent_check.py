@@ -13,7 +13,7 @@ import pytest
 from scipy.optimize import linprog, minimize_scalar
 
 ROUNDING = 1e-6
-FORMS = ("multiplicative", "additive")
+FORMS = ("multiplicative", "additive", "input-multiplicative", "inverse-multiplicative")
 LISTED_AT_MOST = 200
 
 
@@ -79,7 +79,9 @@ class Checker:
         nominal, own = self.nominal(s), modal(plant, s)
         if self.file["form"] == "additive":  # P = P0 + W Delta
             return np.abs(own - nominal)
-        return np.abs(own / nominal - 1.0)  # P = (1 + W Delta) P0
+        if self.file["form"] == "inverse-multiplicative":  # P = P0 / (1 + W Delta)
+            return np.abs(nominal / own - 1.0)
+        return np.abs(own / nominal - 1.0)  # P = (1 + W Delta) P0, or P0 (1 + W Delta)
 
     def floor(self):
         """Smallest radius: absolute for relative errors, a share of |P0| for absolute ones."""
@@ -99,6 +101,7 @@ class Checker:
         self.check_weight()
         self.check_radii()
         self.check_reach()
+        self.check_turns()
         self.check_interconnection()
         self.check_optimality()
         return self.failures
@@ -148,6 +151,19 @@ class Checker:
             )
             self.expect(value <= 1 + tolerance or name in excluded, f"reach: {name} is held")
 
+    def check_turns(self):
+        """P0/P makes no turn around zero: else an inverse set of norm 1 proves nothing."""
+        if self.file["form"] != "inverse-multiplicative":
+            return
+        excluded = {item["label"] for item in self.file["certificate"]["measured"]["excluded"]}
+        s = 2j * np.pi * np.geomspace(*self.file["band"], 200_000)
+        nominal = self.nominal(s)
+        for plant in self.file["plants"]:
+            jumps = np.diff(np.angle(nominal / modal(plant, s)))
+            turned = np.sum(jumps < -np.pi) != np.sum(jumps > np.pi)
+            name = plant["response"]
+            self.expect(not turned or name in excluded, f"turns: {name}")
+
     def reach(self, plant):
         """Largest error over weight: a grid that knows the modes, then Brent at every maximum."""
         low, high = self.file["band"]
@@ -195,6 +211,8 @@ class Checker:
 
     def member(self, s, delta):
         nominal, error = rational(self.file["nominal"], s), self.weight(s) * delta
+        if self.file["form"] == "inverse-multiplicative":
+            return nominal / (1 + error)
         return nominal + error if self.file["form"] == "additive" else nominal * (1 + error)
 
     def conditions(self):
@@ -342,6 +360,13 @@ def scaled_weight(document, factor):
     return changed
 
 
+def scale_block_input(document, factor):
+    """Scale what Delta sends into the interconnection: the weight on its left."""
+    for name in "BD":
+        for row in document["interconnection"][name]:
+            row[0] *= factor
+
+
 def test_a_weight_scaled_by_99_percent_is_refused(document):
     found = failures(scaled_weight(document, 0.99))
     assert "weight: covers every radius" in found
@@ -351,12 +376,7 @@ def test_a_weight_scaled_by_99_percent_is_refused(document):
 def test_a_weight_scaled_everywhere_in_the_file_is_still_refused(document):
     """Interconnection, magnitudes and stored reach made to fit: only the physics is left."""
     changed = scaled_weight(document, 0.99)
-    states = len(document["nominal"]["A"])
-    around = changed["interconnection"]
-    for row in range(1, 2):
-        for column in range(states, states + len(document["weights"]["left"]["A"])):
-            around["C"][row][column] *= 0.99
-        around["D"][row][0] *= 0.99
+    scale_block_input(changed, 0.99)
     changed["radii"]["weight_magnitude"] = [
         0.99 * value for value in changed["radii"]["weight_magnitude"]
     ]
@@ -416,11 +436,7 @@ def test_a_loose_weight_with_a_claimed_gap_of_nothing_is_refused(document):
     """Everything made consistent with a weight 10 % too large, but the floor is not a floor."""
     changed = scaled_weight(document, 1.1)
     more = 20 * np.log10(1.1)
-    states = len(document["nominal"]["A"])
-    around = changed["interconnection"]
-    for column in range(states, states + len(document["weights"]["left"]["A"])):
-        around["C"][1][column] *= 1.1
-    around["D"][1][0] *= 1.1
+    scale_block_input(changed, 1.1)
     changed["radii"]["weight_magnitude"] = [1.1 * v for v in changed["radii"]["weight_magnitude"]]
     for plant in changed["plants"]:
         plant["reach"]["value"] /= 1.1

@@ -2,10 +2,15 @@
 
 from identkit.errors import InputError, Problem
 from identkit.forms.additive import ADDITIVE
+from identkit.forms.input_multiplicative import INPUT_MULTIPLICATIVE
+from identkit.forms.inverse_multiplicative import INVERSE_MULTIPLICATIVE
 from identkit.forms.multiplicative import MULTIPLICATIVE
 from identkit.forms.scalar_form import ScalarForm
 
-FORMS: dict[str, ScalarForm] = {form.name: form for form in (MULTIPLICATIVE, ADDITIVE)}
+FORMS: dict[str, ScalarForm] = {
+    form.name: form
+    for form in (MULTIPLICATIVE, INPUT_MULTIPLICATIVE, ADDITIVE, INVERSE_MULTIPLICATIVE)
+}
 
 
 def form_named(name: str) -> ScalarForm:

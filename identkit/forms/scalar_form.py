@@ -49,7 +49,7 @@ class ScalarForm(ABC):
 
     name: ClassVar[str]
     counts_turns: ClassVar[bool] = False
-    """Whether plant over nominal must not turn around zero for a plant to be a member."""
+    """Whether a member's response must not turn around zero beside the nominal's."""
 
     def accepts(self, outputs: int, inputs: int, base: str) -> None:
         """Refuse plants that the form cannot describe.

@@ -52,7 +52,11 @@ def _settled(zero: complex, parameters: ModalParameters) -> complex:
         return zero
     at = zero
     for _ in range(NEWTON_STEPS):
-        value, slope = _value_and_slope(np.array([at]), parameters)
+        # A zero that cancels a pole exactly has no value to settle by.
+        with np.errstate(divide="ignore", invalid="ignore"):
+            value, slope = _value_and_slope(np.array([at]), parameters)
+        if not np.isfinite(value[0]) or not np.isfinite(slope[0]):
+            return zero
         if slope[0] == 0.0 or abs(value[0]) > 0.01 * abs(slope[0] * at):
             return zero
         at = at - complex(value[0] / slope[0])

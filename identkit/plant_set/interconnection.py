@@ -75,6 +75,60 @@ def additive(nominal: Matrices, left: Matrices, right: Matrices) -> Interconnect
     return Interconnection(drift, driven, seen, feed, blocks=(block,))
 
 
+def input_multiplicative(nominal: Matrices, left: Matrices, right: Matrices) -> Interconnection:
+    """Return the interconnection of P0 (I + L Delta R): z = R u, y = P0 (u + L w).
+
+    Parameters
+    ----------
+    nominal
+        P0, outputs x inputs.
+    left, right
+        L (inputs x rows of Delta) and R (columns of Delta x inputs).
+    """
+    n, w, r = nominal.states, left.states, right.states
+    rows, columns = left.D.shape[1], right.D.shape[0]
+    outputs, inputs = nominal.D.shape
+    drift = _diagonal3(nominal.A, left.A, right.A)
+    drift[:n, n : n + w] = nominal.B @ left.C
+    driven = np.zeros((n + w + r, rows + inputs))
+    driven[:n, :rows], driven[n : n + w, :rows] = nominal.B @ left.D, left.B
+    driven[:n, rows:], driven[n + w :, rows:] = nominal.B, right.B
+    seen = np.zeros((columns + outputs, n + w + r))
+    seen[:columns, n + w :] = right.C
+    seen[columns:, :n], seen[columns:, n : n + w] = nominal.C, nominal.D @ left.C
+    feed = np.zeros((columns + outputs, rows + inputs))
+    feed[:columns, rows:] = right.D
+    feed[columns:, :rows], feed[columns:, rows:] = nominal.D @ left.D, nominal.D
+    block = Block("complex-full", rows, columns)
+    return Interconnection(drift, driven, seen, feed, blocks=(block,))
+
+
+def inverse_multiplicative(nominal: Matrices, left: Matrices, right: Matrices) -> Interconnection:
+    """Return the interconnection of (I + L Delta R)^-1 P0: y = P0 u - L w, z = R y.
+
+    Parameters
+    ----------
+    nominal
+        P0, as many outputs as inputs.
+    left, right
+        L (outputs x rows of Delta) and R (columns of Delta x outputs).
+    """
+    n, w, r = nominal.states, left.states, right.states
+    rows, columns = left.D.shape[1], right.D.shape[0]
+    drift = _diagonal3(nominal.A, left.A, right.A)
+    position = np.hstack([nominal.C, -left.C, np.zeros((nominal.D.shape[0], r))])
+    direct = np.hstack([-left.D, nominal.D])
+    drift[n + w :] += right.B @ position
+    driven = np.zeros((n + w + r, direct.shape[1]))
+    driven[:n, rows:], driven[n : n + w, :rows] = nominal.B, left.B
+    driven[n + w :] = right.B @ direct
+    seen = np.vstack([right.D @ position, position])
+    seen[:columns, n + w :] += right.C
+    feed = np.vstack([right.D @ direct, direct])
+    block = Block("complex-full", rows, columns)
+    return Interconnection(drift, driven, seen, feed, blocks=(block,))
+
+
 def _diagonal3(first: FloatArray, second: FloatArray, third: FloatArray) -> FloatArray:
     sizes = [part.shape[0] for part in (first, second, third)]
     whole = np.zeros((sum(sizes), sum(sizes)))

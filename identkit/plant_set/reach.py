@@ -2,7 +2,8 @@
 
 The reach of a plant is the smallest scaling of the set that holds it: the supremum over the band of
 the least norm of Delta (`pointwise`), infinite where the plant has another number of unstable poles
-than the nominal (J. C. Doyle and G. Stein, IEEE Trans. Automat. Contr. 26(1), 1981). Nothing here
+than the nominal (J. C. Doyle and G. Stein, IEEE Trans. Automat. Contr. 26(1), 1981) or, in the
+inverse form, turns around zero beside it. Nothing here
 is shared with the code that builds sets: the supremum is searched on adaptive grids (`peaks`), not
 by level tests.
 """
@@ -14,6 +15,7 @@ import numpy as np
 
 from identkit.errors import InputError, Problem
 from identkit.plant_set.fields import (
+    BoolArray,
     ComplexArray,
     FittedPlant,
     FloatArray,
@@ -74,6 +76,8 @@ def reach_of_plants(contents: PlantSetFields, plants: Sequence[FittedPlant]) -> 
         alike = np.array(
             [count_unstable(plant_poles(plant), around.rest) == unstable for plant in some]
         )
+        if contents.form == "inverse-multiplicative" and contents.is_scalar:
+            alike &= ~_turning(around, some)
         pieces.append((np.where(alike, value, np.inf), frequency))
     if not pieces:
         return Reach(np.zeros(0), np.zeros(0))
@@ -192,6 +196,24 @@ def _reach_of_some(
     order = np.argsort(grid, axis=1, kind="stable")
     grid, values = (np.take_along_axis(part, order, axis=1) for part in (grid, values))
     return highest(grid, values, _evaluator(around, stacked))
+
+
+def _turning(around: Surroundings, plants: Sequence[FittedPlant]) -> BoolArray:
+    """Tell which scalar plants turn around zero beside the nominal: no members of an inverse form.
+
+    1 + W Delta = P0/P must not encircle zero, or |W S| < 1 would prove nothing; it cannot where
+    |W Delta| < 1. Phases are followed over grids clustered at every pole and zero.
+    """
+    stacked = stack(plants)
+    own = clustered(_own_features(plants, around.band, around.period), around.band)
+    found = np.zeros(len(plants), dtype=bool)
+    for row in range(len(plants)):
+        grid = np.unique(np.concatenate([around.common_grid, own[row]]))
+        plant = stacked.response(np.array([row]), grid[None], around.period)[0, :, 0, 0]
+        phase = np.angle(around.at(grid)[0][:, 0, 0] / plant)
+        jumps = np.diff(phase)
+        found[row] = np.sum(jumps < -np.pi) != np.sum(jumps > np.pi)
+    return found
 
 
 def _evaluator(around: Surroundings, stacked: StackedPlants) -> Evaluate:

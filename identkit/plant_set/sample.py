@@ -20,6 +20,7 @@ from identkit.plant_set.fields import (
 from identkit.plant_set.response import TWO_PI, member_response
 
 _GAIN_ONE_SHARE = 0.5
+_ON_AXIS = 1e-6
 
 
 @dataclass(frozen=True, eq=False)
@@ -49,7 +50,31 @@ class Member:
 def draw_members(contents: PlantSetFields, n: int, seed: int = 0) -> list[Member]:
     """Draw `n` members; every block is drawn afresh, one real factor moves all its repetitions."""
     generator = np.random.default_rng(seed)
-    return [Member(contents, _draw_delta(contents, generator)) for _ in range(n)]
+    drawn = [Member(contents, _draw_delta(contents, generator)) for _ in range(n)]
+    return [_made_member(each) for each in drawn]
+
+
+def _made_member(drawn: Member) -> Member:
+    """Halve Delta until the plant has as many unstable poles as the nominal.
+
+    In the inverse form a stable Delta can move poles across the axis where |W| > 1; Delta = 0 never
+    does.
+    """
+    contents = drawn.contents
+    if contents.form != "inverse-multiplicative":
+        return drawn
+    expected = _unstable(contents.nominal.A, contents.time)
+    while _unstable(drawn.state_space().A, contents.time) != expected:
+        halved = [Matrices(d.A, d.B, 0.5 * d.C, 0.5 * d.D) for d in drawn.delta]
+        drawn = Member(contents, tuple(halved))
+    return drawn
+
+
+def _unstable(drift: FloatArray, time: TimeBase) -> int:
+    poles = np.linalg.eigvals(drift)
+    if time.domain == "sampled":
+        return int(np.sum(np.abs(poles) > 1.0 + _ON_AXIS))
+    return int(np.sum(poles.real > _ON_AXIS * np.abs(poles) + _ON_AXIS))
 
 
 def _draw_delta(contents: PlantSetFields, generator: np.random.Generator) -> tuple[Matrices, ...]:

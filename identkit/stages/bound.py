@@ -12,7 +12,11 @@ from identkit.forms.catalogue import form_named
 from identkit.forms.comparison import CommonPart
 from identkit.forms.multiplicative import NAME
 from identkit.forms.radius_curve import interpolated
-from identkit.methods.modal_model import ModalParameters
+from identkit.methods.arrays import FloatArray
+from identkit.methods.modal_model import TWO_PI, ModalParameters
+from identkit.methods.modal_transfer import modal_zeros
+from identkit.methods.resonance_grid import resonance_grid
+from identkit.methods.winding_number import turns_around_zero
 from identkit.stages.attribution import attribution_table, nearest_modes
 from identkit.stages.fitted_plants import FittedPlants, fitted_plants
 from identkit.stages.nominal import nominal_plant
@@ -48,7 +52,8 @@ def bound_spread(
     nominal
         As `choose_nominal` wrote it.
     form
-        "multiplicative": P = P0 (1 + W Delta); "additive": P = P0 + W Delta.
+        "multiplicative" and "input-multiplicative": P = P0 (1 + W Delta); "additive":
+        P = P0 + W Delta; "inverse-multiplicative": P = P0 / (1 + W Delta).
     order
         "auto", or the order of the weight.
     profile
@@ -88,12 +93,13 @@ def bound_spread(
     centre = nominal_plant(nominal)
     band = nominal.attrs["band"]
     common = CommonPart(centre, float(band[0]), float(band[1]), chosen)
-    plants = _counted(fitted_plants(modes).without(left_out or {}), centre.parameters)
+    known = fitted_plants(modes).without(left_out or {})
+    frequency = _points(known, nominal["frequency"].values, common)
+    plants = _counted(known, frequency, common)
     options = BoundOptions(order, tuple(profile), tuple(cap), radius_floor, jobs)
     # Many small matrices: threads inside the linear algebra would only wait for each other.
     with threadpool_limits(limits=1):
-        lines = nominal["frequency"].values
-        found = bound_plants(plants.parameters, common, lines, options, plants.names)
+        found = bound_plants(plants.parameters, common, frequency, options, plants.names)
     return xr.merge(
         [
             _curves(found, plants, options),
@@ -117,18 +123,39 @@ def _method(found: SpreadBound) -> str:
     return f"{METHOD}; {searched} of them on a fine grid instead" if searched else METHOD
 
 
-def _counted(plants: FittedPlants, nominal: ModalParameters) -> FittedPlants:
-    """Take out plants no set around this nominal can hold: other numbers of unstable poles."""
-    expected = unstable_poles(nominal)
+def _points(plants: FittedPlants, grid: FloatArray, common: CommonPart) -> FloatArray:
+    """Return the points to begin with: for inverse errors dense at the zeros of plants as well."""
+    if not common.form.counts_turns:
+        return grid
+    zeros = np.concatenate([modal_zeros(plant) for plant in plants.parameters])
+    zeros = zeros[(zeros != 0.0) & (np.abs(zeros) < 4.0 * TWO_PI * common.high)]
+    size = np.abs(zeros)
+    return resonance_grid(common.low, common.high, size / TWO_PI, zeros.real / size, grid)
+
+
+def _counted(plants: FittedPlants, frequency: FloatArray, common: CommonPart) -> FittedPlants:
+    """Take out plants that no set of this form around this nominal can hold."""
     reasons = {
-        name: f"{unstable_poles(plant)} unstable poles, the nominal has {expected}"
+        name: reason
         for name, plant in zip(plants.names, plants.parameters, strict=True)
-        if unstable_poles(plant) != expected
+        if (reason := _no_member(plant, frequency, common))
     }
     counted = plants.without(reasons)
     if not counted.parameters:
         raise InputError(Problem("[bound] exclude", "no plant left to hold", "at least one"))
     return counted
+
+
+def _no_member(plant: ModalParameters, frequency: FloatArray, common: CommonPart) -> str:
+    expected, own = unstable_poles(common.nominal.parameters), unstable_poles(plant)
+    if own != expected:
+        return f"{own} unstable poles, the nominal has {expected}"
+    if not common.form.counts_turns:
+        return ""
+    turns = turns_around_zero(1.0 + common.error(frequency, plant))
+    if not turns:
+        return ""
+    return "its response turns around zero beside the nominal's, which no inverse set holds"
 
 
 def unstable_poles(plant: ModalParameters) -> int:

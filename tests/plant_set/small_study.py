@@ -44,7 +44,7 @@ def run_again(folder: Path, form: str) -> None:
     """Bound the campaign of a study that was run before in another form."""
     study = STUDY.replace("[bound]", f'[bound]\nform = "{form}"')
     (folder / "study.toml").write_text(study, encoding="utf-8")
-    run_study(folder / "study.toml", jobs=1)
+    run_study(folder / "study.toml", until="export", jobs=1)
 
 
 if __name__ == "__main__":
