@@ -66,6 +66,7 @@ def minimise(
     start: FloatArray,
     *,
     tolerance: float = 1e-10,
+    absolute: float = 0.0,
     last_step: float = 0.0,
     step_limit: FloatArray | None = None,
     max_iterations: int = 60,
@@ -82,9 +83,11 @@ def minimise(
         (p,) starting point.
     tolerance
         Stop when the predicted decrease is below this share of the cost.
+    absolute
+        Stop when it is below this, whatever the cost.
     last_step
-        Stop after a step that was predicted to bring less than this share of the cost and did:
-        what is left is smaller again by the rate of convergence.
+        Stop after a step that was predicted to bring less than 100 times this share of the cost
+        and missed the prediction by less than this share: what is left is of the size of the miss.
     step_limit
         (p,) largest step per coordinate, or None.
     max_iterations
@@ -100,14 +103,16 @@ def minimise(
         tried += 1
         step = _limited(damped_step(hessian, gradient, damping), step_limit)
         predicted = float(step @ (2.0 * gradient - hessian @ step))
-        if not predicted > tolerance * cost:
-            settled = _settled(hessian, gradient, damping, tolerance * cost, cost)
+        if not predicted > tolerance * cost + absolute:
+            limit = max(100.0 * (tolerance * cost + absolute), 1e-10 * cost)
+            settled = _settled(hessian, gradient, damping, limit)
             return Minimum(point, cost, state, settled, tried)
         trial_cost, trial_state = evaluate(point + step)
         ratio = (cost - trial_cost) / predicted if np.isfinite(trial_cost) else -1.0
         if ratio > 1e-4:
             point, cost, state = point + step, trial_cost, trial_state
-            if predicted <= last_step * cost and ratio > 0.8:
+            surprise = abs(1.0 - ratio) * predicted
+            if predicted <= 100.0 * last_step * cost and surprise <= last_step * cost:
                 return Minimum(point, cost, state, True, tried)
             hessian, gradient = normal_equations(state)
             damping *= max(0.1, 1.0 - (2.0 * ratio - 1.0) ** 3)
@@ -119,13 +124,11 @@ def minimise(
     return Minimum(point, cost, state, False, tried)
 
 
-def _settled(
-    hessian: FloatArray, gradient: FloatArray, damping: float, limit: float, cost: float
-) -> bool:
+def _settled(hessian: FloatArray, gradient: FloatArray, damping: float, limit: float) -> bool:
     """Whether the step is small in itself, not only because it was damped."""
     if damping <= SLIGHT_DAMPING:
         return True
-    return float(gradient @ damped_step(hessian, gradient, 0.0)) <= max(100 * limit, 1e-10 * cost)
+    return float(gradient @ damped_step(hessian, gradient, 0.0)) <= limit
 
 
 def damped_step(hessian: FloatArray, gradient: FloatArray, damping: float) -> FloatArray:

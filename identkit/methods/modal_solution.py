@@ -22,7 +22,8 @@ from identkit.methods.modal_problem import (
 )
 
 TOLERANCE = 1e-9
-LAST_STEP = 1e-5
+LAST_STEP = 1e-6
+ROUNDING = 1e-26  # of the data's own sum of squares: steps below are rounding
 SINGULAR_PIVOT = 1e-5
 VARIANCE_FLOOR = 1e-18
 
@@ -68,6 +69,7 @@ def solve(problem: ModalProblem, start: Poles, *, tolerance: float = TOLERANCE) 
         problem.normal_equations,
         problem.pack(start),
         tolerance=tolerance,
+        absolute=ROUNDING * float(np.sum(np.abs(problem.data.target) ** 2)),
         last_step=LAST_STEP,
         step_limit=problem.step_limit(),
     )

@@ -3,7 +3,7 @@
 Where no variance is given, v = (alpha |P|^2 + beta) times a slowly varying factor: a constant
 relative part, a floor, and what the residuals show along the frequency axis, all by medians so
 that a missed resonance does not hide itself. |error|^2 of circular Gaussian noise is exponential:
-its median is ln 2 times its mean.
+its median is ln 2 times its mean. Fewer than 15 points cannot tell: they share one variance.
 
 Where a variance is given that follows the measured magnitude point by point (as one derived from
 coherence does), points that happen to be small get too much weight and the fit is biased low. It
@@ -75,6 +75,8 @@ def updated_variance(
 
 def _from_residuals(error: FloatArray, model: ComplexArray) -> FloatArray:
     power = _power(model)
+    if error.size < SMALLEST_WINDOW:
+        return np.full(error.size, max(float(np.mean(error)), RELATIVE_FLOOR**2 * power.max()))
     relative, floor = _relative_and_floor(error, power, _mean_by_median)
     shape = relative * power + floor
     level = median_filter(error / shape, _window(error.size), mode="reflect") / LN2

@@ -68,3 +68,23 @@ def test_rows_are_the_terms_of_the_model(case):
     s = 1j * x
     expected = weight / (s**2 + rate[2] * s + stiffness[2])
     np.testing.assert_allclose(out[2, :301] + 1j * out[2, 301:], expected, rtol=1e-10)
+
+
+def test_whole_fit_is_the_same_without_compiled_rows(monkeypatch):
+    from identkit.methods import modal_problem, order_selection, pole_relocation, starting_poles
+    from identkit.methods.modal_fit import fit_modal_model
+    from tests.methods.invented_plants import draw
+
+    drawn = draw(np.random.default_rng(3), modes=4, points=400)
+    fast = fit_modal_model(drawn.frequency, drawn.response, drawn.variance)
+    for module in (modal_problem, order_selection, pole_relocation, starting_poles):
+        for name in ("section_rows", "derivative_rows", "relocation_rows", "window_gains"):
+            if hasattr(module, name):
+                monkeypatch.setattr(module, name, getattr(rows, f"{name}_numpy"))
+    plain = fit_modal_model(drawn.frequency, drawn.response, drawn.variance)
+    for name in ("modal_frequency", "damping_ratio", "residue"):
+        left, right = getattr(plain.parameters, name), getattr(fast.parameters, name)
+        np.testing.assert_allclose(left, right, rtol=1e-6)
+    size = np.sqrt(np.diag(fast.covariance))
+    off = (plain.covariance - fast.covariance) / np.outer(size, size)
+    np.testing.assert_allclose(off, 0.0, atol=1e-5)
