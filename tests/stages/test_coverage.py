@@ -6,7 +6,10 @@ import numpy as np
 import pytest
 
 from identkit.errors import InputError
+from identkit.methods.beta_binomial import BetaShares
 from identkit.stages.coverage import state_coverage
+from identkit.stages.leave_one_out import LeaveOneOut
+from identkit.stages.model_coverage import Check, ModelStatement
 
 
 def test_without_held_out_units_nothing_is_claimed():
@@ -74,3 +77,47 @@ def test_the_statement_is_broken_no_more_often_than_it_says():
         truth = float(np.mean(rng.normal(size=4000) <= limit))
         broken += truth < content
     assert broken / 2000 < 0.12
+
+
+def predicted(**checks):
+    found = tuple(
+        Check(name.replace("_", " "), passed, "chance 0.5") for name, passed in checks.items()
+    )
+    return ModelStatement(BetaShares(90.0, 10.0), 16, 2400, 12, found)
+
+
+def test_the_model_speaks_where_nothing_was_held_out_and_its_checks_pass():
+    said = state_coverage(model=predicted(units_are_normal=True))
+    assert said["content"] == pytest.approx(BetaShares(90.0, 10.0).quantile(0.1))
+    assert "virtual units" in said["method"]
+    assert any("normal" in line for line in said["assumptions"])
+    assert "If the population is as modelled" in said["sentence"]
+    assert said["sentence"].count("no safety certificate") == 1
+
+
+def test_a_model_whose_check_fails_claims_nothing_and_says_why():
+    said = state_coverage(model=predicted(units_are_normal=True, lots_are_alike=False))
+    assert said["content"] is None
+    assert said["model_based"]["trusted"] is False
+    assert "must not be trusted" in said["sentence"]
+    assert "lots are alike" in said["sentence"]
+    assert "units are normal" not in said["sentence"]
+
+
+def test_held_out_units_go_before_the_model():
+    said = state_coverage({"U1": 0.5}, model=predicted(units_are_normal=True))
+    assert said["content"] == said["exact"]["content"] == pytest.approx(0.1)
+    assert said["units"] == 1
+
+
+def test_leaving_out_is_called_approximate_and_is_no_claim():
+    tried = LeaveOneOut({"U1": 0.9, "U2": 1.1, "U3": float("nan")}, 3, True)
+    said = state_coverage(left_out=tried)
+    assert (
+        "Leaving each unit out in turn, 1 of 3 would have been held (approximate"
+        in (said["sentence"])
+    )
+    assert said["content"] is None
+    some = state_coverage(left_out=LeaveOneOut({"U1": 0.9}, 500, False))["leave_one_out"]
+    assert "each of 1 units drawn" in some["sentence"]
+    assert any("kept" in line for line in some["assumptions"])

@@ -35,12 +35,13 @@ def main() -> None:
     asked.add_argument("--campaigns", type=int, default=100, help="of each population")
     asked.add_argument("--first", type=int, default=1)
     asked.add_argument("--seconds", type=float, default=float("inf"))
+    asked.add_argument("--populations", nargs="+", default=POPULATIONS, choices=POPULATIONS)
     options = asked.parse_args()
     rows = json.loads(OUTCOMES.read_text(encoding="utf-8")) if OUTCOMES.exists() else []
     done = {(row["population"], row["seed"]) for row in rows}
     end = time.monotonic() + options.seconds
     for seed in range(options.first, options.first + options.campaigns):
-        for population in POPULATIONS:
+        for population in options.populations:
             if (population, seed) not in done:
                 rows.append(plain(run_campaign(population, seed)))
         lines = ",\n".join(json.dumps(row) for row in rows)
