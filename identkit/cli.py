@@ -47,6 +47,7 @@ def _folder(**kwargs: bool) -> click.Path:
     return click.Path(file_okay=False, path_type=Path, **kwargs)
 
 
+_SHARE = click.FloatRange(min=0.0, max=1.0, min_open=True)
 _jobs = click.option(
     "--jobs", type=click.IntRange(min=1), help="Processes to use; default all cores."
 )
@@ -86,6 +87,22 @@ def new(folder: Path) -> None:
 def run(study: Path, until: str | None, redo: str | None, jobs: int | None, quiet: bool) -> None:
     """Run all stages of STUDY, resuming where results are still good."""
     _finish(_run(study, until=until, redo=redo, jobs=jobs, quiet=quiet))
+
+
+@commands.command()
+@click.argument("study", type=click.Path(dir_okay=False, path_type=Path))
+@click.option("--frequency-error", type=_SHARE, default=1e-4, show_default=True, help="Relative.")
+@click.option("--damping-error", type=_SHARE, default=0.02, show_default=True, help="Relative.")
+@click.option("--radius-error", type=_SHARE, default=0.02, show_default=True, help="Relative.")
+def plan(study: Path, frequency_error: float, damping_error: float, radius_error: float) -> None:
+    """Say how long and how hard to excite the devices of STUDY to reach wanted errors."""
+    from identkit.excitation import plan_excitation
+
+    planned = plan_excitation(
+        study, frequency=frequency_error, damping=damping_error, radius=radius_error
+    )
+    for sentence in planned.sentences:
+        click.echo(sentence)
 
 
 @commands.command()

@@ -212,7 +212,7 @@ def invented_excitation(plant: ModalParameters, recorder: InventedRecorder) -> F
     # runout repeats every turn: its harmonics are left to it
     lines = lines[lines % recorder.turns != 0]
     moves = invented_loop(plant, recorder).position_per_excitation(lines * resolution, recorder)
-    phase = schroeder_phases(np.ones(lines.size)) - np.angle(moves)
+    phase = schroeder_phases(np.ones(lines.size), lines) - np.angle(moves)
     each = recorder.motion * np.sqrt(2.0 / lines.size)
     return multisine(lines, each / np.abs(moves), samples, phase)
 

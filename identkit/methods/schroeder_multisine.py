@@ -10,10 +10,20 @@ import numpy as np
 from identkit.methods.arrays import FloatArray
 
 
-def schroeder_phases(power: FloatArray) -> FloatArray:
-    """Return the phases of consecutive lines from their powers (of any scale), rad."""
-    share = np.asarray(power, dtype=float) / np.sum(power)
-    return np.asarray(-2.0 * np.pi * np.concatenate([[0.0], np.cumsum(np.cumsum(share))[:-1]]))
+def schroeder_phases(power: FloatArray, lines: FloatArray | None = None) -> FloatArray:
+    """Return the phases of lines from their powers (of any scale), rad.
+
+    Parameters
+    ----------
+    power
+        Of each line.
+    lines
+        Whole numbers that say where they stand; consecutive by default. Where lines are left out,
+        each phase step is that of the gap, so that the group delay still sweeps one period.
+    """
+    share = np.cumsum(np.asarray(power, dtype=float) / np.sum(power))[:-1]
+    gap = np.ones(share.size) if lines is None else np.diff(np.asarray(lines, dtype=float))
+    return np.asarray(-2.0 * np.pi * np.concatenate([[0.0], np.cumsum(gap * share)]))
 
 
 def multisine(
@@ -43,7 +53,7 @@ def multisine(
         raise ValueError(f"found lines {lines} of {samples} samples; expected 1 to below half")
     spectrum = np.zeros(samples // 2 + 1, dtype=complex)
     amplitude = np.broadcast_to(amplitude, place.shape)
-    turned = schroeder_phases(amplitude**2) if phase is None else phase
+    turned = schroeder_phases(amplitude**2, place) if phase is None else phase
     spectrum[place] = amplitude * np.exp(1j * turned)
     return np.asarray(np.fft.irfft(spectrum, samples) * samples / 2.0)
 

@@ -270,6 +270,9 @@ def _dataset(
             "hold_treatment": ("response", [plant.hold for plant in plants]),
             "direct_bias_over_error": ("response", [_bias(result) for result in results]),
             "runout": ("response", [result.runout for result in results]),
+            "record_samples": ("response", [result.tally.samples for result in results]),
+            "drive_peak": ("response", [result.tally.drive_peak for result in results]),
+            "position_peak": ("response", [result.tally.position_peak for result in results]),
             "line_correlation": (("response", "line_distance"), _correlations(estimates)),
         },
         coords={

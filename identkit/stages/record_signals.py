@@ -75,6 +75,10 @@ class Tally:
         Largest and smallest position of every chunk, and how often two in a row reach it.
     powers
         Variance of position over every 4096 samples.
+    drive_peak
+        Largest drive.
+    position_peaks
+        Largest position of every chunk, in the units in which its range is stated.
     """
 
     samples: int = 0
@@ -83,6 +87,13 @@ class Tally:
     saturated: int = 0
     extremes: list[tuple[float, int]] = field(default_factory=list)
     powers: list[float] = field(default_factory=list)
+    drive_peak: float = 0.0
+    position_peaks: list[float] = field(default_factory=list)
+
+    @property
+    def position_peak(self) -> float:
+        """Largest position of a typical chunk; the start, which still settles, is no measure."""
+        return float(np.median(self.position_peaks)) if self.position_peaks else 0.0
 
 
 class Signals:
@@ -170,6 +181,8 @@ class Signals:
 
     def _in_range(self, position: FloatArray, tally: Tally) -> FloatArray:
         options = self.options
+        finite = np.abs(position[np.isfinite(position)])
+        tally.position_peaks.append(float(np.max(finite, initial=0.0)))
         limit = options.linear_range
         if self.channels.from_bursts:
             limit = _HALF_TRACK if limit is None else limit
@@ -183,8 +196,10 @@ class Signals:
 
     def _count(self, chunk: FloatArray, tally: Tally) -> None:
         tally.samples += chunk.shape[1]
+        drive = np.abs(chunk[self.channels.inputs])
+        peak = np.max(drive, initial=0.0, where=np.isfinite(drive))
+        tally.drive_peak = max(tally.drive_peak, float(peak))
         if self.options.drive_limit is not None:
-            drive = np.abs(chunk[self.channels.inputs])
             tally.saturated += int(
                 np.count_nonzero((drive >= 0.999 * self.options.drive_limit).any(axis=0))
             )
