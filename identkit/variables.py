@@ -106,6 +106,9 @@ READ = (
         ("hold_treatment?", "text", "", "What was done about hold and images."),
         ("direct_bias_over_error?", "number", "1", "Bias of the direct estimate over its error."),
         ("runout?", "number", "output unit", "Repeatable runout taken out, peak to peak."),
+        ("record_samples?", "whole", "", "Samples of all records behind a response."),
+        ("drive_peak?", "number", "input unit", "Largest drive in them."),
+        ("position_peak?", "number", "as the range", "Largest position in them."),
     ),
     Variable("second_opinion", ("response",), "text", "", "What became of it.", True),
     *_along(
