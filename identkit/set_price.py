@@ -79,6 +79,17 @@ def bandwidth_of_set(contents: PlantSetFields) -> AllowedBandwidth:
     return allowed_bandwidth(size, size.grid, carried, CONDITIONS[contents.form])
 
 
+def unremovable_of(contents: PlantSetFields) -> Unremovable:
+    """Return what of a set's nominal the standard loop has to carry.
+
+    Raises
+    ------
+    InputError
+        If the nominal is unstable.
+    """
+    return unremovable(_Size(contents).around, contents)
+
+
 def unremovable(around: Surroundings, contents: PlantSetFields) -> Unremovable:
     """Return delay, right half-plane zeros and integrators of a stable scalar nominal.
 
@@ -117,7 +128,7 @@ class _Size:
     """|W|, or |W/P0| for additive sets, as a function of frequency."""
 
     def __init__(self, contents: PlantSetFields) -> None:
-        _refuse(contents)
+        refuse_price(contents)
         self.around = Surroundings(contents)
         unstable = count_unstable(self.around.nominal_poles, self.around.rest)
         if unstable:
@@ -142,7 +153,14 @@ class _Size:
         return weight / np.abs(nominal[:, 0, 0]) if self.additive else weight
 
 
-def _refuse(contents: PlantSetFields) -> None:
+def refuse_price(contents: PlantSetFields) -> None:
+    """Refuse sets that the yardstick does not cover.
+
+    Raises
+    ------
+    InputError
+        For sets with real factors, matrix plants and sampled sets.
+    """
     if contents.form not in CONDITIONS:
         expected = f"one of {', '.join(CONDITIONS)} for the bandwidth a set allows"
         raise InputError(Problem("form", repr(contents.form), expected))

@@ -5,7 +5,7 @@ To add a stage: a function that takes `Work`, and its line in `STEPS`.
 
 import json
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from typing import Any
 
@@ -274,10 +274,13 @@ def _export(work: Work) -> None:
 def _report(work: Work) -> None:
     from identkit.report.page import write_report
     from identkit.stages.export import finished_set
+    from identkit.stages.price import attribute_price
 
     draft = load_set(work.study.path("draft.h5"))
     final = finished_set(draft, work.dataset("audit.nc"), work.json("coverage.json"))
-    write_report(_report_input(work, final), work.study.folder)
+    work.save(attribute_price(final), "price.nc")
+    given = replace(_report_input(work, final), price=work.dataset("price.nc"))
+    write_report(given, work.study.folder)
 
 
 def _report_input(work: Work, plant_set: PlantSet) -> ReportInput:
@@ -339,5 +342,5 @@ STEPS = (
     ),
     Step("audit", _audit, ("audit.nc", "audit.csv"), ("read", "screen", "pair", "bound")),
     Step("export", _export, ("certificate.json",), ("coverage", "audit"), ("export",)),
-    Step("report", _report, ("report.html",), ("export",), ("study.name",)),
+    Step("report", _report, ("report.html", "price.nc"), ("export",), ("study.name",)),
 )

@@ -81,6 +81,34 @@ class AllowedBandwidth:
     limited_at: float
 
 
+def bandwidth_of_curve(
+    frequency: FloatArray,
+    size: FloatArray,
+    carried: Unremovable,
+    condition: str = "complementary",
+) -> AllowedBandwidth:
+    """Return `allowed_bandwidth` for m known at points only: the condition is asked there alone.
+
+    Parameters
+    ----------
+    frequency, size
+        (points,) Hz, increasing, and m.
+    carried, condition
+        As there.
+    """
+    if condition == "complementary" and carried.integrators < 2:
+        allowed = limiting_frequency(frequency, size)
+        k = int(allowed.argmin())
+        natural, place = float(allowed[k]), float(frequency[k])
+        if not np.isfinite(natural):
+            place = np.nan
+    else:
+        natural, place = _scanned(None, frequency, size, carried, condition)
+    if natural <= 0.0:
+        return AllowedBandwidth(0.0, 0.0, place)
+    return AllowedBandwidth(crossover(natural, frequency, carried), natural, place)
+
+
 def allowed_bandwidth(
     size: Size, grid: FloatArray, carried: Unremovable, condition: str = "complementary"
 ) -> AllowedBandwidth:
@@ -106,7 +134,7 @@ def allowed_bandwidth(
     if condition == "complementary" and carried.integrators < 2:
         natural, place = _least_over_band(size, grid)
     else:
-        natural, place = _scanned(size, grid, carried, condition)
+        natural, place = _scanned(size, grid, size(grid), carried, condition)
     if natural <= 0.0:
         return AllowedBandwidth(0.0, 0.0, place)
     return AllowedBandwidth(crossover(natural, grid, carried), natural, place)
@@ -177,10 +205,13 @@ def _least_over_band(size: Size, grid: FloatArray) -> tuple[float, float]:
 
 
 def _scanned(
-    size: Size, grid: FloatArray, carried: Unremovable, condition: str
+    size: Size | None,
+    grid: FloatArray,
+    weight: FloatArray,
+    carried: Unremovable,
+    condition: str,
 ) -> tuple[float, float]:
     """Return the highest feasible w0 of a scan, bisected: feasibility need not be monotone."""
-    weight = size(grid)
 
     def worst(natural: float) -> tuple[float, float]:
         return _worst(natural, grid, weight, size, carried, condition)
@@ -209,13 +240,15 @@ def _worst(
     natural: float,
     grid: FloatArray,
     weight: FloatArray,
-    size: Size,
+    size: Size | None,
     carried: Unremovable,
     condition: str,
 ) -> tuple[float, float]:
     """Return the largest m |T| or m |1 - T| and where, refined around the largest point."""
     values = weight * _closed(grid, natural, carried, condition)
     k = int(values.argmax())
+    if size is None:
+        return float(values[k]), float(grid[k])
     bounds = grid[max(k - 1, 0)], grid[min(k + 1, grid.size - 1)]
 
     def below(f: float) -> float:

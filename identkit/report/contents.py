@@ -24,6 +24,8 @@ class ReportInput:
         As written by the stages of those names (`modes` by pair).
     plant_set
         The set with all its plants.
+    price
+        What the set costs without each part, as `attribute_price` returns it.
     coverage
         As stated by the coverage stage.
     run
@@ -42,6 +44,7 @@ class ReportInput:
     bound: xr.Dataset | None = None
     audit: xr.Dataset | None = None
     plant_set: PlantSetFields | None = None
+    price: xr.Dataset | None = None
     coverage: Mapping[str, Any] = field(default_factory=dict)
     run: Mapping[str, Any] = field(default_factory=dict)
     verdict: tuple[str, ...] | list[str] = ()

@@ -15,6 +15,7 @@ from identkit.report import (
     coverage_tables,
     measurement_tables,
     mode_tables,
+    price_findings,
     record_tables,
     set_tables,
 )
@@ -154,6 +155,7 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
         "coverage": coverage_tables.coverage_table(given),
         "coverage_checks": coverage_tables.coverage_checks_table(given),
         "attribution": set_tables.attribution_table(given),
+        "price": price_findings.price_table(given),
         "worst": set_tables.worst_table(given, names, frequency),
         "population": mode_tables.population_table(given),
         "heads": mode_tables.head_table(given),

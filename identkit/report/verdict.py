@@ -18,6 +18,7 @@ from identkit.report.mode_findings import (
     odd_modes_sentence,
 )
 from identkit.report.numbers import counted, listed, number, percent
+from identkit.report.price_findings import yardstick_sentence
 from identkit.report.touches import touching
 
 HELD, NOT_HELD, NO_SET = "held", "not held", "no set"
@@ -64,14 +65,14 @@ def verdict(given: ReportInput) -> list[str]:
     given
         What the stages wrote; a stage that did not run adds no sentence.
     """
-    made = (_nominal, _weight, _setters, _limit_of_control)
+    made = (_nominal, _weight, _setters, _limit_of_control, yardstick_sentence)
     makers = (*_FOUND, *made, _marked_but_kept, _coverage, _envelope)
     return [sentence for make in makers if (sentence := make(given))]
 
 
 def short_verdict(given: ReportInput) -> list[str]:
     """Return the sentences of the verdict that a terminal shows; the page has them all."""
-    makers = (*_FOUND, _weight, _setters, _coverage)
+    makers = (*_FOUND, _weight, _setters, yardstick_sentence, _coverage)
     return [sentence for make in makers if (sentence := make(given))]
 
 
