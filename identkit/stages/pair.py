@@ -19,7 +19,7 @@ from identkit.methods.template_assignment import assign_all, expected_log_freque
 from identkit.outcomes import Outcome
 from identkit.stages.mode_tables import CHANNEL_DIMS, mode_errors, mode_table
 from identkit.stages.unexplained import unexplained_share
-from identkit.stages.warm_refit import WarmRefit, find_missing_modes
+from identkit.stages.warm_refit import WarmRefit, find_missing_modes, refit_unexplained
 
 PER_MODE = ("modal_frequency", "damping_ratio", "mode_significance")
 PER_CHANNEL = ("residue", "residue_rate")
@@ -43,7 +43,8 @@ def pair_modes(
     out), log damping and signed residue of the head, with bounded growth; a mode may stay
     unpaired on either side at `unpaired_cost`. The population's modes come from the fits
     themselves (methods/mode_population.py). Where the responses are given, those that lack a
-    mode are refined once more from the population and keep what then stands out of the noise.
+    mode are refined once more from the population and keep what then stands out of the noise;
+    those that their fit does not explain are refined first from the best fit of the others.
 
     Parameters
     ----------
@@ -83,6 +84,9 @@ def pair_modes(
     Outcomes: DONE, MODE_MISSING, MODE_EXTRA, MODE_SHIFTED (far from where the population has it,
     but the only candidate), MODE_CROSSING, MODE_BELOW_SIGNIFICANCE, MODE_OUT_OF_BAND.
     """
+    refit = None if responses is None else WarmRefit(responses, screening, delay, jobs, progress)
+    if refit is not None:
+        fits = refit_unexplained(fits, refit)
     table = _checked_table(fits)
     template, assigned = find_population_modes(
         table,
@@ -92,12 +96,11 @@ def pair_modes(
     )
     named = pair_shifted_modes(table, template, assigned)[0]
     gained = np.zeros((len(assigned), len(template.log_frequency)), dtype=bool)
-    if responses is not None:
-        refit = WarmRefit(responses, screening, delay, jobs, progress)
+    if refit is not None:
         fits, gained = find_missing_modes(fits, table, template, named, refit, unpaired_cost)
         table = mode_table(fits)
         assigned = assign_all(table, template, unpaired_cost)
-        left = unexplained_share(fits, responses, screening)
+        left = unexplained_share(fits, refit.responses, screening)
         fits = fits.assign(unexplained_share=("response", left))
     paired = name_modes(fits, table, template, assigned)
     warm = np.zeros(paired["modal_frequency"].shape, dtype=bool)

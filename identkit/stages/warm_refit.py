@@ -2,7 +2,8 @@
 
 A response that lacks a mode is refined once more from its own modes with the population's guess of
 the missing one added. The mode is kept when it stands out of the noise and is still the same
-mode; otherwise the response keeps its first fit.
+mode; otherwise the response keeps its first fit. A response that its fit does not explain at all is
+refined before that from the best fit of the others.
 """
 
 from dataclasses import dataclass
@@ -18,8 +19,10 @@ from identkit.methods.mode_assignment import UNPAIRED
 from identkit.methods.mode_template import ModeTable, ModeTemplate
 from identkit.methods.template_assignment import assign_all, expected_log_frequency
 from identkit.outcomes import Outcome
+from identkit.plants import MOST_UNEXPLAINED, plant_parameters
 from identkit.stages.fit import refit_modes
 from identkit.stages.mode_tables import mode_table
+from identkit.stages.unexplained import unexplained_share
 
 SCALARS = (
     "delay",
@@ -52,6 +55,33 @@ class WarmRefit:
     delay: bool = True
     jobs: int = 1
     progress: Progress | None = None
+
+
+def refit_unexplained(fits: xr.Dataset, refit: WarmRefit) -> xr.Dataset:
+    """Refit responses that their fits do not explain from the fit that explains its own best.
+
+    The search of a cold fit can end in a poor local minimum (of the delay above all) that the fit
+    of a sister does not share. A refit is kept where it leaves less of the response and no more
+    than `MOST_UNEXPLAINED`.
+    """
+    share = unexplained_share(fits, refit.responses, refit.screening)
+    poor = np.flatnonzero(share > MOST_UNEXPLAINED)
+    if poor.size == 0 or not (share <= MOST_UNEXPLAINED).any():
+        return fits
+    start = plant_parameters(fits, int(np.nanargmin(share)))
+    names = fits["response"].values[poor]
+    refits = refit_modes(
+        refit.responses,
+        {str(name): start for name in names},
+        refit.screening,
+        delay=refit.delay,
+        residues=str(fits.attrs.get("residues", "real")),
+        jobs=refit.jobs,
+        progress=refit.progress,
+    ).sel(response=names)
+    left = unexplained_share(refits, refit.responses, refit.screening)
+    better = (left < share[poor]) & (left <= MOST_UNEXPLAINED)
+    return _replace(fits, refits.isel(response=np.flatnonzero(better)))
 
 
 def find_missing_modes(

@@ -125,6 +125,15 @@ def test_one_smooth_response_among_resonant_ones_is_bounded_like_any_other() -> 
     assert bound["response_used"].all()
 
 
+def test_a_fit_that_missed_the_delay_is_made_again_from_a_sister(responses: xr.Dataset) -> None:
+    fits = fit_modes(responses, base="none")
+    fits["delay"][2] = 0.0
+    fits["feedthrough"][2] = 0.01
+    modes = pair_modes(fits, responses)
+    assert (modes["unexplained_share"] < 2.0 * NOISE).all()
+    assert float(modes["feedthrough"][2, 0, 0]) == pytest.approx(GAINS[2], rel=0.01)
+
+
 def test_a_response_that_is_noise_has_no_plant() -> None:
     responses = measured([smooth(gain) for gain in GAINS])
     rng = np.random.default_rng(2)
