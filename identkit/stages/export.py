@@ -101,7 +101,7 @@ def build_set(
         attribution=_attribution(bound),
         provenance=_provenance(origin),
     )
-    return replace(contents, plants=_plants(contents, bound, modes))
+    return replace(contents, plants=_plants(contents, modes))
 
 
 def finished_set(
@@ -319,29 +319,17 @@ def _provenance(origin: SetOrigin) -> f.Provenance:
     return f.Provenance(origin.input_digests, versions, origin.settings, origin.time)
 
 
-def _plants(
-    contents: f.PlantSetFields, bound: xr.Dataset, modes: xr.Dataset
-) -> tuple[f.FittedPlant, ...]:
-    """Return all plants with their reach: the bound's own, or the file's for those left out.
+def _plants(contents: f.PlantSetFields, modes: xr.Dataset) -> tuple[f.FittedPlant, ...]:
+    """Return all plants with the reach that the file's own numbers give.
 
-    A plant of infinite reach (another number of unstable poles) has no place in the file, which
-    holds no infinite number; it is named among the excluded.
+    The bound proves that no plant reaches beyond 1; how far a plant inside reaches is sought
+    exactly here only. A plant of infinite reach (another number of unstable poles) has no place in
+    the file, which holds no infinite number; it is named among the excluded.
     """
     plants, _ = set_plants(modes)
-    names = bound["response"].values.astype(str).tolist()
-    known = {
-        name: (float(reach), float(hertz))
-        for name, reach, hertz in zip(
-            names, bound["reach"].values, bound["reach_frequency"].values, strict=True
-        )
-        if np.isfinite(reach)
-    }
-    others = [plant for plant in plants if plant.response not in known]
-    own = reach_of_plants(contents, others)
-    for plant, value, hertz in zip(others, own.value, own.frequency, strict=True):
-        known[plant.response] = (float(value), float(hertz))
+    own = reach_of_plants(contents, plants)
     return tuple(
-        replace(plant, reach=known[plant.response][0], reach_frequency=known[plant.response][1])
-        for plant in plants
-        if np.isfinite(known[plant.response][0])
+        replace(plant, reach=float(value), reach_frequency=float(hertz))
+        for plant, value, hertz in zip(plants, own.value, own.frequency, strict=True)
+        if np.isfinite(value)
     )

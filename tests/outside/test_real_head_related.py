@@ -109,10 +109,6 @@ def matrices_response(matrices, frequency):
 
 
 @pytest.mark.slow
-@pytest.mark.xfail(
-    strict=True,
-    reason="two directions end without modes; plants off the bound differ by 1e-5 in the audit",
-)
 def test_one_study_holds_every_measured_direction(ear, tmp_path):
     result = run_ear_study(tmp_path, ear)
     assert result.held
