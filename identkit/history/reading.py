@@ -66,7 +66,8 @@ def fill_reach(store: Store) -> None:
     if contents is None:
         return
     reach = reach_of_plants(contents, list(found.values()))
-    made_from = {_identity(plant) for plant in contents.plants}
+    excluded = {item.label for item in contents.certificate.measured.excluded}
+    made_from = {_identity(p) for p in contents.plants if p.response not in excluded}
     rows = {
         key: {
             "measurement_id": key,

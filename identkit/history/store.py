@@ -38,8 +38,12 @@ class Store:
             self._engine = _engine(url)
         except (ArgumentError, NoSuchModuleError, ImportError) as error:
             raise self._problem(error) from error
-        with self.transaction() as connection:
-            self._prepare(connection)
+        try:
+            with self.transaction() as connection:
+                self._prepare(connection)
+        except InputError:
+            self.close()
+            raise
 
     def close(self) -> None:
         """Give back all connections."""

@@ -15,6 +15,7 @@ from identkit.methods.arrays import BoolArray, FloatArray
 from identkit.methods.recursive_residuals import baseline_scores
 
 _MOST_ROUNDS = 30
+_LEAST_POINTS = 8
 _HALF_DEVIATION = 0.3778  # of the middle half of a normal population, over that of the whole
 
 
@@ -35,20 +36,21 @@ def clean_baseline(
     Returns
     -------
     BoolArray
-        (points,) at least half of the finite points.
+        (points,) at least half of the finite points; all of them where there are fewer than
+        eight, too few to tell.
     """
     known = np.isfinite(values)
     count = int(known.sum())
-    if count < 4:
+    if count < _LEAST_POINTS:
         return np.asarray(known)
     limit = float(norm.isf(0.5 * false_alarm / count))
     core = _shortest_half(values)
     ones = np.ones((len(values), 1))
     members = core
     for turn in range(_MOST_ROUNDS):
-        scores = baseline_scores(values, ones, relative_variance, members)
         # Half of a normal sample around its middle looks much tighter than the whole.
-        scores *= _HALF_DEVIATION if turn == 0 else 1.0
+        widening = 1.0 if turn else 1.0 / _HALF_DEVIATION
+        scores = baseline_scores(values, ones, relative_variance, members, widening)
         grown = np.isfinite(scores) & (np.abs(scores) <= limit)
         if grown.sum() < core.sum() or np.array_equal(grown, members):
             break

@@ -67,10 +67,12 @@ def baseline_scores(
     regressors: FloatArray,
     relative_variance: FloatArray,
     members: BoolArray,
+    widening: float = 1.0,
 ) -> FloatArray:
     """Return the normal score of every point against the members other than itself.
 
-    The scores of members are exact one by one but not independent of each other.
+    The scores of members (externally studentised residuals) are exact one by one but not
+    independent of each other.
 
     Parameters
     ----------
@@ -78,17 +80,30 @@ def baseline_scores(
         As for `recursive_scores`.
     members
         (points,) that teach the model.
+    widening
+        True deviation over that of the members, where they were chosen for lying close together.
     """
     usable = np.isfinite(values) & np.isfinite(regressors).all(axis=1)
     scores = np.full(len(values), np.nan)
-    for at in np.flatnonzero(usable):
-        others = members & usable
-        others[at] = False
-        if others.sum() > regressors.shape[1] + 1:
-            model = _Weighted(values[others], regressors[others], relative_variance[others])
-            residual, _ = model.judge(values[at], regressors[at], relative_variance[at])
-            scores[at] = normal_score(residual / model.deviation, model.freedom)
-    return scores
+    inside = members & usable
+    freedom = int(inside.sum()) - regressors.shape[1]
+    if freedom < 2:
+        return scores
+    root = np.sqrt(relative_variance)
+    scaled, target = regressors / root[:, None], values / root
+    inverse = np.linalg.pinv(scaled[inside].T @ scaled[inside])
+    residual = target - scaled @ (inverse @ (scaled[inside].T @ target[inside]))
+    leverage = np.einsum("ij,jk,ik->i", scaled, inverse, scaled)
+    squares = float(np.sum(residual[inside] ** 2))
+    # A member is judged by the others: its own share is taken out of fit and variance.
+    own = np.where(inside, np.maximum(1.0 - leverage, np.finfo(float).eps), 1.0 + leverage)
+    left = np.where(inside, squares - residual**2 / own, squares)
+    degrees = np.where(inside, freedom - 1, freedom)
+    least = np.finfo(float).eps * squares + np.finfo(float).tiny
+    deviation = np.sqrt(np.maximum(left, least) / degrees)
+    ratio = residual / (widening * deviation * np.sqrt(own))
+    tail = norm.isf(np.maximum(t.sf(np.abs(ratio), degrees), norm.sf(_HIGHEST)))
+    return np.asarray(np.where(usable, np.copysign(tail, ratio), np.nan), dtype=float)
 
 
 def joint_scores(

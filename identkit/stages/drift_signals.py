@@ -133,7 +133,7 @@ def lots_that_differ(charted: xr.Dataset) -> list[tuple[str, str, float]]:
 
     lots = charted["lot"].values.astype(str)
     values = charted["deviation"].values
-    inside = charted["in_baseline"].values & charted["in_reference"].values
+    inside = charted["in_baseline"].values & np.isfinite(values)
     series = charted["series"].values.astype(str)
     found = []
     for k, name in enumerate(series):

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from identkit.grids import load
 from identkit.methods.change_point import change_point
 from identkit.methods.control_chart_constants import (
     limit_factors,
@@ -24,6 +25,7 @@ from identkit.methods.cusum_run_length import (
 )
 from identkit.methods.ewma_chart import ewma, ewma_deviation
 from identkit.methods.ewma_run_length import ewma_limit, ewma_run_length
+from identkit.methods.family_run_length import ChartFamily, family_limits
 from identkit.methods.hotelling_chart import (
     baseline_limit,
     future_limit,
@@ -32,11 +34,13 @@ from identkit.methods.hotelling_chart import (
     known_covariance_run_length,
 )
 from identkit.methods.lag_one_autocorrelation import lag_one_autocorrelation
+from identkit.methods.multivariate_ewma_chart import multivariate_ewma
 from identkit.methods.multivariate_ewma_run_length import (
     multivariate_ewma_limit,
     multivariate_ewma_run_length,
 )
-from identkit.methods.recursive_residuals import recursive_scores
+from identkit.methods.recursive_residuals import joint_scores, recursive_scores
+from identkit.methods.running_group_mean import running_group_scores
 from identkit.methods.shewhart_individuals import individuals_limit, individuals_run_length
 
 pytestmark = pytest.mark.outside
@@ -264,3 +268,47 @@ def test_recursive_residuals_are_those_of_an_independent_library(nile):
     ratio = np.sign(scores) * stats.t.isf(stats.norm.sf(np.abs(scores)), freedom)
     squares = np.cumsum(fit.resid_recursive[2:] ** 2)[first - 3 : -1]
     np.testing.assert_allclose(ratio * np.sqrt(squares / freedom), expected, rtol=1e-6)
+
+
+def test_run_length_of_modal_series_with_measured_correlation(small_results):
+    """Simulated units with the correlation measured in a small invented campaign.
+
+    Charts as in production: each unit judged by those before it. The stated run length is a lower
+    bound (Royen 2014), so the share of histories with a false alarm must not exceed that of
+    independent charts.
+    """
+    population = load(small_results / "population.nc")
+    effects = population["effect"].values.astype(str)
+    chosen = np.array([name.endswith("modal_frequency") for name in effects])
+    correlation = population["unit_effect_correlation"].values[np.ix_(chosen, chosen)]
+    assert np.abs(correlation - np.eye(len(correlation))).max() > 0.02
+    family = ChartFamily(len(correlation), len(correlation))
+    limits = family_limits(family, 60.0)
+    first, units, repeats = 14, 44, 40
+    generator = np.random.default_rng(11)
+    root = np.linalg.cholesky(correlation)
+    alarms = sum(
+        _false_alarm(generator.standard_normal((units, len(root))) @ root.T, first, family, limits)
+        for _ in range(repeats)
+    )
+    allowed = 1.0 - np.exp(-(units - first) / 60.0)
+    assert stats.binomtest(alarms, repeats, allowed, alternative="greater").pvalue > 0.01
+    assert alarms > 0
+
+
+def _false_alarm(values, first, family, limits):
+    count, series = values.shape
+    baseline, everyone = np.arange(count) < first, np.ones(count, dtype=bool)
+    lots = np.arange(count) // 6
+    for k in range(series):
+        ones = np.ones(count)
+        scores = recursive_scores(values[:, k], ones[:, None], ones, baseline, everyone)
+        moving = ewma(scores, family.ewma_weight) / ewma_deviation(family.ewma_weight)
+        group = running_group_scores(values[:, k], ones, lots, everyone, ~baseline)
+        largest = np.fmax(np.abs(scores), np.abs(group))
+        if np.nanmax(largest) > limits.individuals or np.abs(moving).max() > limits.ewma:
+            return True
+        if np.max(cusum(scores, family.cusum_reference)) > limits.cusum:
+            return True
+    joint = joint_scores(values, np.ones_like(values), baseline, everyone)
+    return bool(multivariate_ewma(joint, family.joint_weight).max() > limits.joint)
