@@ -8,7 +8,6 @@ import numpy as np
 from identkit.command_answers import Answer, refuse_wrong_picture, save_picture
 from identkit.controller import read_controller
 from identkit.controller_check import ControllerCheck, check_controller, size_at
-from identkit.errors import InputError, Problem
 from identkit.methods.feedback import bent
 from identkit.methods.modal_model import TWO_PI
 from identkit.methods.resonance_grid import resonance_grid
@@ -48,7 +47,9 @@ def check_files(place: Path, controller: Path, figure: Path | None = None) -> An
     plant_set, read = load_set(place), read_controller(controller)
     check = check_controller(plant_set, read)
     text = describe_check(plant_set, check, f"{controller} on {place}")
-    if figure is not None:
+    if figure is not None and check.robust is None:
+        text += "\nNo figure: the closed loop of an unstable nominal loop has no response to draw."
+    elif figure is not None:
         from identkit.figures.robust_stability import draw_loop_under_weight
 
         save_picture(draw_loop_under_weight(pick_loop(plant_set, check)), figure)
@@ -176,8 +177,7 @@ def pick_loop(plant_set: PlantSet, check: ControllerCheck) -> "LoopUnderWeight":
     """Return the curves of the picture over the band, and beyond where robustness is lost there."""
     from identkit.figures.robust_stability import LoopUnderWeight
 
-    if check.robust is None:
-        raise InputError(Problem("--figure", "an unstable nominal loop", "a stable one to draw"))
+    assert check.robust is not None
     around, known = Surroundings(plant_set), resonances(plant_set)
     low, high = around.band
     period = plant_set.time.period
