@@ -216,7 +216,9 @@ def _scanned(
     def worst(natural: float) -> tuple[float, float]:
         return _worst(natural, grid, weight, size, carried, condition)
 
-    if worst(np.inf)[0] < 1.0 and carried.integrators < 2:
+    # Beyond any finite crossover 1 - T is 1, however high: |W| has to end below 1 there.
+    ends_below = condition == "complementary" or weight[-1] < 1.0
+    if ends_below and worst(np.inf)[0] < 1.0 and carried.integrators < 2:
         return np.inf, np.nan
     decades = np.log10(grid[-1] / grid[0])
     trials = np.geomspace(grid[0], grid[-1], 2 + int(PER_DECADE * decades))

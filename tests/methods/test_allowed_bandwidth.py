@@ -95,3 +95,13 @@ def test_sensitivity_condition_is_met_with_equality():
 def test_limiting_frequency_is_infinite_below_one():
     values = limiting_frequency(np.array([1.0, 2.0]), np.array([0.9, np.sqrt(2.0)]))
     np.testing.assert_allclose(values, [np.inf, 2.0])
+
+
+def test_an_inverse_weight_that_ends_above_one_allows_no_loop():
+    """However high the crossover, 1 - T is 1 beyond it."""
+
+    def rising(f):
+        return 0.1 + 1.4 * f / np.hypot(f, 500.0)
+
+    found = allowed_bandwidth(rising, GRID, NOTHING, condition="sensitivity")
+    assert found.crossover == 0.0
