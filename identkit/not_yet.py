@@ -35,7 +35,7 @@ def _not_yet(settings: Settings) -> list[tuple[str, bool, str, str]]:
         _row("[responses] sample_period", responses.sample_period, 0.0),
         _row("[model] sharing", model.sharing, "auto", "none"),
         _row("[nominal] choice", nominal.choice, "centre", "tightest"),
-        _row("[bound] form", bound.form, *SCALAR_FORMS),
+        _row("[bound] form", bound.form, *SCALAR_FORMS, "auto"),
         _row("[bound] remove", list(bound.remove), []),
         _row("[bound] holds", bound.holds, "measured"),
         _row("[bound] factors", bound.factors, "auto"),

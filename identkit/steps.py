@@ -6,7 +6,7 @@ To add a stage: a function that takes `Work`, and its line in `STEPS`.
 import json
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
-from functools import cached_property
+from functools import cached_property, partial
 from typing import Any
 
 import xarray as xr
@@ -195,12 +195,13 @@ def _nominal(work: Work) -> None:
 
 def _bound(work: Work) -> None:
     from identkit.stages.bound import bound_spread
+    from identkit.stages.choose_form import AUTO, bound_in_cheapest_form
 
     options = work.settings.bound
-    bound = bound_spread(
+    in_form = partial(bound_spread, form=options.form)
+    bound = (bound_in_cheapest_form if options.form == AUTO else in_form)(
         work.dataset("modes.nc"),
         work.dataset("nominal.nc"),
-        form=options.form,
         order=options.order,
         profile=options.profile,
         cap=options.cap,

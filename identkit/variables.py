@@ -366,6 +366,11 @@ BOUND = (
         ("trial_floor_db", "number", "dB", "Proved lower bound of each."),
     ),
     *_along(
+        ("form_trial",),
+        ("form_trial_crossover?", "number", "Hz", "Crossover that the set of each form allows."),
+        ("form_trial_left_out?", "whole", "", "Plants that each form alone leaves out."),
+    ),
+    *_along(
         ("response",),
         ("reach", "number", "1", "Smallest factor of the set that holds the fitted plant."),
         ("reach_frequency", "number", "Hz", "Where it is set."),

@@ -199,7 +199,7 @@ def test_exclusions_take_names_and_labels_with_a_reason(written):
         "[responses]\nsample_period = 1e-4",
         "[model]\nsharing = 'unit'",
         "[bound]\nform = 'parametric'",
-        "[bound]\nform = 'auto'",
+        "[bound]\nform = 'mixed'",
         "[bound]\nremove = ['gain']",
         "[bound]\nholds = 'population'",
         "[bound]\nsplit = 'head'",

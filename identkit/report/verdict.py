@@ -65,14 +65,14 @@ def verdict(given: ReportInput) -> list[str]:
     given
         What the stages wrote; a stage that did not run adds no sentence.
     """
-    made = (_nominal, _weight, _setters, _limit_of_control, yardstick_sentence)
+    made = (_nominal, _form, _weight, _setters, _limit_of_control, yardstick_sentence)
     makers = (*_FOUND, *made, _marked_but_kept, _coverage, _envelope)
     return [sentence for make in makers if (sentence := make(given))]
 
 
 def short_verdict(given: ReportInput) -> list[str]:
     """Return the sentences of the verdict that a terminal shows; the page has them all."""
-    makers = (*_FOUND, _weight, _setters, yardstick_sentence, _coverage)
+    makers = (*_FOUND, _form, _weight, _setters, yardstick_sentence, _coverage)
     return [sentence for make in makers if (sentence := make(given))]
 
 
@@ -213,6 +213,10 @@ def _setters(given: ReportInput) -> str:
         f"The bound is set at {counted(places, 'frequency', 'frequencies')}, where a plant touches "
         f"the weight: {listed(shown, 3)}{' units' * (len(shown) > 3)}."
     )
+
+
+def _form(given: ReportInput) -> str:
+    return "" if given.bound is None else str(given.bound.attrs.get("form_rule", ""))
 
 
 def _limit_of_control(given: ReportInput) -> str:
