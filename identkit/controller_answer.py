@@ -7,7 +7,7 @@ import numpy as np
 
 from identkit.command_answers import Answer, refuse_wrong_picture, save_picture
 from identkit.controller import read_controller
-from identkit.controller_check import ControllerCheck, check_controller, size_at
+from identkit.controller_check import ControllerCheck, RobustStability, check_controller, size_at
 from identkit.methods.feedback import bent
 from identkit.methods.modal_model import TWO_PI
 from identkit.methods.resonance_grid import resonance_grid
@@ -122,9 +122,14 @@ def _robust(plant_set: PlantSet, check: ControllerCheck, known: Resonances) -> l
     lines = [
         f"Robust stability: {word}; largest |W {name}| {found.peak:.4g} at {where}",
         f"  (all frequencies, by eigenvalues, relative tolerance {found.tolerance:.0e}; "
-        f"below 1 is necessary and sufficient)",
+        f"below 1 is necessary and sufficient; the set may be scaled by up to {_largest(found)})",
     ]
     return lines + [_lost(plant_set, pair, known) for pair in found.lost]
+
+
+def _largest(found: RobustStability) -> str:
+    """Return the largest scaling of the set that the loop still stabilises."""
+    return f"{1.0 / found.peak:.4g}" if found.peak > 0.0 else "any factor"
 
 
 def _lost(plant_set: PlantSet, pair: tuple[float, float], known: Resonances) -> str:
