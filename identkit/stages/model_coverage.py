@@ -221,9 +221,12 @@ def _described(model: PopulationModel, modes: xr.Dataset) -> Check:
     names = modes["response"].values.astype(str)
     rows = np.isin(names, model.responses)
     outcome = modes["mode_outcome"].transpose("response", "mode").values[rows]
-    odd = np.asarray(np.isin(outcome, [int(code) for code in _ODD]).any(axis=1), dtype=bool)
-    units = _units_of(odd, model)
-    told = f"{units} of {len(model.units)} units show a mode that is shifted or extra"
+    odd = np.isin(outcome, [int(code) for code in _ODD])
+    # Rates of residues have no law: virtual plants would be without them.
+    rate = modes["residue_rate"].transpose("response", "mode", "output", "input").values[rows]
+    odd = odd | np.any(np.nan_to_num(rate) != 0.0, axis=(2, 3))
+    units = _units_of(np.asarray(odd.any(axis=1), dtype=bool), model)
+    told = f"{units} of {len(model.units)} units show a mode that is shifted, extra or not real"
     return Check("the population's modes are all there is", units == 0, told)
 
 

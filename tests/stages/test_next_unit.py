@@ -181,6 +181,19 @@ def test_lots_that_differ_void_the_model(campaign):
     assert not found.trusted
 
 
+def test_modes_without_a_law_void_the_model(campaign):
+    rate = campaign.modes["residue_rate"].copy()
+    assert model_statement(*described(campaign, campaign.modes)).checks[-1].passed
+    rate[3, 1] = 2.0
+    found = model_statement(*described(campaign, campaign.modes.assign(residue_rate=rate)))
+    assert not found.checks[-1].passed
+    assert "1 of 9 units" in found.checks[-1].finding
+
+
+def described(campaign, modes):
+    return campaign.plant_set, campaign.model, campaign.population, modes
+
+
 def test_a_study_gets_every_statement(campaign):
     unit = campaign.modes["unit"].values.astype(str)
     names = campaign.modes["response"].values.astype(str)
