@@ -390,6 +390,17 @@ BOUND = (
     ),
 )
 
+REPORT = _along(
+    ("part",),
+    ("part_kind", "text", "", "What is left out: a label, a mode's spread, or nothing."),
+    ("part_value", "text", "", "Which one."),
+    ("part_plants", "whole", "", "Plants that remain."),
+    ("allowed_crossover", "number", "Hz", "Crossover the remaining radius allows at most."),
+    ("limited_at", "number", "Hz", "Where it is limited."),
+    ("peak_radius_db", "number", "dB", "Largest required radius."),
+    ("mean_radius_db", "number", "dB", "Its mean over log frequency."),
+)
+
 VARIABLES: Mapping[str, tuple[Variable, ...]] = {
     "read": READ,
     "screen": SCREEN,
@@ -398,6 +409,7 @@ VARIABLES: Mapping[str, tuple[Variable, ...]] = {
     "population": POPULATION,
     "nominal": NOMINAL,
     "bound": BOUND,
+    "report": REPORT,
 }
 FILES = {
     "read": "responses.nc",
@@ -407,6 +419,7 @@ FILES = {
     "population": "population.nc",
     "nominal": "nominal.nc",
     "bound": "bound.nc",
+    "report": "price.nc",
 }
 
 

@@ -8,6 +8,7 @@ import pytest
 
 from identkit.controller import controller_from, read_controller
 from identkit.controller_check import check_controller
+from identkit.grids import load
 from identkit.methods.state_space import frequency_response
 from identkit.plant_set.files import load_set
 from identkit.set_price import price_of_set
@@ -121,3 +122,15 @@ def test_wrong_words_end_with_one_sentence(demo, command, words, said):
     assert done.returncode == 2
     assert said in done.stderr
     assert len(done.stderr.strip().splitlines()) == 1
+
+
+def test_the_price_stands_in_verdict_file_and_report(demo, command):
+    assert re.search(r"can reach .* crossover with this set", demo.printed)
+    table = load(demo.results / "price.nc")
+    assert (
+        float(table["allowed_crossover"][0])
+        >= price_of_set(load_set(demo.results / "set.json")).bandwidth.crossover
+    )
+    assert "What the set costs" in (demo.results / "report.html").read_text(encoding="utf-8")
+    shown = command("show", demo.results / "price.nc")
+    assert "Crossover the remaining radius allows at most" in shown.stdout
