@@ -6,6 +6,7 @@ import pytest
 
 from identkit.errors import InputError
 from identkit.grids import load
+from identkit.methods.beta_binomial import BetaShares
 from identkit.plant_set import fields as f
 from identkit.plant_set.claims import check_claims
 from identkit.plant_set.document import to_document
@@ -21,6 +22,7 @@ from identkit.stages.export import (
     write_certificate,
     write_set_files,
 )
+from identkit.stages.model_coverage import Check, ModelStatement
 
 
 @pytest.fixture(scope="module")
@@ -119,6 +121,19 @@ def test_covariances_come_along_in_the_order_of_the_fit(draft, stages):
         )
     )
     assert np.sqrt(plant.covariance.matrix[at, at]) == pytest.approx(own[column], rel=1e-9)
+
+
+@pytest.mark.parametrize("passed", [True, False])
+def test_the_set_carries_the_model_only_where_its_checks_pass(draft, audited, passed):
+    check = Check("unit effects are normal", passed, "chance 0.5")
+    model = ModelStatement(BetaShares(90.0, 10.0), 16, 2400, 12, (check,))
+    stated = finished_set(draft, audited, state_coverage(model=model)).certificate.coverage
+    if not passed:
+        assert stated is None
+        return
+    assert stated.units == 16
+    assert "virtual units" in stated.method
+    assert any("normal" in line for line in stated.assumptions)
 
 
 def test_a_passed_audit_writes_both_files(draft, audited, tmp_path):
