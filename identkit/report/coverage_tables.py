@@ -4,7 +4,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from identkit.report.contents import ReportInput
-from identkit.report.numbers import percent
+from identkit.report.numbers import number, percent
 from identkit.report.table import Table, table_of
 
 _STATEMENTS = {
@@ -50,6 +50,22 @@ def coverage_checks_table(given: ReportInput) -> Table | None:
         "tests in 5 % of campaigns."
     )
     return table_of("What the population model assumes", columns, rows, note)
+
+
+def unit_cost_table(given: ReportInput) -> Table | None:
+    """Return the units without which the set would be tighter, the dearest first."""
+    tried = given.coverage.get("leave_one_out") or {}
+    relief: dict[str, float] = tried.get("relief_db") or {}
+    rows = [
+        (unit, f"{relief[unit]:.2f} dB".replace("-", "−"), number(float(tried["reach"][unit])))
+        for unit in sorted(relief, key=lambda unit: -relief[unit])
+    ]
+    columns = (("unit", "text"), ("radius falls by", "number"), ("reach from the others", "number"))
+    note = (
+        "Required radius without the unit against the released one, mean over log frequency, the "
+        "nominal made without it where that was refitted; above 1 the others would not hold it."
+    )
+    return table_of("What each unit costs", columns, rows, note, 8)
 
 
 def _row(name: str, statement: Mapping[str, Any]) -> tuple[str, ...]:

@@ -153,6 +153,7 @@ def _all_tables(given: ReportInput) -> dict[str, Table]:
     found = {
         "claims": set_tables.claims_table(given),
         "coverage": coverage_tables.coverage_table(given),
+        "unit_costs": coverage_tables.unit_cost_table(given),
         "coverage_checks": coverage_tables.coverage_checks_table(given),
         "attribution": set_tables.attribution_table(given),
         "price": price_findings.price_table(given),

@@ -284,6 +284,7 @@ def _tried(left_out: LeaveOneOut) -> dict[str, object]:
         "sentence": f"Leaving {which} out in turn, {held} of {tried} would have been held "
         "(approximate: each time by another set).",
         "reach": dict(left_out.reach),
+        "relief_db": dict(left_out.relief_db),
     }
 
 

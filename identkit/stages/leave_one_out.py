@@ -10,14 +10,14 @@ and assessment of statistical predictions", Journal of the Royal Statistical Soc
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import xarray as xr
 
 from identkit.errors import InfeasibleError
 from identkit.forms.nominal_plant import NominalPlant
-from identkit.forms.radius_curve import RadiusCurve
+from identkit.forms.radius_curve import RadiusCurve, decibels
 from identkit.methods.arrays import FloatArray, IntArray
 from identkit.methods.magnitude_weight import MagnitudeWeight, fit_magnitude_weight
 from identkit.methods.modal_model import ModalParameters, modal_response
@@ -42,11 +42,15 @@ class LeaveOneOut:
         Units of the set; more than were tried where the campaign is large.
     nominal_refitted
         Whether the nominal was made without the unit, too.
+    relief_db
+        By how much the required radius falls without each unit, mean over log frequency, dB; below
+        zero where the nominal without the unit stands worse to the others.
     """
 
     reach: dict[str, float]
     units: int
     nominal_refitted: bool
+    relief_db: dict[str, float] = field(default_factory=dict)
 
 
 def leave_one_unit_out(
@@ -86,9 +90,14 @@ def leave_one_unit_out(
     groups = [[plants.parameters[place[i]] for i in used[unit_of == u]] for u in np.unique(unit_of)]
     frequency = np.asarray(bound["frequency"].values, dtype=float)
     own, others = _errors(frequency, groups, np.unique(unit_of), chosen, nominals)
-    reach = _reaches(bound, own, np.maximum(others, radius_floor))
-    names = {model.units[u]: float(value) for u, value in zip(chosen, reach, strict=True)}
-    return LeaveOneOut(names, len(groups), refit)
+    radius = np.maximum(others, radius_floor)
+    names = [model.units[u] for u in chosen]
+    return LeaveOneOut(
+        dict(zip(names, _reaches(bound, own, radius).tolist(), strict=True)),
+        len(groups),
+        refit,
+        dict(zip(names, _relief(bound, radius).tolist(), strict=True)),
+    )
 
 
 def _unit_of(model: PopulationModel, modes: xr.Dataset, used: IntArray) -> IntArray:
@@ -152,6 +161,14 @@ def _reaches(bound: xr.Dataset, own: FloatArray, radius: FloatArray) -> FloatArr
         magnitude = magnitude * max(1.0, float(np.max(needed / magnitude)))
         reach[row] = np.max(error / magnitude)
     return reach
+
+
+def _relief(bound: xr.Dataset, radius: FloatArray) -> FloatArray:
+    """Return the mean fall of the required radius over log frequency, dB, for each unit."""
+    log_frequency = np.log(bound["frequency"].values)
+    fall = decibels(bound["required_radius"].values / radius)
+    span = log_frequency[-1] - log_frequency[0]
+    return np.asarray(np.trapezoid(fall, log_frequency, axis=1) / span, dtype=float)
 
 
 def _fitted(

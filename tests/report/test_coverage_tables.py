@@ -3,7 +3,11 @@
 from dataclasses import replace
 
 from identkit.methods.beta_binomial import BetaShares
-from identkit.report.coverage_tables import coverage_checks_table, coverage_table
+from identkit.report.coverage_tables import (
+    coverage_checks_table,
+    coverage_table,
+    unit_cost_table,
+)
 from identkit.report.page import render
 from identkit.report.verdict import short_verdict
 from identkit.stages.coverage import state_coverage
@@ -39,8 +43,19 @@ def test_a_failed_check_is_shown_where_the_statement_stands(given):
     )
 
 
+def test_the_dearest_unit_comes_first(given):
+    tried = replace(TRIED, relief_db={"U01": 0.1, "U02": -0.02, "U03": 1.25})
+    table = unit_cost_table(replace(given, coverage=state_coverage(left_out=tried)))
+    assert table.rows == (
+        ("U03", "1.25 dB", "1.40"),
+        ("U01", "0.10 dB", "0.500"),
+        ("U02", "−0.02 dB", "0.900"),
+    )
+
+
 def test_nothing_stated_makes_no_table(given):
     assert coverage_table(given) is None
+    assert unit_cost_table(given) is None
     assert coverage_checks_table(given) is None
 
 
