@@ -250,7 +250,7 @@ def _claim(
             "nominal and weight were fixed without the held-out measurements",
             f"a {exchangeable} counts as held when all its measured responses are",
             "measured conditions only: the heads, temperatures and band of the certificate",
-            f"{exchangeable}s excluded by hand are no part of the population",
+            f"{exchangeable}s left out by screening or by hand are no part of the population",
         ],
         "sentence": sentence,
     }
