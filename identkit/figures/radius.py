@@ -233,7 +233,8 @@ def _radius(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
     axes.set_ylabel(clipped(picked.error, 40))
     curves = np.concatenate([picked.radius, picked.weight])
     ratio_axis(axes, bottom, 1.6 * float(np.nanmax(curves)))
-    axes.legend(loc="upper left", ncols=1)
+    rising = bool(picked.weight[-1] >= picked.weight[0])
+    axes.legend(loc="upper left" if rising else "upper right", ncols=1)
 
 
 def _touches(axes: Axes, picked: RadiusWeight, layout: Layout) -> None:
