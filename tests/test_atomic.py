@@ -11,13 +11,19 @@ def test_replaces_the_file(tmp_path):
     assert list(tmp_path.iterdir()) == [target]
 
 
+def half_written(target, error):
+    """Fail between the first and the last byte."""
+    with replacing(target) as temporary:
+        temporary.write_text("half")
+        raise error
+
+
 @pytest.mark.parametrize("error", [ValueError, KeyboardInterrupt])
 def test_an_interruption_leaves_the_old_file_and_no_other(tmp_path, error):
     target = tmp_path / "a.txt"
     write_text(target, "old")
-    with pytest.raises(error), replacing(target) as temporary:
-        temporary.write_text("half")
-        raise error
+    with pytest.raises(error):
+        half_written(target, error)
     assert target.read_text() == "old"
     assert list(tmp_path.iterdir()) == [target]
 
