@@ -6,6 +6,7 @@ runs on one thread everywhere, so results are the same bit for bit for any numbe
 
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from contextlib import AbstractContextManager
 from importlib import import_module
 from multiprocessing import get_context
 from typing import TypeVar
@@ -58,9 +59,8 @@ def _chunk_results(
     work: Callable[[Element], Result], parts: list[Sequence[Element]], jobs: int
 ) -> Iterator[tuple[int, list[Result]]]:
     if jobs <= 1:
-        _load_linear_algebra()
         for index, part in enumerate(parts):
-            with threadpool_limits(limits=1):
+            with one_thread():
                 result = _work_chunk(work, part)
             yield index, result
         return
@@ -94,13 +94,21 @@ def _work_chunk(work: Callable[[Element], Result], part: Sequence[Element]) -> l
     return [work(element) for element in part]
 
 
-def _one_thread() -> None:
-    """Hold linear algebra of this worker to one thread for as long as it lives."""
-    _load_linear_algebra()
-    threadpool_limits(limits=1)
+def one_thread() -> AbstractContextManager[object]:
+    """Hold linear algebra to one thread: small matrices, and cores that others use too.
 
-
-def _load_linear_algebra() -> None:
-    """Load what brings threads of its own; a library that is not loaded yet cannot be held."""
+    Returns
+    -------
+    context manager
+        Holds from the call on, and lets go at the end of the block.
+    """
+    # a library that is not loaded yet cannot be held: numpy and scipy each bring their own
     for library in ("numpy", "scipy.linalg"):
         import_module(library)
+    limits: AbstractContextManager[object] = threadpool_limits(limits=1)
+    return limits
+
+
+def _one_thread() -> None:
+    """Hold linear algebra of this worker to one thread for as long as it lives."""
+    one_thread()

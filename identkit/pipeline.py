@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from identkit.batch import one_thread
 from identkit.not_yet import refuse_unavailable
 from identkit.progress import Progress, silent
 from identkit.settings import load_settings
@@ -70,7 +71,7 @@ def run_study(
     refuse_unavailable(settings)
     found = find_measurements(settings)
     kept: dict[str, Any] = {}
-    with StudyFolder(settings) as folder:
+    with StudyFolder(settings) as folder, one_thread():
         if redo is not None:
             folder.forget({"estimate": "read"}.get(redo, redo))
         for step in _steps_until(until):

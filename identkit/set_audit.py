@@ -11,6 +11,7 @@ import xarray as xr
 from rich.console import Console
 from rich.table import Table
 
+from identkit.batch import one_thread
 from identkit.errors import InputError, Problem
 from identkit.grids import load
 from identkit.plant_set.files import load_set
@@ -60,7 +61,11 @@ def audit_files(place: Path, responses: Sequence[Path], study: Path | None = Non
     InputError
         If a file is missing or wrong.
     """
-    plant_set = load_set(place)
+    with one_thread():
+        return _judged(load_set(place), responses, study)
+
+
+def _judged(plant_set: PlantSet, responses: Sequence[Path], study: Path | None) -> SetAudit:
     folders = [path for path in responses if path.is_dir()]
     files = [path for path in responses if not path.is_dir()]
     tables = [_audit_folder(plant_set, folder) for folder in folders]
