@@ -130,13 +130,17 @@ def find_files(
     paths = [files] if isinstance(files, Path) else [Path(file) for file in files]
     if not paths:
         raise InputError(Problem("files", "an empty list", "at least one file"))
-    label = PathPattern(pattern).label if pattern else (lambda path: {})
+    known = PathPattern(pattern) if pattern else None
+    label = known.label if known else (lambda path: {})
+    named = [known.identity(path) if known else None for path in paths]
     resolved = [path.resolve() for path in paths]
     above = Path(os.path.commonpath([path.parent for path in resolved]))
     return CampaignFiles(
         tuple(
-            LabelledFile(path, without_suffix(whole.relative_to(above).as_posix()), label(path))
-            for path, whole in zip(paths, resolved, strict=True)
+            LabelledFile(
+                path, name or without_suffix(whole.relative_to(above).as_posix()), label(path)
+            )
+            for path, whole, name in zip(paths, resolved, named, strict=True)
         )
     )
 

@@ -157,6 +157,13 @@ class PathPattern:
         labels = self._match(names) if len(names) == len(self._components) else None
         return {} if labels is None else _checked_labels(labels, str(path))
 
+    def identity(self, path: Path) -> str | None:
+        """Return what a campaign calls a file given by hand; None if it does not fit."""
+        names = list(path.resolve().parts[-len(self._components) :])
+        if len(names) != len(self._components) or self._match(names) is None:
+            return None
+        return without_suffix(self._below_fixed(names), self.text)
+
     def _check(self) -> None:
         expected = 'fields such as {unit} or {temperature:g} in a path such as "bench/{unit}.csv"'
         if not self._components:
@@ -200,11 +207,7 @@ class PathPattern:
         strays: list[tuple[Path, Problem]],
         folder: Path,
     ) -> list[LabelledFile]:
-        fixed = next(
-            (k for k, part in enumerate(self._components) if not part.is_fixed),
-            len(self._components) - 1,
-        )
-        identities = _identities(["/".join(names[fixed:]) for _, names, _ in found], self.text)
+        identities = _identities([self._below_fixed(names) for _, names, _ in found], self.text)
         files = []
         for (path, _, labels), identity in zip(found, identities, strict=True):
             try:
@@ -213,6 +216,14 @@ class PathPattern:
             except InputError as error:
                 strays += [(path, problem) for problem in error.problems]
         return sorted(files, key=lambda file: natural_key(file.identity))
+
+    def _below_fixed(self, names: list[str]) -> str:
+        """Return the part of a path that varies over the campaign."""
+        fixed = next(
+            (k for k, part in enumerate(self._components) if not part.is_fixed),
+            len(self._components) - 1,
+        )
+        return "/".join(names[fixed:])
 
     def _stray(self, path: Path, folder: Path) -> Problem:
         expected = f'a name that fits the pattern "{self.text}"'
