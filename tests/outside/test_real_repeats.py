@@ -28,6 +28,9 @@ columns = { frequency = "Freq [GHz]" }
 [model]
 base = "none"
 residues = "general"
+
+[bound]
+radius_floor = 0.044   # repeats scatter by up to 4.38 %; the fits take that for noise
 """
 
 pytestmark = pytest.mark.outside
@@ -74,7 +77,6 @@ def test_exported_set_holds_the_repeats(tmp_path):
     radii = load_set(result.folder / "set.json").radii
     frequency, measured = sweeps()
     weight = np.interp(frequency, radii.frequency, radii.weight_magnitude)
-    # nine of the 201 points scatter more than the smallest radius ever bounded, 2 %
-    assert (spread(measured).max(axis=0) <= weight).sum() >= 192
+    assert np.all(spread(measured) <= weight)
     fits = load(result.folder / "fits.nc")
     assert (fits["delay"].values >= 0.0).all()
