@@ -10,6 +10,7 @@ from identkit.figures.style import frequency_label
 from identkit.grids import datasets
 from identkit.plant_set.fields import Excluded, PlantSetFields
 from identkit.report.contents import ReportInput
+from identkit.report.fit_findings import poor_fits_sentence, variance_sentence
 from identkit.report.form_words import limit_of_control, radius_is_relative
 from identkit.report.mode_findings import (
     label_spread_sentence,
@@ -262,6 +263,8 @@ def _ended(sentence: str) -> str:
 _FOUND = (
     _held,
     _rechecked,
+    poor_fits_sentence,
+    variance_sentence,
     modes_sentence,
     label_spread_sentence,
     lots_sentence,
