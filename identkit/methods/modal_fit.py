@@ -156,9 +156,7 @@ def _noise(solution: Solution) -> float:
 def _causal(solution: Solution, request: Request, turn: float) -> Solution:
     """Hold a delay that came out negative at zero: a plant does not answer before it is asked."""
     data = solution.problem.data
-    if not request.delay or solution.poles.delay + turn * data.reference >= 0.0:
-        return solution
-    if turn > 0.0:
+    if not request.delay or turn > 0.0 or solution.poles.delay >= 0.0:
         return solution
     shape = replace(solution.shape, delay=False)
     held = solve(ModalProblem(data, shape), replace(solution.poles, delay=0.0))

@@ -4,8 +4,8 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 import xarray as xr
-from threadpoolctl import threadpool_limits
 
+from identkit.batch import one_thread
 from identkit.errors import InputError, Problem
 from identkit.forms.bounding import BoundOptions, SpreadBound, bound_plants
 from identkit.forms.catalogue import form_named
@@ -98,7 +98,7 @@ def bound_spread(
     plants = _counted(known, frequency, common)
     options = BoundOptions(order, tuple(profile), tuple(cap), radius_floor, jobs)
     # Many small matrices: threads inside the linear algebra would only wait for each other.
-    with threadpool_limits(limits=1):
+    with one_thread():
         found = bound_plants(plants.parameters, common, frequency, options, plants.names)
     return xr.merge(
         [

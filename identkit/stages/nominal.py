@@ -4,8 +4,8 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 import xarray as xr
-from threadpoolctl import threadpool_limits
 
+from identkit.batch import one_thread
 from identkit.errors import InputError, Problem
 from identkit.forms.multiplicative import accepts, relative_errors
 from identkit.forms.nominal_plant import NominalPlant
@@ -95,7 +95,7 @@ def choose_nominal(
     low, high = _band(band, lines)
     nominal = centre = _rational(population_centre(population), high, delay_tolerance)
     # Many small matrices: threads inside the linear algebra would only wait for each other.
-    with threadpool_limits(limits=1):
+    with one_thread():
         grid = _grid(plants, [centre], (low, high), lines)
         if choice == "tightest":
             scale = _residue_scale(modes, population, plants)
